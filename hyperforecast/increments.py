@@ -1,0 +1,250 @@
+"""Labelled feature vectors that arrive at a boundary, checked on arrival.
+
+Files: .npz with the arrays X and y, a pair NAME.npy (features, memory-mapped)
+and NAME.labels.npy, .csv with a header line and a column named label, and
+.parquet with the same (needs pyarrow).
+"""
+
+import csv
+import io
+import zipfile
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+
+from hyperforecast.checks import InputError
+from hyperforecast.storage import read_array_header
+
+LABEL_COLUMN = "label"
+LARGEST_TEXT_FILE = 2**31
+CHUNK_ROWS = 16_384
+
+
+@dataclass(frozen=True)
+class Increment:
+    """Rows that arrive together.
+
+    Attributes
+    ----------
+    X : ndarray of shape (n, d), float32
+        Features.
+    y : ndarray of shape (n,), int64 or text
+        Labels.
+    """
+
+    X: np.ndarray
+    y: np.ndarray
+
+    def __len__(self):
+        return len(self.y)
+
+    @property
+    def n_features(self):
+        """Number of features d."""
+        return self.X.shape[1]
+
+
+def check_features(X, *, name="X", n_features=None):
+    """Return features as a finite float32 array (n, d), a memory map as it is; or raise `InputError`.
+
+    Parameters
+    ----------
+    X : array-like of shape (n, d)
+    name : str
+        What errors call it.
+    n_features : int, optional
+        The feature count it must have.
+    """
+    try:
+        X = X if isinstance(X, np.ndarray) else np.asarray(X)
+    except ValueError:
+        raise InputError(name, "must be a table of numbers, every row of the same length", "ragged rows") from None
+    if X.dtype.kind == "O":
+        try:
+            X = X.astype(np.float64)
+        except (TypeError, ValueError):
+            raise InputError(name, "must hold numbers only, every row of the same length", _first_words(X)) from None
+    if X.dtype.kind not in "fiub":
+        raise InputError(name, "must hold real numbers", f"values of type {X.dtype}")
+    if X.ndim != 2:
+        raise InputError(name, "must have two dimensions, rows and features", f"{X.ndim}, shape {X.shape}")
+    if 0 in X.shape:
+        raise InputError(name, "must hold at least one row and one feature", f"shape {X.shape}")
+    if n_features is not None and X.shape[1] != n_features:
+        raise InputError(name, f"must have {n_features} features as before", f"{X.shape[1]}")
+    for start in range(0, len(X), CHUNK_ROWS):
+        with np.errstate(over="ignore"):
+            chunk = X[start:start + CHUNK_ROWS].astype(np.float32, copy=False)
+        finite = np.isfinite(chunk)
+        if not finite.all():
+            row, column = np.argwhere(~finite)[0]
+            raise InputError(name, "must hold finite numbers that fit float32",
+                             f"{X[start + row, column]} in row {start + row}, column {column}",
+                             "drop or mend such rows")
+    return X if isinstance(X, np.memmap) else X.astype(np.float32, copy=False)
+
+
+def check_labels(y, n_rows, *, name="y"):
+    """Return labels as an int64 or text array of shape (n_rows,), or raise `InputError`."""
+    try:
+        y = np.asarray(y)
+    except ValueError:
+        raise InputError(name, "must be one label for each row", "ragged values") from None
+    if y.ndim != 1 or len(y) != n_rows:
+        raise InputError(name, f"must be one label for each of the {n_rows} rows", f"shape {y.shape}")
+    if y.dtype.kind == "O":
+        if all(isinstance(label, str) for label in y):
+            y = y.astype(str)
+        elif all(isinstance(label, (int, np.integer)) and not isinstance(label, bool) for label in y):
+            y = y.astype(np.int64)
+        else:
+            raise InputError(name, "must hold text only or whole numbers only", _first_words(y))
+    if y.dtype.kind == "f":
+        if not np.isfinite(y).all() or (y != np.round(y)).any():
+            raise InputError(name, "must hold text or whole numbers", _first_words(y[(y != np.round(y)) | ~np.isfinite(y)]))
+        y = y.astype(np.int64)
+    if y.dtype.kind in "iub":
+        return y.astype(np.int64)
+    if y.dtype.kind != "U":
+        raise InputError(name, "must hold text or whole numbers", f"values of type {y.dtype}")
+    if (np.char.str_len(np.char.strip(y)) == 0).any():
+        raise InputError(name, "must name a class in every row", f"an empty label in row {np.argmin(np.char.str_len(np.char.strip(y)))}")
+    return y
+
+
+def check_increment(X, y, *, n_features=None):
+    """Return an `Increment` of checked features and labels, or raise `InputError`."""
+    X = check_features(X, n_features=n_features)
+    return Increment(X, check_labels(y, len(X)))
+
+
+def read_increment(path, *, n_features=None):
+    """Return the `Increment` in a .npz, .npy, .csv or .parquet file, or raise `InputError`."""
+    path = Path(path)
+    readers = {".npz": _read_npz, ".npy": _read_npy_pair, ".csv": _read_csv, ".parquet": _read_parquet}
+    if path.suffix not in readers:
+        raise InputError(path, f"must end in one of {', '.join(readers)}", repr(path.suffix))
+    if not path.is_file():
+        raise InputError(path, "must be a file that exists", "nothing of that name")
+    try:
+        X, y = readers[path.suffix](path)
+        X = check_features(X, n_features=n_features)
+        return Increment(X, check_labels(y, len(X)))
+    except InputError as error:
+        if error.parameter in ("X", "y"):
+            raise InputError(f"{path} ({error.parameter})", error.rule, error.received, error.remedy) from None
+        raise
+    except OSError as error:
+        raise InputError(path, "must be a readable file", error.strerror or error) from None
+
+
+def _first_words(values):
+    flat = np.ravel(values)[:3]
+    return ", ".join(repr(value.item() if isinstance(value, np.generic) else value)[:40] for value in flat)
+
+
+def _read_npz(path):
+    try:
+        with zipfile.ZipFile(path) as archive:
+            arrays = {}
+            for name in ("X", "y"):
+                if f"{name}.npy" not in archive.namelist():
+                    raise InputError(path, "must hold the arrays X and y", ", ".join(archive.namelist()) or "none")
+                arrays[name] = _read_member(path, archive, f"{name}.npy")
+            return arrays["X"], arrays["y"]
+    except (zipfile.BadZipFile, zipfile.zlib.error, EOFError, NotImplementedError, RuntimeError, ValueError) as error:
+        if isinstance(error, InputError):
+            raise
+        raise InputError(path, "must be a complete .npz file", error) from None
+
+
+def _read_member(path, archive, member):
+    name = f"{path} ({member})"
+    with archive.open(member) as stream:
+        # The header is read through a small window: a hostile one cannot make us allocate.
+        head = io.BytesIO(stream.read(12_000))
+        shape, _, dtype = read_array_header(name, head)
+    expected = int(np.prod(shape, dtype=object)) * dtype.itemsize
+    present = archive.getinfo(member).file_size - head.tell()
+    if expected != present:
+        raise InputError(name, "must hold as many bytes as its header says", f"{present}, not {expected}")
+    # Deflate cannot expand more than about 1032 times; far more is a lie in the directory.
+    if present > 1100 * max(archive.getinfo(member).compress_size, 1):
+        raise InputError(name, "must not expand more than deflate can", f"{present} bytes")
+    with archive.open(member) as stream:
+        return np.lib.format.read_array(stream, allow_pickle=False)
+
+
+def _map_npy(path):
+    with open(path, "rb") as stream:
+        shape, _, dtype = read_array_header(path, stream)
+        expected = stream.tell() + int(np.prod(shape, dtype=object)) * dtype.itemsize
+    if path.stat().st_size != expected:
+        raise InputError(path, "must hold as many bytes as its header says", f"{path.stat().st_size}, not {expected}")
+    return np.load(path, mmap_mode="r", allow_pickle=False)
+
+
+def _read_npy_pair(path):
+    labels = path.with_suffix(".labels.npy")
+    if not labels.is_file():
+        raise InputError(path, f"must have its labels beside it in {labels.name}", "no such file")
+    return _map_npy(path), np.array(_map_npy(labels))
+
+
+def _read_csv(path):
+    if path.stat().st_size > LARGEST_TEXT_FILE:
+        raise InputError(path, f"must hold at most {LARGEST_TEXT_FILE} bytes", path.stat().st_size, "use .npy")
+    features, labels = [], []
+    try:
+        with open(path, newline="", encoding="utf-8-sig") as stream:
+            rows = csv.reader(stream)
+            header = next(rows, [])
+            if header.count(LABEL_COLUMN) != 1:
+                raise InputError(path, f"must have one column named {LABEL_COLUMN} in its header line",
+                                 ", ".join(header)[:80] or "no header")
+            at = header.index(LABEL_COLUMN)
+            for row in rows:
+                if len(row) != len(header):
+                    raise InputError(path, f"must have {len(header)} values in every line",
+                                     f"{len(row)} in line {rows.line_num}")
+                try:
+                    features.append(np.array(row[:at] + row[at + 1:], dtype=np.float64))
+                except ValueError:
+                    raise InputError(path, f"must hold numbers in every column but {LABEL_COLUMN}",
+                                     f"{', '.join(row)[:80]} in line {rows.line_num}") from None
+                labels.append(row[at])
+    except (UnicodeDecodeError, csv.Error) as error:
+        raise InputError(path, "must be a .csv file in UTF-8", error) from None
+    if not labels:
+        raise InputError(path, "must hold at least one row", "a header alone")
+    return np.array(features), whole_or_text(np.array(labels))
+
+
+def whole_or_text(labels):
+    """Return text labels as whole numbers if every one of them is written as one."""
+    try:
+        numbers = labels.astype(np.int64)
+    except (ValueError, OverflowError):
+        return labels
+    return numbers if (numbers.astype(str) == labels).all() else labels
+
+
+def _read_parquet(path):
+    try:
+        import pyarrow.parquet
+    except ImportError:
+        raise InputError(path, "needs pyarrow to be read", "no pyarrow here",
+                         "install hyperforecast[workshop], or convert to .npz") from None
+    try:
+        table = pyarrow.parquet.read_table(path)
+    except (pyarrow.ArrowInvalid, OSError) as error:
+        raise InputError(path, "must be a .parquet file", error) from None
+    if table.column_names.count(LABEL_COLUMN) != 1:
+        raise InputError(path, f"must have one column named {LABEL_COLUMN}", ", ".join(table.column_names)[:80])
+    labels = np.array(table.column(LABEL_COLUMN).to_pylist(), dtype=object)
+    columns = [name for name in table.column_names if name != LABEL_COLUMN]
+    if not columns:
+        raise InputError(path, "must hold at least one feature column", "none")
+    features = np.array([table.column(name).to_pylist() for name in columns], dtype=object).T
+    return features, labels

@@ -1,0 +1,171 @@
+"""What the user fixes (`Plan`), what is chosen at each boundary (`Settings`), and their ranges.
+
+Scale-free coordinates express settings relative to a boundary's own scales
+(curvature, steps, rows), which carries over between data sets better than raw values.
+"""
+
+import re
+from dataclasses import asdict, dataclass
+
+import numpy as np
+
+from hyperforecast.checks import InputError, check_choice, check_number, check_whole
+
+METHODS = ("ewc", "lwf", "icarl", "wa")
+REHEARSAL_METHODS = ("icarl", "wa")
+
+# Ranges of every policy, search and design; all are covered on a logarithmic scale.
+LEARNING_RATES = (1e-5, 1.0)
+REGULARIZATIONS = {"ewc": (1e-2, 1e6), "lwf": (1e-3, 1e3), "icarl": (1e-3, 1e3), "wa": (1e-3, 1e3)}
+KEPT_PER_CLASS = (1, 80)
+
+
+@dataclass(frozen=True)
+class Settings:
+    """The settings of one boundary.
+
+    Parameters
+    ----------
+    learning_rate : float in [1e-5, 1]
+        Of stochastic gradient descent with momentum 0.9, on standardized features.
+    regularization : float
+        EWC: factor lambda of the Fisher penalty, in [1e-2, 1e6]. LwF, iCaRL, WA: weight of the
+        distillation loss beside the cross-entropy, in [1e-3, 1e3].
+    kept_per_class : int in [1, 80], or None
+        Exemplars that every class holds at most from this boundary on; None for the methods that train
+        without exemplars (EWC, LwF).
+    """
+
+    learning_rate: float
+    regularization: float
+    kept_per_class: int | None = None
+
+    def checked(self, method):
+        """Return these settings if they are valid for `method`, else raise `InputError`."""
+        check_number("learning_rate", self.learning_rate, low=LEARNING_RATES[0], high=LEARNING_RATES[1])
+        low, high = REGULARIZATIONS[method]
+        check_number("regularization", self.regularization, low=low, high=high)
+        if method in REHEARSAL_METHODS:
+            check_whole("kept_per_class", self.kept_per_class, low=KEPT_PER_CLASS[0], high=KEPT_PER_CLASS[1])
+        elif self.kept_per_class is not None:
+            raise InputError("kept_per_class", f"must be None: {method} trains without exemplars", self.kept_per_class)
+        return self
+
+    def as_dict(self):
+        """Return the settings as a JSON-able dict, without the ones that do not apply."""
+        return {name: value for name, value in asdict(self).items() if value is not None}
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What the user fixes for all boundaries.
+
+    Parameters
+    ----------
+    method : {"ewc", "lwf", "icarl", "wa"}
+    hidden_units : int
+        Width of the head's hidden layer; 0 is a linear head.
+    passes : int
+        Passes over the training rows at each boundary.
+    batch_size : int
+    memory_limit : int or str
+        Most exemplars held in all, check rows included; or bytes, as "2 MB" (10^6) or "512 KiB" (2^10).
+    """
+
+    method: str = "wa"
+    hidden_units: int = 64
+    passes: int = 10
+    batch_size: int = 32
+    memory_limit: int | str = 2000
+
+    def checked(self):
+        """Return this plan if it is valid, else raise `InputError`."""
+        check_choice("method", self.method, METHODS)
+        check_whole("hidden_units", self.hidden_units, low=0, high=4096)
+        check_whole("passes", self.passes, low=1, high=10_000)
+        check_whole("batch_size", self.batch_size, low=1, high=65_536)
+        if isinstance(self.memory_limit, str):
+            parse_bytes("memory_limit", self.memory_limit)
+        else:
+            check_whole("memory_limit", self.memory_limit, low=1)
+        return self
+
+    def memory_rows(self, n_features):
+        """Return how many rows of `n_features` float32 numbers (and a label of 8 bytes) the memory limit holds."""
+        if isinstance(self.memory_limit, str):
+            return parse_bytes("memory_limit", self.memory_limit) // (4 * n_features + 8)
+        return self.memory_limit
+
+    def rows_per_class(self, n_features, n_classes):
+        """Return the rows that each of `n_classes` may hold; `InputError` if it is less than one."""
+        rows = self.memory_rows(n_features) // n_classes
+        if rows < 1:
+            raise InputError("memory_limit", f"must hold at least one exemplar for each of {n_classes} classes",
+                             repr(self.memory_limit), "raise it")
+        return rows
+
+    @property
+    def rehearses(self):
+        """Whether the method trains on exemplars."""
+        return self.method in REHEARSAL_METHODS
+
+    def as_dict(self):
+        """Return the plan as a JSON-able dict."""
+        return asdict(self)
+
+
+UNITS = {"b": 1, "kb": 10**3, "mb": 10**6, "gb": 10**9, "kib": 2**10, "mib": 2**20, "gib": 2**30}
+
+
+def parse_bytes(name, text):
+    """Return the bytes that a text such as "2 MB" or "512 KiB" names; `name` is what errors call it."""
+    match = re.fullmatch(r"\s*(\d+(?:\.\d+)?)\s*([A-Za-z]+)\s*", text)
+    if not match or match[2].lower() not in UNITS or float(match[1]) * UNITS[match[2].lower()] < 1:
+        raise InputError(name, 'must be a number of exemplars, or of bytes such as "2 MB" or "512 KiB"', repr(text))
+    return int(float(match[1]) * UNITS[match[2].lower()])
+
+
+class SettingsBox:
+    """The box of settings open at one boundary, mapped to the unit cube on a logarithmic scale.
+
+    Parameters
+    ----------
+    method : str
+    most_kept : int
+        Exemplars per class that the memory allows at this boundary; caps `kept_per_class`.
+    """
+
+    def __init__(self, method, most_kept=KEPT_PER_CLASS[1]):
+        self.method = method
+        self.names = ("learning_rate", "regularization")
+        bounds = [LEARNING_RATES, REGULARIZATIONS[method]]
+        if method in REHEARSAL_METHODS:
+            self.names += ("kept_per_class",)
+            # The half steps at both ends give the extreme whole numbers their fair share.
+            bounds.append((KEPT_PER_CLASS[0] - 0.5, min(most_kept, KEPT_PER_CLASS[1]) + 0.5))
+        self._low, high = np.log(np.array(bounds, dtype=np.float64).T)
+        self._span = high - self._low
+
+    @property
+    def n_dimensions(self):
+        """Number of settings that are open."""
+        return len(self.names)
+
+    def from_unit(self, points):
+        """Return the list of `Settings` at the unit-cube `points` of shape (n, n_dimensions)."""
+        values = np.exp(self._low + np.clip(points, 0.0, 1.0) * self._span)
+        highest = np.exp(self._low + self._span)
+        settings = []
+        for row in values:
+            # Twelve digits keep the value inside its range and its JSON short.
+            numbers = [float(f"{value:.6g}") for value in row[:2]]
+            kept = None
+            if len(row) == 3:
+                kept = int(np.clip(round(row[2]), KEPT_PER_CLASS[0], round(highest[2] - 0.5)))
+            settings.append(Settings(*numbers, kept))
+        return settings
+
+    def to_unit(self, settings):
+        """Return the (n, n_dimensions) unit-cube points of a list of `Settings`, clipped to the box."""
+        values = np.array([[getattr(one, name) for name in self.names] for one in settings], dtype=np.float64)
+        return np.clip((np.log(values.reshape(-1, len(self.names))) - self._low) / self._span, 0.0, 1.0)

@@ -1,0 +1,254 @@
+"""Arrays and facts on disk: plain, checksummed, written in one rename.
+
+A *bundle* is a manifest (JSON) and named arrays (.npy, never pickled). It lies
+in a folder, readable with any tool, or in a single uncompressed or deflated
+zip file. The manifest names kind, version, and for each array its SHA-256,
+dtype and shape, so that damage is found before anything is believed and no
+more memory is spent than the manifest and the file's size allow.
+"""
+
+import hashlib
+import io
+import json
+import os
+import re
+import uuid
+import zipfile
+from dataclasses import dataclass, field
+from pathlib import Path
+
+import numpy as np
+
+from hyperforecast.checks import InputError
+
+MANIFEST = "manifest.json"
+LARGEST_MANIFEST = 16 * 2**20
+LARGEST_ARRAY = 2**31
+ARRAY_NAME = re.compile(r"[A-Za-z0-9_]{1,80}")
+
+
+@dataclass
+class Bundle:
+    """Named arrays with facts about them.
+
+    Attributes
+    ----------
+    kind : str
+        What the bundle is, e.g. "forecaster".
+    version : int
+        Version of that kind's layout.
+    facts : dict
+        JSON-able facts.
+    arrays : dict of str to ndarray
+        Numeric, boolean or fixed-width text arrays.
+    """
+
+    kind: str
+    version: int
+    facts: dict = field(default_factory=dict)
+    arrays: dict = field(default_factory=dict)
+
+
+def write_atomically(path, data):
+    """Write bytes to `path` by way of a temporary name, fsync and one rename."""
+    path = Path(path)
+    partial = path.with_name(f".{path.name}.{uuid.uuid4().hex[:8]}.partial")
+    try:
+        with open(partial, "wb") as file:
+            file.write(data)
+            file.flush()
+            os.fsync(file.fileno())
+        os.replace(partial, path)
+    except BaseException:
+        partial.unlink(missing_ok=True)
+        raise
+    sync_folder(path.parent)
+
+
+def sync_folder(folder):
+    """Ask the file system to keep the names in `folder`, where it can."""
+    handle = os.open(folder, os.O_RDONLY)
+    try:
+        os.fsync(handle)
+    finally:
+        os.close(handle)
+
+
+def read_json(path, *, largest=LARGEST_MANIFEST):
+    """Return the JSON document in `path`; `InputError` if it is missing, too large or not JSON."""
+    return parse_json(path, read_bytes(path, largest=largest))
+
+
+def read_bytes(path, *, largest):
+    """Return the bytes of the file `path`; `InputError` if missing, unreadable or above `largest` bytes."""
+    path = Path(path)
+    try:
+        size = path.stat().st_size
+        if size > largest:
+            raise InputError(path, f"must hold at most {largest} bytes", f"{size} bytes")
+        return path.read_bytes()
+    except OSError as error:
+        raise InputError(path, "must be a readable file", error.strerror or error) from None
+
+
+def parse_json(name, data):
+    """Parse JSON bytes strictly (no NaN or Infinity); `name` is what errors call them."""
+    def refuse(word):
+        raise ValueError(f"the constant {word}")
+
+    try:
+        return json.loads(data.decode("utf-8"), parse_constant=refuse)
+    except (ValueError, RecursionError) as error:
+        raise InputError(name, "must hold a JSON document", error) from None
+
+
+def dump_json(document):
+    """Return `document` as canonical JSON bytes: sorted keys, no NaN."""
+    return json.dumps(document, sort_keys=True, indent=1, allow_nan=False, ensure_ascii=False).encode() + b"\n"
+
+
+def checksum(data):
+    """Return the SHA-256 of bytes, in hexadecimal."""
+    return hashlib.sha256(data).hexdigest()
+
+
+def array_bytes(array):
+    """Return an array in .npy format (version 1.0 header, C order)."""
+    stream = io.BytesIO()
+    np.lib.format.write_array(stream, np.ascontiguousarray(array), allow_pickle=False)
+    return stream.getvalue()
+
+
+def parse_array(name, data):
+    """Return the array in .npy bytes; object arrays and sizes that do not match are refused."""
+    stream = io.BytesIO(data)
+    shape, _, dtype = read_array_header(name, stream)
+    expected = int(np.prod(shape, dtype=object)) * dtype.itemsize
+    if expected != len(data) - stream.tell():
+        raise InputError(name, "must hold as many bytes as its header says", f"{len(data) - stream.tell()}, not {expected}")
+    stream.seek(0)
+    return np.lib.format.read_array(stream, allow_pickle=False)
+
+
+def read_array_header(name, stream):
+    """Return (shape, fortran_order, dtype) of a .npy stream, which is left at the first data byte."""
+    try:
+        version = np.lib.format.read_magic(stream)
+        read = {(1, 0): np.lib.format.read_array_header_1_0, (2, 0): np.lib.format.read_array_header_2_0}[version]
+        shape, fortran, dtype = read(stream, max_header_size=10_000)
+    except (ValueError, KeyError, TypeError, SyntaxError, EOFError, RecursionError, MemoryError) as error:
+        raise InputError(name, "must be an array in .npy format", error) from None
+    if dtype.hasobject or dtype.fields is not None or any(side < 0 for side in shape):
+        raise InputError(name, "must hold numbers or text, not Python objects", dtype)
+    return shape, fortran, dtype
+
+
+def _manifest(bundle, encoded):
+    listed = {
+        name: {"sha256": checksum(data), "dtype": bundle.arrays[name].dtype.str, "shape": list(bundle.arrays[name].shape)}
+        for name, data in encoded.items()
+    }
+    body = {"kind": bundle.kind, "version": bundle.version, "facts": bundle.facts, "arrays": listed}
+    return dump_json({**body, "sha256": checksum(dump_json(body))})
+
+
+def _encode(bundle):
+    for name in bundle.arrays:
+        if not ARRAY_NAME.fullmatch(name):
+            raise InputError("array name", "must be letters, digits and underscores", repr(name))
+    encoded = {name: array_bytes(array) for name, array in sorted(bundle.arrays.items())}
+    return _manifest(bundle, encoded), encoded
+
+
+def bundle_checksum(bundle):
+    """Return the SHA-256 that names this bundle's exact content."""
+    return json.loads(_encode(bundle)[0])["sha256"]
+
+
+def write_bundle_file(path, bundle):
+    """Write a bundle as one deflated zip file, the same bytes for the same content; return its checksum."""
+    manifest, encoded = _encode(bundle)
+    stream = io.BytesIO()
+    with zipfile.ZipFile(stream, "w", zipfile.ZIP_DEFLATED, compresslevel=9) as archive:
+        for name, data in [(MANIFEST, manifest), *((f"{name}.npy", data) for name, data in encoded.items())]:
+            archive.writestr(zipfile.ZipInfo(name, (1980, 1, 1, 0, 0, 0)), data, zipfile.ZIP_DEFLATED, 9)
+    write_atomically(path, stream.getvalue())
+    return json.loads(manifest)["sha256"]
+
+
+def write_bundle_folder(folder, bundle):
+    """Write a bundle's files into an existing empty folder and fsync each; return its checksum."""
+    folder = Path(folder)
+    manifest, encoded = _encode(bundle)
+    for name, data in [*((f"{name}.npy", data) for name, data in encoded.items()), (MANIFEST, manifest)]:
+        with open(folder / name, "wb") as file:
+            file.write(data)
+            file.flush()
+            os.fsync(file.fileno())
+    sync_folder(folder)
+    return json.loads(manifest)["sha256"]
+
+
+def _check_manifest(path, data, kind, newest):
+    document = parse_json(path, data)
+    parts = {"kind", "version", "facts", "arrays", "sha256"}
+    if not isinstance(document, dict) or set(document) != parts or not isinstance(document["arrays"], dict):
+        raise InputError(path, f"must be a {kind} manifest", "other content")
+    if document["kind"] != kind:
+        raise InputError(path, f"must be a {kind}", repr(document["kind"]))
+    version = document["version"]
+    if not isinstance(version, int) or not 1 <= version <= newest:
+        raise InputError(path, f"must be of version 1 to {newest}", f"version {version!r}",
+                         "use the program's version that wrote it, or a newer one")
+    body = {key: document[key] for key in ("kind", "version", "facts", "arrays")}
+    if checksum(dump_json(body)) != document["sha256"]:
+        raise InputError(path, "must match its checksum", "altered content", "copy it again from the source")
+    return document
+
+
+def _read_bundle(path, kind, newest, read_member):
+    document = _check_manifest(path, read_member(MANIFEST, LARGEST_MANIFEST), kind, newest)
+    arrays = {}
+    for name, entry in document["arrays"].items():
+        size = int(np.prod(entry["shape"], dtype=object)) * np.dtype(entry["dtype"]).itemsize
+        data = read_member(f"{name}.npy", size + 10_000)
+        if checksum(data) != entry["sha256"]:
+            raise InputError(path, f"must match its checksums ({name}.npy)", "altered content",
+                             "copy it again from the source")
+        arrays[name] = parse_array(f"{path} ({name}.npy)", data)
+    return Bundle(document["kind"], document["version"], document["facts"], arrays), document["sha256"]
+
+
+def read_bundle_file(path, kind, *, newest):
+    """Return (bundle, checksum) from a file of `write_bundle_file`.
+
+    Raises
+    ------
+    InputError
+        If the file is missing, truncated, altered, of another kind or of a version above `newest`.
+    """
+    path = Path(path)
+    try:
+        with zipfile.ZipFile(io.BytesIO(read_bytes(path, largest=LARGEST_ARRAY))) as archive:
+            def read_member(name, largest):
+                if archive.getinfo(name).file_size > largest:
+                    raise InputError(path, f"must hold a {name} of at most {largest} bytes", "more")
+                return archive.read(name)
+
+            return _read_bundle(path, kind, newest, read_member)
+    except InputError:
+        raise
+    except (zipfile.BadZipFile, KeyError, OSError, ValueError, EOFError, NotImplementedError, RuntimeError,
+            TypeError, zipfile.zlib.error) as error:
+        raise InputError(path, f"must be a complete {kind} file", error, "copy it again from the source") from None
+
+
+def read_bundle_folder(folder, kind, *, newest):
+    """Return (bundle, checksum) from a folder of `write_bundle_folder`; errors as `read_bundle_file`."""
+    folder = Path(folder)
+    try:
+        return _read_bundle(folder, kind, newest, lambda name, largest: read_bytes(folder / name, largest=largest))
+    except InputError:
+        raise
+    except (KeyError, ValueError, TypeError, OverflowError) as error:
+        raise InputError(folder, f"must be a complete {kind}", error, "copy it again from the source") from None
