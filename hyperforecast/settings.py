@@ -169,3 +169,47 @@ class SettingsBox:
         """Return the (n, n_dimensions) unit-cube points of a list of `Settings`, clipped to the box."""
         values = np.array([[getattr(one, name) for name in self.names] for one in settings], dtype=np.float64)
         return np.clip((np.log(values.reshape(-1, len(self.names))) - self._low) / self._span, 0.0, 1.0)
+
+
+COORDINATES = (
+    "log_learning_rate", "log_regularization", "log_kept_per_class", "log_steps", "exemplar_share",
+    "step_on_new", "step_on_exemplars", "travel", "travel_on_new", "anchor_step", "anchor_balance", "anchor_travel",
+    "stability",
+)
+# The scales that `scale_free` reads from a boundary's descriptors.
+SCALES = ("curvature_new", "curvature_exemplars", "anchor_curvature", "rows", "classes_old", "passes", "batch_size")
+
+
+def scale_free(settings, scales):
+    """Return settings in coordinates relative to a boundary's own scales, shape (n, len(COORDINATES)).
+
+    Parameters
+    ----------
+    settings : list of Settings
+    scales : dict of str to float
+        The descriptors named in `SCALES`; NaN makes the coordinates that need it NaN.
+
+    Notes
+    -----
+    All but `exemplar_share` are decimal logarithms. With learning rate a, regularization r, curvature c of the new
+    rows' loss, curvature e of the exemplars' loss, curvature k of the anchor at regularization 1 and s steps:
+    `step_on_new` a c and `step_on_exemplars` a e (gradient descent with momentum b is stable below 2 (1 + b)),
+    `travel` a s, `travel_on_new` a s c, `anchor_step` a r k, `anchor_balance` r k / c, `anchor_travel` a s r k,
+    `stability` a (c + r k). `exemplar_share` is the share of exemplars among the training rows.
+    """
+    rate = np.array([one.learning_rate for one in settings], dtype=np.float64)
+    strength = np.array([one.regularization for one in settings], dtype=np.float64)
+    kept = np.array([one.kept_per_class or 0 for one in settings], dtype=np.float64)
+    new, exemplars, anchor = (scales[name] for name in ("curvature_new", "curvature_exemplars", "anchor_curvature"))
+    old_rows = kept * scales["classes_old"]
+    rows = scales["rows"] + old_rows
+    steps = scales["passes"] * np.ceil(rows / scales["batch_size"])
+    with np.errstate(divide="ignore", invalid="ignore"):
+        logs = np.log10(np.stack([
+            rate, strength, kept, steps, np.ones_like(rate), rate * new, rate * exemplars, rate * steps,
+            rate * steps * new, rate * strength * anchor, strength * anchor / new, rate * steps * strength * anchor,
+            rate * (new + strength * anchor),
+        ], axis=1))
+    logs[:, COORDINATES.index("exemplar_share")] = old_rows / rows
+    logs[~np.isfinite(logs)] = np.nan
+    return logs

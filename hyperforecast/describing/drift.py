@@ -1,0 +1,107 @@
+"""Descriptors of how the increment lies to what was learned before."""
+
+import numpy as np
+
+from hyperforecast.describing.registry import descriptor
+from hyperforecast.describing.view import squared_distances
+from hyperforecast.learning.boundary import LARGEST_Z
+
+
+@descriptor("drift")
+def frechet_distance(view):
+    """Frechet distance between the Gaussians of new rows and of all old rows, with diagonal covariances, over d.
+
+    Mean over features of (m1 - m2)^2 + (s1 - s2)^2; the old side from the carried class summaries, every class alike.
+    Unit: squared standard deviations. Dowson & Landau 1982, "The Frechet distance between multivariate normal
+    distributions".
+    """
+    old = view.summaries
+    if old is None:
+        return np.nan
+    mean_old = old.mean.mean(axis=0)
+    variance_old = old.variance.mean(axis=0) + old.mean.var(axis=0)
+    mean_new, variance_new = view.sample[0].mean(axis=0), view.sample[0].var(axis=0)
+    return ((mean_new - mean_old) ** 2 + (np.sqrt(variance_new) - np.sqrt(variance_old)) ** 2).mean()
+
+
+@descriptor("drift")
+def nearest_old_class(view):
+    """Mean over the increment's classes of the squared distance to the nearest old class mean, over the variance within.
+
+    Old classes that came again do not count. Unit: ratio (Mahalanobis distance with one common variance). Common
+    practice.
+    """
+    if view.summaries is None or not len(view.old_means):
+        return np.nan
+    return squared_distances(view.means, view.old_means).min(axis=1).mean() / view.within.sum()
+
+
+@descriptor("drift")
+def variance_ratio(view):
+    """Variance within the increment's classes over the carried variance within old classes. Unit: ratio."""
+    return np.nan if view.summaries is None else view.within.sum() / view.summaries.variance.mean(axis=0).sum()
+
+
+@descriptor("drift")
+def confusion_with_old(view):
+    """Share of new rows nearer to an old class mean than to the mean of their class's other rows. Unit: share."""
+    return np.nan if view.summaries is None else (view.nearest_old < view.own_distances).mean()
+
+
+@descriptor("drift")
+def nearest_mean_accuracy_all(view):
+    """Share of new rows nearer to the mean of their class's other rows than to any other mean, old ones included.
+
+    Unit: share. Leave-one-out nearest-class-mean accuracy. Common practice.
+    """
+    if view.summaries is None:
+        return np.nan
+    return (view.own_distances < np.minimum(view.nearest_other, view.nearest_old)).mean()
+
+
+@descriptor("drift")
+def nearest_mean_accuracy_old(view):
+    """Share of old rows (exemplars or check rows) whose nearest class mean, old or new, is their own. Unit: share."""
+    old = view.old_rows
+    if not len(old):
+        return np.nan
+    means = view.summaries.merged(*view.sample, view.boundary.n_classes).mean
+    return (squared_distances(old.Z, means).argmin(axis=1) == old.y).mean()
+
+
+@descriptor("drift")
+def ridge_accuracy_new(view):
+    """Leave-one-out accuracy on new rows of a ridge classifier over new rows and old rows. Unit: share.
+
+    A linear forecast of what can be had with both at hand, by one matrix inversion. Source: see `BoundaryView.probe`.
+    """
+    hits, is_old = view.probe
+    return hits[~is_old].mean()
+
+
+@descriptor("drift")
+def ridge_accuracy_old(view):
+    """The same ridge classifier's leave-one-out accuracy on old rows (exemplars or check rows). Unit: share."""
+    hits, is_old = view.probe
+    return hits[is_old].mean() if is_old.any() else np.nan
+
+
+@descriptor("drift")
+def shift_of_returning(view):
+    """Mean squared distance of returning classes' new means from their carried ones, over the variance within.
+
+    Unit: ratio.
+    """
+    if view.summaries is None:
+        return np.nan
+    returning = view.arrived < view.boundary.n_old
+    if not returning.any():
+        return np.nan
+    carried = view.summaries.mean[view.arrived[returning]]
+    return ((view.means[returning] - carried) ** 2).sum(axis=1).mean() / view.within.sum()
+
+
+@descriptor("drift")
+def cut_share(view):
+    """Share of standardized values that were cut at 10 standard deviations. Unit: share."""
+    return (np.abs(view.sample[0]) >= LARGEST_Z).mean()

@@ -1,0 +1,66 @@
+"""Attempts at a boundary: try settings side by side, look at what came of them, keep one."""
+
+from dataclasses import replace
+
+import numpy as np
+
+from hyperforecast.learning.boundary import Carryover, ClassSummaries
+from hyperforecast.learning.exemplars import Exemplars, choose_exemplars
+from hyperforecast.learning.trainer import Job
+from hyperforecast.metrics import class_accuracies
+
+# Rows scored at a time, so that large sets need little memory.
+CHUNK_ROWS = 8192
+
+
+def try_settings(trainer, boundary, settings, *, seed):
+    """Return one `Attempt` for each of a list of `Settings`, all from the same boundary."""
+    return trainer.learn([Job(boundary, one) for one in settings], seed=seed)
+
+
+def predict_codes(trainer, head, Z):
+    """Return class codes (n,) for standardized rows Z (n, d); a head of non-finite numbers predicts code 0."""
+    codes = np.empty(len(Z), np.int64)
+    for start in range(0, len(Z), CHUNK_ROWS):
+        scores = trainer.class_scores(head, Z[start:start + CHUNK_ROWS])
+        # A NaN would win argmax: put it last.
+        codes[start:start + CHUNK_ROWS] = np.where(np.isnan(scores), -np.inf, scores).argmax(axis=1)
+    return codes
+
+
+def accuracies(trainer, head, Z, y, n_classes):
+    """Return the accuracy on each class's rows, shape (n_classes,); NaN for a class without rows."""
+    return class_accuracies(y, predict_codes(trainer, head, Z), n_classes)
+
+
+def close_boundary(trainer, boundary, attempt, *, seed):
+    """Return the `Carryover` after keeping `attempt`: its head, exemplars cut and chosen, summaries brought up to date.
+
+    Old exemplars are cut by prefix; a class that arrived again keeps its own and is topped up from the new rows.
+    """
+    before = boundary.carryover
+    job = Job(boundary, attempt.settings)
+    exemplars = Exemplars.none(boundary.n_features)
+    if job.kept:
+        old = boundary.old_exemplars.cut(job.kept)
+        held = np.bincount(old.y, minlength=boundary.n_classes)
+        features = np.nan_to_num(trainer.features(attempt.head, boundary.Z))
+        chosen = choose_exemplars(boundary.Z, boundary.y, features, job.kept)
+        chosen = replace(chosen, rank=chosen.rank + held[chosen.y])
+        fits = chosen.rank < job.kept
+        exemplars = old.joined(Exemplars(chosen.Z[fits], chosen.y[fits], chosen.rank[fits]))
+    check_rows = boundary.check_set()
+    head = trainer.consolidated(boundary, attempt, seed=seed)
+    now = accuracies(trainer, head, check_rows.Z, check_rows.y, boundary.n_classes)
+    best = np.full(boundary.n_classes, np.nan)
+    if before is None:
+        summaries = ClassSummaries(np.empty(0, np.int64), *(np.empty((0, boundary.n_features), np.float32),) * 2)
+    else:
+        summaries = before.summaries
+        best[:boundary.n_old] = before.best_check_accuracy
+    return Carryover(
+        plan=boundary.plan, classes=boundary.classes, center=boundary.center, scale=boundary.scale, head=head,
+        exemplars=exemplars, check_rows=check_rows,
+        summaries=summaries.merged(boundary.Z, boundary.y, boundary.n_classes),
+        best_check_accuracy=np.fmax(best, now), n_boundaries=boundary.number + 1,
+    )

@@ -1,0 +1,224 @@
+"""What a device carries between boundaries, and a boundary: carryover and increment, nothing trained yet."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from hyperforecast.checks import InputError
+from hyperforecast.learning.exemplars import Exemplars
+from hyperforecast.settings import KEPT_PER_CLASS, Plan
+
+# Rows of each class held back from training, for descriptors and checks.
+MOST_CHECK_ROWS = 8
+# Standardized features beyond this many standard deviations are cut to it.
+LARGEST_Z = 10.0
+
+
+@dataclass(frozen=True)
+class ClassSummaries:
+    """First and second moments of every class when it was last learned, in standardized features.
+
+    Attributes
+    ----------
+    count : ndarray of shape (C,), int64
+    mean, variance : ndarrays of shape (C, d), float32
+    """
+
+    count: np.ndarray
+    mean: np.ndarray
+    variance: np.ndarray
+
+    def merged(self, Z, y, n_classes):
+        """Return the summaries after rows Z (n, d) with codes y (n,) have arrived; counts pool, moments too."""
+        n_features = Z.shape[1]
+        count = np.zeros(n_classes, np.int64)
+        mean, variance = (np.zeros((n_classes, n_features), np.float32) for _ in range(2))
+        n_old = len(self.count)
+        count[:n_old], mean[:n_old], variance[:n_old] = self.count, self.mean, self.variance
+        for code in np.unique(y):
+            rows = Z[y == code].astype(np.float64)
+            n, m, v = len(rows), rows.mean(axis=0), rows.var(axis=0)
+            total = count[code] + n
+            share = n / total
+            shift = m - mean[code]
+            variance[code] = (1 - share) * variance[code] + share * v + share * (1 - share) * shift**2
+            mean[code] += share * shift
+            count[code] = total
+        return ClassSummaries(count, mean, variance)
+
+
+@dataclass(frozen=True)
+class Carryover:
+    """What a device keeps between boundaries.
+
+    Attributes
+    ----------
+    plan : Plan
+    classes : ndarray of shape (C,), int64 or text
+        Labels in order of arrival; a class's place is its code.
+    center, scale : ndarrays of shape (d,), float32
+        Feature scaling, fixed at the first increment.
+    head : dict of str to ndarray
+        The trainer's own arrays.
+    exemplars : Exemplars
+        Rows to train on; empty for the methods without rehearsal.
+    check_rows : Exemplars
+        Rows never trained on, for descriptors and checks; counted in the memory limit.
+    summaries : ClassSummaries
+    best_check_accuracy : ndarray of shape (C,), float64
+        Per class, the best accuracy on its check rows after any boundary; NaN where there were none.
+    n_boundaries : int
+        Boundaries learned so far.
+    """
+
+    plan: Plan
+    classes: np.ndarray
+    center: np.ndarray
+    scale: np.ndarray
+    head: dict
+    exemplars: Exemplars
+    check_rows: Exemplars
+    summaries: ClassSummaries
+    best_check_accuracy: np.ndarray
+    n_boundaries: int
+
+    @property
+    def n_features(self):
+        """Number of features d."""
+        return len(self.center)
+
+    def standardized(self, X):
+        """Return features X (n, d) as this device's head sees them, float32."""
+        return standardize(X, self.center, self.scale)
+
+
+def standardize(X, center, scale):
+    """Return (X - center) / scale, cut to +-10, as float32."""
+    Z = np.subtract(X, center, dtype=np.float32)
+    Z /= scale
+    return np.clip(Z, -LARGEST_Z, LARGEST_Z, out=Z)
+
+
+def fit_scaling(X):
+    """Return (center, scale) of shape (d,), float32: mean and standard deviation of every feature.
+
+    A feature that hardly varies gets a tenth of the root mean square deviation over all features instead of its
+    own, so that its later changes are not blown up; where nothing varies the scale is 1.
+    """
+    center = X.mean(axis=0, dtype=np.float64)
+    deviation = X.std(axis=0, dtype=np.float64)
+    typical = np.sqrt(np.mean(deviation**2))
+    scale = np.maximum(deviation, 0.1 * typical) if typical > 0 else np.ones_like(deviation)
+    return center.astype(np.float32), scale.astype(np.float32)
+
+
+@dataclass(frozen=True)
+class Boundary:
+    """The moment an increment has arrived and nothing has been trained on it yet.
+
+    Attributes
+    ----------
+    plan : Plan
+    carryover : Carryover or None
+        None at the first increment.
+    classes : ndarray of shape (C,)
+        Old classes in order of arrival, then the new ones.
+    n_old : int
+        Classes seen before.
+    center, scale : ndarrays of shape (d,)
+    Z, y : ndarrays of shape (n, d) and (n,)
+        Standardized rows to train on, and their class codes.
+    held_back : Exemplars
+        Rows of the increment held back from training.
+    check_per_class, most_kept : int
+        Check rows and exemplars that the memory allows each class from now on.
+    """
+
+    plan: Plan
+    carryover: Carryover | None
+    classes: np.ndarray
+    n_old: int
+    center: np.ndarray
+    scale: np.ndarray
+    Z: np.ndarray
+    y: np.ndarray
+    held_back: Exemplars
+    check_per_class: int
+    most_kept: int
+
+    @property
+    def n_classes(self):
+        """Classes seen, the increment's included."""
+        return len(self.classes)
+
+    @property
+    def n_features(self):
+        """Number of features d."""
+        return len(self.center)
+
+    @property
+    def number(self):
+        """Number of this boundary, from 0."""
+        return 0 if self.carryover is None else self.carryover.n_boundaries
+
+    @property
+    def arrived(self):
+        """Codes of the classes in the increment, sorted, int64."""
+        return np.unique(self.y)
+
+    @property
+    def old_exemplars(self):
+        """Exemplars of old classes, as carried."""
+        return Exemplars.none(self.n_features) if self.carryover is None else self.carryover.exemplars
+
+    @property
+    def old_check_rows(self):
+        """Check rows of old classes, as carried."""
+        return Exemplars.none(self.n_features) if self.carryover is None else self.carryover.check_rows
+
+    def check_set(self):
+        """Return the rows held back from training, of old classes (cut to what the memory allows) and of new ones."""
+        old = self.old_check_rows.cut(self.check_per_class)
+        return old.without(self.held_back.y).joined(self.held_back)
+
+
+def open_boundary(plan, carryover, increment, *, seed=0):
+    """Return the `Boundary` at which `increment` meets `carryover` (None: it is the first increment).
+
+    A few rows of each class, at most 8 and at most a fifth, drawn with `seed`, are held back from training.
+
+    Raises
+    ------
+    InputError
+        If the labels are of another kind than before, or the memory limit is too small.
+    """
+    labels, first, codes = np.unique(increment.y, return_index=True, return_inverse=True)
+    old = labels[:0] if carryover is None else carryover.classes
+    if carryover is not None and old.dtype.kind != labels.dtype.kind:
+        raise InputError("y", f"must hold {'text' if old.dtype.kind == 'U' else 'whole numbers'} as before",
+                         "whole numbers" if old.dtype.kind == "U" else "text")
+    is_new = ~np.isin(labels, old)
+    classes = np.concatenate([old, labels[is_new]])
+    place = {label: code for code, label in enumerate(classes.tolist())}
+    y = np.array([place[label] for label in labels.tolist()], np.int64)[codes]
+    rows_per_class = plan.rows_per_class(increment.n_features, len(classes))
+    check_per_class = min(MOST_CHECK_ROWS, rows_per_class // 4 if plan.rehearses else rows_per_class)
+    center, scale = fit_scaling(increment.X) if carryover is None else (carryover.center, carryover.scale)
+    Z = standardize(increment.X, center, scale)
+    training, held_back = _hold_back(Z, y, check_per_class, np.random.default_rng([seed, 0x6368]))
+    return Boundary(
+        plan=plan, carryover=carryover, classes=classes, n_old=len(old), center=center, scale=scale,
+        Z=Z[training], y=y[training], held_back=held_back, check_per_class=check_per_class,
+        most_kept=min(rows_per_class - check_per_class, KEPT_PER_CLASS[1]),
+    )
+
+
+def _hold_back(Z, y, per_class, rng):
+    shuffled = rng.permutation(len(y))
+    order = shuffled[np.argsort(y[shuffled], kind="stable")]
+    codes, start, count = np.unique(y[order], return_index=True, return_counts=True)
+    rank = np.arange(len(y)) - np.repeat(start, count)
+    held = rank < np.repeat(np.minimum(per_class, count // 5), count)
+    by_rank = np.argsort(rank[held], kind="stable")
+    rows = order[held][by_rank]
+    return np.sort(order[~held]), Exemplars(Z[rows], y[rows], rank[held][by_rank])

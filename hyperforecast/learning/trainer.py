@@ -1,0 +1,303 @@
+"""The door for trainers: what gathering, searching, contests and the update cycle ask of a learner.
+
+`HeadTrainer` is the built-in one. Any object with the methods of `Trainer` serves in its place; its model must be
+expressible as a dict of plain numeric arrays, which is what a device folder stores.
+"""
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+
+from hyperforecast.learning.boundary import Boundary
+from hyperforecast.learning.exemplars import herd, unit_rows
+from hyperforecast.learning.head import (
+    HeadLayout, backpropagate, fisher_diagonal, head_logits, hidden_features, new_head, softmax, top_curvature,
+)
+from hyperforecast.learning.objectives import Objective
+from hyperforecast.learning.side_by_side import Regimen, train_side_by_side
+from hyperforecast.settings import Settings
+
+# Rows that facts about gradients and curvature are computed on.
+MOST_FACT_ROWS = 128
+
+
+@dataclass(frozen=True)
+class Job:
+    """One attempt to make: a boundary and settings."""
+
+    boundary: Boundary
+    settings: Settings
+
+    @property
+    def kept(self):
+        """Exemplars per class, as far as the memory allows; 0 for a method without rehearsal."""
+        if not self.boundary.plan.rehearses:
+            return 0
+        return min(self.settings.kept_per_class, self.boundary.most_kept)
+
+
+@dataclass(frozen=True)
+class Attempt:
+    """A job done.
+
+    Attributes
+    ----------
+    settings : Settings
+    head : dict of str to ndarray
+        The trainer's arrays after training.
+    diverged : bool
+    operations : float
+        Floating-point operations spent.
+    """
+
+    settings: Settings
+    head: dict
+    diverged: bool
+    operations: float
+
+
+class Trainer(Protocol):
+    """What a learner offers. Rows Z are standardized float32 features (n, d); codes y count from 0."""
+
+    def learn(self, jobs, *, seed):
+        """Return one `Attempt` per `Job`; all jobs share increment and plan, and differ in settings or carryover.
+
+        At the first increment `boundary.carryover` is None: start a fresh model. `job.kept` exemplars of each old
+        class are in `boundary.old_exemplars.cut(job.kept)`.
+        """
+
+    def class_scores(self, head, Z):
+        """Return scores (n, C) in code order; the highest wins, their softmax is the class probabilities."""
+
+    def features(self, head, Z):
+        """Return what exemplars are chosen by, (n, h)."""
+
+    def consolidated(self, boundary, attempt, *, seed):
+        """Return the arrays of the attempt that is kept, with whatever the next boundary needs of this one's rows."""
+
+    def facts(self, boundary, *, seed):
+        """Return numbers about the model at a boundary before training, by descriptor name; any may be left out."""
+
+
+class HeadTrainer:
+    """The built-in trainer: EWC, LwF, iCaRL and WA on a linear head or one hidden layer.
+
+    References (from memory): Kirkpatrick et al. 2017 (EWC), Schwarz et al. 2018 (one recentred penalty), Li & Hoiem
+    2016 (LwF), Rebuffi et al. 2017 (iCaRL), Zhao et al. 2020 (WA).
+    """
+
+    def learn(self, jobs, *, seed):
+        """Return one `Attempt` per `Job`, trained side by side. See `Trainer.learn`."""
+        boundary = jobs[0].boundary
+        plan = boundary.plan
+        layout = HeadLayout(boundary.n_features, plan.hidden_units, boundary.n_classes)
+        objective = _objective(boundary)
+        pool = _Pool(layout, objective, seed)
+        regimens = [pool.regimen(job) for job in jobs]
+        Z, y, targets = pool.gathered()
+        heads = train_side_by_side(layout, objective, regimens, Z=Z, y=y, targets=targets,
+                                   passes=plan.passes, batch_size=plan.batch_size, seed=seed)
+        attempts = []
+        for job, trained in zip(jobs, heads):
+            head = {name: part[0] for name, part in layout.parts(trained.flat[None]).items()}
+            if plan.method == "wa" and boundary.n_old and not trained.diverged:
+                head = align_weights(head, boundary.n_old)
+            operations = trained.steps * plan.batch_size * layout.operations_per_row
+            attempts.append(Attempt(job.settings, head, trained.diverged, float(operations)))
+        if plan.method == "icarl":
+            _add_class_means(jobs, attempts)
+        return attempts
+
+    def class_scores(self, head, Z):
+        """Return scores (n, C): logits, or with class means minus the squared distance to each on the unit sphere."""
+        with np.errstate(all="ignore"):
+            if "class_means" in head:
+                return 2 * unit_rows(hidden_features(head, Z)) @ head["class_means"].T - 2
+            return head_logits(head, Z)
+
+    def features(self, head, Z):
+        """Return the hidden activations (n, H), or Z for a linear head."""
+        with np.errstate(all="ignore"):
+            return hidden_features(head, Z)
+
+    def consolidated(self, boundary, attempt, *, seed):
+        """Return the head's arrays; for EWC with the importance of its weights, a mean over all rows seen.
+
+        With the mean Fisher F of n_old rows and n_new new rows, lambda = n_old / n_new weighs every row alike.
+        """
+        head = dict(attempt.head)
+        if boundary.plan.method != "ewc":
+            return head
+        before = {} if boundary.carryover is None else boundary.carryover.head
+        n_before = 0 if boundary.carryover is None else int(boundary.carryover.summaries.count.sum())
+        share = len(boundary.y) / (n_before + len(boundary.y))
+        with np.errstate(all="ignore"):
+            fisher = fisher_diagonal(attempt.head, boundary.Z)
+        for name, part in fisher.items():
+            old = before.get(f"importance_{name}")
+            part = np.float32(share) * part
+            if old is not None:
+                part[:, :old.shape[1]] += np.float32(1 - share) * old
+            head[f"importance_{name}"] = np.nan_to_num(part, posinf=0, neginf=0).astype(np.float32)
+        return head
+
+    def facts(self, boundary, *, seed):
+        """Return facts about the old head with its outputs for the new classes added, before training.
+
+        All need an old model; those on exemplars need exemplars (or check rows, for the methods without rehearsal).
+        """
+        if boundary.carryover is None:
+            return {}
+        rng = np.random.default_rng([seed, 0x6661])
+        layout = HeadLayout(boundary.n_features, boundary.plan.hidden_units, boundary.n_classes)
+        flat = layout.flatten(boundary.carryover.head)
+        head = {name: part[0] for name, part in layout.parts(flat).items()}
+        objective = _objective(boundary)
+        with np.errstate(all="ignore"):
+            facts = _facts(head, objective, boundary, rng)
+        return {name: float(value) for name, value in facts.items() if np.isfinite(value)}
+
+
+def align_weights(head, n_old):
+    """Return the head with the outputs of classes from `n_old` on scaled so that the mean weight norms agree.
+
+    Zhao et al. 2020, "Maintaining Discrimination and Fairness in Class Incremental Learning", from memory:
+    gamma = mean ||w_old|| / mean ||w_new||. Their corrected logits are gamma times the new ones, so biases scale too.
+    """
+    weights, bias = head["output_weights"].copy(), head["output_bias"].copy()
+    norms = np.sqrt((weights**2).sum(axis=0))
+    if n_old == len(norms) or not norms[n_old:].mean() > 0:
+        return head
+    gamma = norms[:n_old].mean() / norms[n_old:].mean()
+    weights[:, n_old:] *= gamma
+    bias[:, n_old:] *= gamma
+    return {**head, "output_weights": weights, "output_bias": bias}
+
+
+def _objective(boundary):
+    return Objective(boundary.plan.method, n_classes=boundary.n_classes, n_old=boundary.n_old, arrived=boundary.arrived)
+
+
+class _Pool:
+    """Training rows of all jobs: for each distinct carryover the increment's rows, then its exemplars."""
+
+    def __init__(self, layout, objective, seed):
+        self.layout, self.objective, self.seed = layout, objective, seed
+        self.starts, self.rows = {}, {}
+        self.Z, self.y, self.targets, self.size = [], [], [], 0
+
+    def regimen(self, job):
+        boundary = job.boundary
+        if id(boundary) not in self.starts:
+            self.starts[id(boundary)] = self._add(boundary)
+        first, flat, importance, exemplars = self.starts[id(boundary)]
+        length = len(boundary.y) + (len(exemplars.cut(job.kept)) if job.kept else 0)
+        rows = self.rows.setdefault((first, length), np.arange(first, first + length))
+        return Regimen(job.settings.learning_rate, job.settings.regularization, rows, flat, importance)
+
+    def _add(self, boundary):
+        rng = np.random.default_rng([self.seed, 0x6865])
+        exemplars = boundary.old_exemplars
+        if boundary.carryover is None:
+            arrays = new_head(boundary.n_features, boundary.plan.hidden_units, rng)
+        else:
+            arrays = boundary.carryover.head
+        first = self.size
+        Z = np.concatenate([boundary.Z, exemplars.Z])
+        self.Z.append(Z)
+        self.y.append(np.concatenate([boundary.y, exemplars.y]))
+        if self.objective.distils:
+            # Once for all passes and all attempts: the old head does not change.
+            with np.errstate(all="ignore"):
+                self.targets.append(self.objective.targets(head_logits(arrays, Z)))
+        self.size += len(Z)
+        importance = self.layout.flatten(arrays, "importance_")[0] if boundary.plan.method == "ewc" else None
+        return first, self.layout.flatten(arrays)[0], importance, exemplars
+
+    def gathered(self):
+        targets = np.concatenate(self.targets) if self.targets else None
+        return np.concatenate(self.Z), np.concatenate(self.y), targets
+
+
+def _add_class_means(jobs, attempts):
+    """Give every attempt its class means: of the exemplars that it would keep, on the unit sphere.
+
+    Nearest-mean classification after Rebuffi et al. 2017, eq. 2, from memory. All jobs share their new rows, so
+    that a class is herded for all attempts at once.
+    """
+    boundary = jobs[0].boundary
+    kept = np.array([job.kept for job in jobs])
+    with np.errstate(all="ignore"):
+        new = np.stack([np.nan_to_num(unit_rows(hidden_features(one.head, boundary.Z))) for one in attempts])
+        means = np.zeros((len(jobs), boundary.n_classes, new.shape[2]), np.float32)
+        for k, (job, attempt) in enumerate(zip(jobs, attempts)):
+            exemplars = job.boundary.old_exemplars.cut(job.kept)
+            if len(exemplars):
+                features = np.nan_to_num(unit_rows(hidden_features(attempt.head, exemplars.Z)))
+                np.add.at(means[k], exemplars.y, features)
+        held = np.zeros((len(jobs), boundary.n_classes), np.int64)
+        for k, job in enumerate(jobs):
+            held[k] = np.bincount(job.boundary.old_exemplars.cut(job.kept).y, minlength=boundary.n_classes)
+        for code in boundary.arrived:
+            rows = np.flatnonzero(boundary.y == code)
+            room = np.minimum(np.maximum(kept - held[:, code], 0), len(rows))
+            if not room.max():
+                continue
+            order = herd(new[:, rows], int(room.max()))
+            for k in range(len(jobs)):
+                means[k, code] += new[k, rows[order[k, :room[k]]]].sum(axis=0)
+        for attempt, mean in zip(attempts, means):
+            attempt.head["class_means"] = unit_rows(mean)
+
+
+def _facts(head, objective, boundary, rng):
+    plan, n_old = boundary.plan, boundary.n_old
+    rows = rng.permutation(len(boundary.y))[:MOST_FACT_ROWS]
+    Z, y = boundary.Z[rows], boundary.y[rows]
+    logits = head_logits(head, Z)
+    old = softmax(logits[:, :n_old])
+    facts = {
+        "confidence_new": old.max(axis=1).mean(),
+        "entropy_new": -(old * np.log(old + 1e-12)).sum(axis=1).mean() / max(np.log(n_old), 1e-12) if n_old > 1 else 0.0,
+        "largest_logit_new": logits[:, :n_old].max(axis=1).mean(),
+        "curvature_new": top_curvature(head, Z, objective.loss_curvature(logits), rng=rng),
+        "output_weight_norm": np.sqrt((head["output_weights"][:, :n_old] ** 2).sum(axis=0)).mean(),
+        "output_bias_spread": head["output_bias"][0, :n_old].std(),
+        "feature_norm_new": np.sqrt((hidden_features(head, Z) ** 2).sum(axis=1)).mean(),
+    }
+    if "hidden_weights" in head:
+        facts["active_share_new"] = (hidden_features(head, Z) > 0).mean()
+        facts["hidden_weight_norm"] = np.sqrt((head["hidden_weights"] ** 2).mean())
+    gradient_new = _gradient(head, objective, Z, y, logits)
+    facts["gradient_norm_new"] = _length(gradient_new)
+    kept = boundary.old_exemplars if plan.rehearses else boundary.old_check_rows
+    if len(kept):
+        rows = rng.permutation(len(kept))[:MOST_FACT_ROWS]
+        Z_old, y_old = kept.Z[rows], kept.y[rows]
+        logits_old = head_logits(head, Z_old)
+        gradient_old = _gradient(head, objective, Z_old, y_old, logits_old)
+        facts["gradient_norm_exemplars"] = _length(gradient_old)
+        product = sum(float(np.vdot(gradient_new[name], gradient_old[name])) for name in gradient_new)
+        facts["gradient_cosine"] = product / (facts["gradient_norm_new"] * facts["gradient_norm_exemplars"])
+        facts["curvature_exemplars"] = top_curvature(head, Z_old, objective.loss_curvature(logits_old), rng=rng)
+        facts["loss_exemplars"] = -np.log(softmax(logits_old)[np.arange(len(rows)), y_old] + 1e-12).mean()
+    if plan.method == "ewc":
+        importance = np.concatenate([boundary.carryover.head[f"importance_{name}"].ravel() for name in head])
+        facts["importance_mean"] = importance.mean()
+        facts["anchor_curvature"] = importance.max()
+    else:
+        facts["anchor_curvature"] = top_curvature(head, Z, objective.anchor_curvature(logits), rng=rng)
+    return facts
+
+
+def _gradient(head, objective, Z, y, logits):
+    """Gradient of the mean unanchored loss over rows Z, part by part."""
+    targets = objective.targets(logits[:, :objective.n_old]) if objective.distils else None
+    weightless = np.zeros((1, 1, 1), np.float32)
+    error = objective.output_gradient(logits[None].copy(), y, targets, weightless)[0]
+    return backpropagate(head, Z, error / np.float32(len(Z)))
+
+
+def _length(parts):
+    return np.sqrt(sum(float(np.vdot(part, part)) for part in parts.values()))
