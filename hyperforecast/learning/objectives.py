@@ -7,7 +7,7 @@ and is added by the training loop.
 
 import numpy as np
 
-from hyperforecast.learning.head import softmax
+from hyperforecast.learning.head import softmax, softmax_in_place
 
 # Of the softened outputs in LwF and WA: Li & Hoiem 2016, "Learning without Forgetting", from memory.
 TEMPERATURE = 2.0
@@ -101,9 +101,7 @@ class Objective:
             anchor *= strength * np.float32(TEMPERATURE)
         if self.left_out is not None:
             logits += self.left_out
-        logits -= logits.max(axis=2, keepdims=True)
-        np.exp(logits, out=logits)
-        logits /= logits.sum(axis=2, keepdims=True)
+        softmax_in_place(logits)
         _subtract_one_hot(logits, y)
         if anchor is not None:
             logits[:, :, :self.n_old] += anchor

@@ -166,6 +166,7 @@ class _Block:
         self.parts = layout.parts(self.flat)
         self.gradient = np.zeros_like(self.flat)
         self.gradient_parts = layout.parts(self.gradient)
+        self.ones = np.ones((1, n_rows), np.float32)
         self.logits = np.empty((n_heads, n_rows, layout.n_classes), np.float32)
         self.shares_rows = len(np.unique(self.set_of)) == 1
         if layout.hidden_units:
@@ -203,12 +204,12 @@ class _Block:
         error = self.objective.output_gradient(self.logits, y, targets, self.head_strength)
         error *= weight
         np.matmul(np.swapaxes(features, -1, -2), error, out=gradient["output_weights"])
-        np.sum(error, axis=1, keepdims=True, out=gradient["output_bias"])
+        np.matmul(self.ones, error, out=gradient["output_bias"])
         if self.layout.hidden_units:
             np.matmul(error, parts["output_weights"].transpose(0, 2, 1), out=self.inner)
             self.inner *= features > 0
             np.matmul(np.swapaxes(X, -1, -2), self.inner, out=gradient["hidden_weights"])
-            np.sum(self.inner, axis=1, keepdims=True, out=gradient["hidden_bias"])
+            np.matmul(self.ones, self.inner, out=gradient["hidden_bias"])
         if self.anchored:
             pull = self.flat - self.origin
             pull *= self.stiffness
