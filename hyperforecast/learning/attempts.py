@@ -30,7 +30,10 @@ def predict_codes(trainer, head, Z):
 
 def accuracies(trainer, head, Z, y, n_classes):
     """Return the accuracy on each class's rows, shape (n_classes,); NaN for a class without rows."""
-    return class_accuracies(y, predict_codes(trainer, head, Z), n_classes)
+    by_class = np.full(n_classes, np.nan)
+    if len(y):
+        by_class[np.unique(y)] = class_accuracies(y, predict_codes(trainer, head, Z))
+    return by_class
 
 
 def close_boundary(trainer, boundary, attempt, *, seed):

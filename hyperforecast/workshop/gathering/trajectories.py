@@ -1,0 +1,173 @@
+"""One trajectory: a stream walked through with one plan, a search at every boundary that has old classes."""
+
+import hashlib
+import time
+
+import numpy as np
+
+from hyperforecast.describing import describe
+from hyperforecast.increments import Increment
+from hyperforecast.learning import HeadTrainer, Job, close_boundary, open_boundary, standardize
+from hyperforecast.settings import Plan, Settings, SettingsBox
+from hyperforecast.workshop.gathering.records import AttemptRecord, BoundaryRecord, Trajectory
+from hyperforecast.workshop.searching import BoundarySearch, class_codes, run_search, space_filling
+
+# The settings of every first increment: nothing is there to forget, so that they are not searched.
+OPENING = {"learning_rate": 0.02, "regularization": 1.0, "kept_per_class": 20}
+# Settings of the boundaries that follow, where later outcomes are recorded.
+REFERENCE = {"ewc": (1e-3, 10.0, None), "lwf": (0.01, 1.0, None), "icarl": (0.03, 1.0, 20), "wa": (0.03, 1.0, 20)}
+BEST_FOLLOWED, OTHERS_FOLLOWED = 4, 4
+# Mean cost of an attempt is capped: plans that would spend more operations get fewer passes.
+MOST_OPERATIONS = 1.2e9
+# Outcomes are measured on at most this many selection rows.
+MOST_OUTCOME_ROWS = 1500
+
+
+def opening_settings(plan):
+    """Return the `Settings` of the first increment under a plan, the same for every policy."""
+    return Settings(OPENING["learning_rate"], OPENING["regularization"],
+                    OPENING["kept_per_class"] if plan.rehearses else None)
+
+
+def reference_settings(plan):
+    """Return the `Settings` of the reference policy under a plan."""
+    return Settings(*REFERENCE[plan.method])
+
+
+def derived_seed(*parts):
+    """Return a seed below 2^31 that depends on all parts, the same on every machine."""
+    return int.from_bytes(hashlib.sha256(repr(parts).encode()).digest()[:4], "big") >> 1
+
+
+def draw_plan(method, stream, rng):
+    """Return a `Plan` drawn for a stream, its passes cut where attempts would cost too much."""
+    n_classes = len(np.unique(np.concatenate([stream.classes(t) for t in range(stream.n_boundaries)])))
+    largest = max(len(stream.training(t)) for t in range(stream.n_boundaries))
+    n_features = stream.training(0).n_features
+    hidden = int(rng.choice([0, 16, 32, 64, 64, 128]))
+    passes = int(np.round(np.exp(rng.uniform(np.log(3), np.log(25)))))
+    batch_size = int(rng.choice([16, 32, 32, 64]))
+    per_class = int(np.round(np.exp(rng.uniform(np.log(4), np.log(100)))))
+    width = hidden or n_features
+    per_pass = 2 * largest * (2 * n_features * hidden + 3 * width * n_classes)
+    passes = max(2, min(passes, int(MOST_OPERATIONS / per_pass)))
+    return Plan(method, hidden, passes, batch_size, max(per_class, 1) * n_classes)
+
+
+def run_trajectory(definition, method, *, seed, space_filled=32, proposed=16, trainer=None):
+    """Walk through a stream; return the `Trajectory` of its searches.
+
+    Parameters
+    ----------
+    definition : StreamDefinition
+    method : str
+    seed : int
+        With the definition's key and the method it determines everything.
+    space_filled, proposed : int
+        Attempts of each boundary from a space-filling design, then from TPE.
+    trainer : Trainer, optional
+        The built-in one by default.
+
+    Notes
+    -----
+    The walk goes on from the best attempt, or by chance from another good one, so that later boundaries are met by
+    models of many kinds.
+    """
+    started = time.perf_counter()
+    trainer = trainer or HeadTrainer()
+    stream = definition.build()
+    key = trajectory_key(definition, method, seed)
+    rng = np.random.default_rng(derived_seed(key))
+    plan = draw_plan(method, stream, rng)
+    carryover, boundaries = None, []
+    for t in range(stream.n_boundaries):
+        step_seed = derived_seed(key, t)
+        boundary = open_boundary(plan, carryover, stream.training(t), seed=step_seed)
+        if carryover is None:
+            attempt = trainer.learn([Job(boundary, opening_settings(plan))], seed=step_seed)[0]
+        else:
+            search = _search_at(trainer, boundary, stream, t, step_seed)
+            strategies = _search(search, SettingsBox(method, boundary.most_kept), space_filled, proposed, step_seed)
+            later = _follow(trainer, stream, search, _followed(search.outcomes, rng), t, key)
+            boundaries.append(_record(search, strategies, later, describe(trainer, boundary, seed=step_seed)))
+            attempt = search.attempts[_continued(search.outcomes, rng)]
+        carryover = close_boundary(trainer, boundary, attempt, seed=step_seed)
+    return Trajectory(key, definition.name, definition.source, definition.seed, method, plan.as_dict(),
+                      time.perf_counter() - started, boundaries)
+
+
+def trajectory_key(definition, method, seed):
+    """Return the text that identifies a trajectory in a records file."""
+    return f"{definition.key}|{method}|{seed}"
+
+
+def _search_at(trainer, boundary, stream, t, seed):
+    rows = _stratified(stream.selection(t), MOST_OUTCOME_ROWS, seed)
+    return BoundarySearch(trainer, boundary, standardize(rows.X, boundary.center, boundary.scale),
+                          class_codes(boundary, rows.y), seed=seed)
+
+
+def _followed(outcomes, rng):
+    """Places of the attempts whose later outcomes are recorded: the best ones, and others of the better half."""
+    order = np.argsort([-one.all for one in outcomes], kind="stable")
+    others = rng.permutation(order[BEST_FOLLOWED:len(order) // 2])[:OTHERS_FOLLOWED]
+    return [*order[:BEST_FOLLOWED], *others]
+
+
+def _follow(trainer, stream, search, places, t, key):
+    """Return {place: [accuracy on all classes one boundary later, two later]}, as far as the stream goes.
+
+    Later settings come from the reference policy, so that what differs is what the attempt left behind.
+    """
+    later = {int(place): [] for place in places}
+    attempts = [search.attempts[place] for place in places]
+    boundaries, seed = [search.boundary] * len(attempts), search.seed
+    for s in range(t + 1, min(t + 3, stream.n_boundaries)):
+        increment = stream.training(s)
+        carried = [close_boundary(trainer, boundary, attempt, seed=seed)
+                   for boundary, attempt in zip(boundaries, attempts)]
+        seed = derived_seed(key, s)
+        boundaries = [open_boundary(one.plan, one, increment, seed=seed) for one in carried]
+        attempts = trainer.learn([Job(one, reference_settings(one.plan)) for one in boundaries], seed=seed)
+        judged = _search_at(trainer, boundaries[0], stream, s, seed)
+        for outcomes, attempt in zip(later.values(), attempts):
+            outcomes.append(judged.outcome(attempt, judged.Z, judged.y).all)
+    return later
+
+
+def _search(search, box, space_filled, proposed, seed):
+    settings = box.from_unit(space_filling(space_filled, box.n_dimensions, seed=seed))
+    scores = search.evaluate(settings)
+    if proposed:
+        run_search(search.evaluate, box, strategy="tpe", attempts=space_filled + proposed,
+                   earlier=list(zip(settings, scores)), seed=seed)
+    return ["space_filling"] * space_filled + ["tpe"] * proposed
+
+
+def _record(search, strategies, later, descriptors):
+    boundary = search.boundary
+    attempts = []
+    for place, (attempt, strategy, outcome) in enumerate(zip(search.attempts, strategies, search.outcomes)):
+        after_one, after_two = (*later.get(place, ()), None, None)[:2]
+        attempts.append(AttemptRecord(attempt.settings, strategy, outcome.old, outcome.new, outcome.diverged,
+                                      outcome.operations, after_one, after_two))
+    return BoundaryRecord(boundary.number, boundary.n_old, boundary.n_classes - boundary.n_old, boundary.most_kept,
+                          descriptors, attempts)
+
+
+def _continued(outcomes, rng):
+    """Place of the attempt to go on from: the best half of the time, else one of the best quarter."""
+    order = np.argsort([-one.all for one in outcomes], kind="stable")
+    return int(order[0] if rng.random() < 0.5 else order[rng.integers(max(len(order) // 4, 1))])
+
+
+def _stratified(increment, most, seed):
+    """At most `most` rows, the same number of each class as far as it goes."""
+    if len(increment) <= most:
+        return increment
+    rng = np.random.default_rng(seed)
+    order = rng.permutation(len(increment))
+    labels = np.unique(increment.y)
+    per_class = max(most // len(labels), 1)
+    rows = np.concatenate([order[increment.y[order] == label][:per_class] for label in labels])
+    return Increment(increment.X[rows], increment.y[rows])
