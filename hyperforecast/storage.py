@@ -252,3 +252,29 @@ def read_bundle_folder(folder, kind, *, newest):
         raise
     except (KeyError, ValueError, TypeError, OverflowError) as error:
         raise InputError(folder, f"must be a complete {kind}", error, "copy it again from the source") from None
+
+
+def stored_array(arrays, name, *, kinds, shape):
+    """Return the array `name` of a bundle, checked before use.
+
+    Parameters
+    ----------
+    arrays : dict of str to ndarray
+    name : str
+    kinds : str
+        The dtype kinds it may have, e.g. "iu" for whole numbers.
+    shape : tuple
+        The lengths it must have; None where any will do.
+
+    Raises
+    ------
+    InputError
+        If it is absent, of another kind or of another shape.
+    """
+    array = arrays.get(name)
+    if not isinstance(array, np.ndarray) or array.dtype.kind not in kinds:
+        raise InputError(name, f"must be an array of dtype kind {' or '.join(kinds)}", getattr(array, "dtype", "none"))
+    fits = array.ndim == len(shape) and all(want in (None, have) for want, have in zip(shape, array.shape))
+    if not fits:
+        raise InputError(name, f"must have the shape {shape}", array.shape)
+    return array

@@ -1,0 +1,184 @@
+"""How far a boundary lies from the records a forecaster was fitted on."""
+
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+
+from hyperforecast.checks import InputError
+from hyperforecast.storage import stored_array
+
+RANGE = (0.005, 0.995)  # quantiles of the records between which a descriptor is in range
+REFERENCE_ROWS = 400
+NEIGHBOURS = 5
+FAMILIAR_SHARE = 0.05  # a boundary is familiar if at least this share of the records lies as far out
+NORMAL_IQR = 1.349  # interquartile range of the standard normal distribution
+ROUNDING = 1e-9  # a descriptor that varies by a smaller share of its size is constant
+
+
+class OutOfRange(NamedTuple):
+    """A descriptor that lies outside the records' range (their 0.5% and 99.5% quantiles)."""
+
+    name: str
+    value: float
+    low: float
+    high: float
+
+
+@dataclass(frozen=True)
+class FamiliarityVerdict:
+    """How familiar a boundary is.
+
+    Attributes
+    ----------
+    score : float in [0, 1]
+        Share of the reference records that were at least as far from records of another source as this
+        boundary is from all of them; 1 is utterly typical.
+    familiar : bool
+        Whether the score is at least `FAMILIAR_SHARE`.
+    out_of_range : list of OutOfRange
+        The descriptors outside their range, the farthest first (in the records' spreads).
+    distance : float
+        Mean distance to the `NEIGHBOURS` nearest reference records.
+    """
+
+    score: float
+    familiar: bool
+    out_of_range: list
+    distance: float
+
+
+@dataclass(frozen=True, eq=False)
+class Familiarity:
+    """What is needed to judge how familiar a boundary's descriptors are.
+
+    Distances are root mean squares over the descriptors, each centred on its median, divided by its
+    spread and passed through arcsinh, so that one wild descriptor tells without drowning the others.
+    A missing descriptor is imputed with the centre, and differs by one more spread from a known one.
+    A descriptor that no record knows is left out. Calibration distances are from each reference record
+    to those of other sources, since a new boundary is of another source than all records.
+
+    Attributes
+    ----------
+    names : ndarray of shape (F,), text
+        Descriptors.
+    low, high, centre, scale : ndarray of shape (F,), float64
+        Range, median and spread of each descriptor; NaN where no record knows it.
+    reference : ndarray of shape (R, F), float32
+        Standardized descriptors of some records, as many of each source as there are; NaN where missing.
+    distances : ndarray of shape (R,), float32
+        Calibration distances, ascending.
+    """
+
+    names: np.ndarray
+    low: np.ndarray
+    high: np.ndarray
+    centre: np.ndarray
+    scale: np.ndarray
+    reference: np.ndarray
+    distances: np.ndarray
+
+    @classmethod
+    def fit(cls, D, names, sources, *, seed):
+        """Return the familiarity of records.
+
+        Parameters
+        ----------
+        D : array-like of shape (n, F)
+            Descriptors, NaN where missing.
+        names : sequence of F str
+        sources : array-like of shape (n,)
+            The source of each record; at least two sources.
+        seed : int
+            Chooses the reference records.
+        """
+        D, names, sources = np.asarray(D, np.float64), np.asarray(names, np.str_), np.asarray(sources)
+        if D.ndim != 2 or D.shape[1:] != names.shape or 0 in D.shape or np.isinf(D).any():
+            raise InputError("D", f"must be rows of {len(names)} descriptors, finite or NaN", f"shape {D.shape}")
+        if sources.shape != D.shape[:1] or len(np.unique(sources)) < 2:
+            raise InputError("sources", "must name each record's source, two at least", f"shape {sources.shape}")
+        low, high, centre, scale = np.full((4, D.shape[1]), np.nan)
+        for f, column in enumerate(D.T):
+            known = column[~np.isnan(column)]
+            if len(known):
+                low[f], lower, centre[f], upper, high[f] = np.quantile(known, (RANGE[0], .25, .5, .75, RANGE[1]))
+                # A descriptor that is nearly always the same has no quartiles apart.
+                spread = (upper - lower) / NORMAL_IQR or known.std()
+                scale[f] = spread if spread > ROUNDING * abs(centre[f]) else 1.0
+        chosen = _balanced_choice(sources, np.random.default_rng(seed))
+        reference = _standardize(D[chosen], centre, scale)
+        own = sources[chosen]
+        distances = _neighbour_distances(reference, reference, allowed=own[:, None] != own)
+        return cls(names, low, high, centre, scale, reference, np.sort(distances))
+
+    def assess(self, vector):
+        """Return the `FamiliarityVerdict` of descriptors (F,), NaN where missing."""
+        vector = np.asarray(vector, np.float64)
+        if vector.shape != self.names.shape or np.isinf(vector).any():
+            raise InputError("vector", f"must hold {len(self.names)} descriptors, finite or NaN", f"shape {vector.shape}")
+        row = _standardize(vector[None], self.centre, self.scale)
+        distance = _neighbour_distances(row, self.reference)[0]
+        score = float(np.mean(self.distances >= distance))
+        excess = np.maximum(self.low - vector, vector - self.high) / self.scale
+        outside = sorted(np.flatnonzero(excess > 0), key=lambda f: -excess[f])
+        return FamiliarityVerdict(
+            score=score, familiar=score >= FAMILIAR_SHARE, distance=float(distance),
+            out_of_range=[OutOfRange(str(self.names[f]), float(vector[f]), float(self.low[f]), float(self.high[f]))
+                          for f in outside])
+
+    def to_arrays(self, prefix):
+        """Return the parts as a dict of arrays whose names begin with `prefix`."""
+        return {f"{prefix}{name}": getattr(self, name) for name in self.__dataclass_fields__}
+
+    @classmethod
+    def from_arrays(cls, arrays, prefix):
+        """Return the familiarity in arrays of `to_arrays`; `InputError` if they hold none."""
+        def read(name, kinds, *shape):
+            return stored_array(arrays, prefix + name, kinds=kinds, shape=shape)
+
+        def require(name, proper, rule):
+            if not np.all(proper):
+                raise InputError(prefix + name, rule, "other values")
+
+        names = read("names", "U", None)
+        low, high, centre, scale = (read(name, "f", len(names)) for name in ("low", "high", "centre", "scale"))
+        reference = read("reference", "f", None, len(names))
+        distances = read("distances", "f", len(reference))
+        unknown = np.isnan(centre)
+        for name, values in (("low", low), ("high", high), ("centre", centre), ("scale", scale)):
+            require(name, np.where(unknown, np.isnan(values), np.isfinite(values)), "must be finite, or NaN as the centre")
+        require("high", unknown | (low <= high), "must not be below low")
+        require("scale", unknown | (scale > 0), "must be above 0")
+        require("reference", len(reference) > 0 and not np.isinf(reference).any(), "must hold rows, finite or NaN")
+        require("distances", np.isfinite(distances) & (distances >= 0), "must be finite, at least 0")
+        return cls(names, low, high, centre, scale, reference, distances)
+
+
+def _balanced_choice(sources, rng):
+    """Return the indices of at most `REFERENCE_ROWS` random records, as evenly from the sources as can be."""
+    shuffled = rng.permutation(len(sources))
+    turn = np.empty(len(sources))
+    for source in np.unique(sources):
+        own = shuffled[sources[shuffled] == source]
+        turn[own] = np.arange(len(own))
+    return np.sort(shuffled[np.argsort(turn[shuffled], kind="stable")[:REFERENCE_ROWS]])
+
+
+def _standardize(D, centre, scale):
+    with np.errstate(over="ignore"):
+        spreads = np.clip((D - centre) / scale, -1e300, 1e300)
+    return np.arcsinh(spreads).astype(np.float32)
+
+
+def _neighbour_distances(rows, reference, allowed=True):
+    """Return the mean distance from each row (n, F) to its nearest allowed (n, R) reference rows (R, F)."""
+    def embed(Z):
+        missing = np.isnan(Z)
+        return np.hstack([np.where(missing, np.float32(0), Z), missing.astype(np.float32)])
+
+    a, b = embed(rows), embed(reference)
+    squares = (a * a).sum(axis=1)[:, None] + (b * b).sum(axis=1) - 2 * a @ b.T
+    apart = np.where(allowed, np.sqrt(np.maximum(squares, 0) / rows.shape[1]), np.inf)
+    nearest = np.sort(apart, axis=1)[:, :NEIGHBOURS]
+    near = np.isfinite(nearest)
+    return np.where(near, nearest, 0).sum(axis=1) / near.sum(axis=1)
