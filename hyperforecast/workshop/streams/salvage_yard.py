@@ -5,12 +5,14 @@ take; a camera looks down on the belt; the lamp ages from delivery to delivery, 
 dimmer, flatter and noisier later on. The pictures are drawn, not measured: they train nothing, and no
 records are gathered on them.
 
-Read `draw_parts` first: it poses, wears and lights the shapes that the small functions above it define.
+Read from the bottom: `salvage_yard_stream` deals the parts, `part_features` is what the cell computes,
+`draw_parts` poses, wears and lights the shapes that the small functions at the top define.
 """
 
 import numpy as np
 
 from hyperforecast.checks import check_choice, check_number, check_whole
+from hyperforecast.workshop.streams.stream import Collection, Stream, generator
 
 SIDE = 32
 DELIVERIES = (
@@ -22,6 +24,9 @@ DELIVERIES = (
     ("wedge anchor", "U-bolt", "wood screw"),
 )
 FAMILIES = tuple(family for delivery in DELIVERIES for family in delivery)
+PARTS_PER_FAMILY = 250
+N_ORIENTATIONS = 8
+N_CELLS = 3
 
 _FINE = 2 * SIDE  # points per side at which shapes are sampled before they are averaged to pixels
 _CHUNK = 128
@@ -289,8 +294,9 @@ def draw_parts(family, n, *, lamp_age, seed, wear=1.0):
         One of `FAMILIES`.
     n : int
     lamp_age : float in [0, 1]
-        0 is a new lamp, 1 one that is due for replacement: dimmer, dying from one end, seen through a dusty glass.
-    seed : int or sequence of int
+        0 is a new lamp, 1 one that is due for replacement: dimmer, warmer, dying from one end, and seen through
+        a dusty glass by a camera that has to amplify.
+    seed : int, 0 or more
     wear : float in [0, 1]
         The most wear that a part may show: 0 is factory new; 1 allows gnawed edges, rust and bits broken off.
 
@@ -299,18 +305,22 @@ def draw_parts(family, n, *, lamp_age, seed, wear=1.0):
     ndarray of shape (n, 32, 32), float32
         Grey levels in [0, 1].
     """
+    check_number("lamp_age", lamp_age, low=0.0, high=1.0)
+    return _light(_lay_parts(family, n, seed, wear), lamp_age, generator(seed, "light", family))
+
+
+def _lay_parts(family, n, seed, wear=1.0):
+    """Return what n parts and the belt reflect of cold and of warm light, shape (n, 2, side, side)."""
     check_choice("family", family, FAMILIES)
     check_whole("n", n, low=1)
-    lamp_age = check_number("lamp_age", lamp_age, low=0.0, high=1.0)
-    wear = check_number("wear", wear, low=0.0, high=1.0)
-    rng = np.random.default_rng([*np.atleast_1d(seed).tolist(), FAMILIES.index(family)])
-    pictures = [
-        _draw(_SHAPES[family], min(_CHUNK, n - start), lamp_age, wear, rng) for start in range(0, n, _CHUNK)
-    ]
-    return np.concatenate(pictures)
+    check_number("wear", wear, low=0.0, high=1.0)
+    rng = generator(check_whole("seed", seed), "parts", family)
+    return np.concatenate([
+        _lay_chunk(_SHAPES[family], min(_CHUNK, n - start), wear, rng) for start in range(0, n, _CHUNK)
+    ])
 
 
-def _draw(shape, n, lamp_age, wear, rng):
+def _lay_chunk(shape, n, wear, rng):
     def vary(low, high):
         return rng.uniform(low, high, (n, 1, 1)).astype(np.float32)
 
@@ -320,25 +330,23 @@ def _draw(shape, n, lamp_age, wear, rng):
     x = (np.cos(turn) * right + np.sin(turn) * down) / size
     y = (np.cos(turn) * down - np.sin(turn) * right) / size
     distance, tone = (np.asarray(values, dtype=np.float32) for values in shape(x, y, vary))
-    worn = wear * rng.beta(1.2, 2.0, (n, 1, 1)).astype(np.float32)
-    distance = distance + 0.1 * worn * _clouds(rng, n, 12) - 0.02 * worn
-    distance = _without(distance, _bites(x, y, distance, worn, rng))
-    coverage = np.clip(0.5 - distance * size * (_FINE / 4), 0.0, 1.0)
 
-    # A bevel catches the light that falls from the upper left.
+    worn = np.float32(wear) * rng.beta(1.2, 2.0, (n, 1, 1)).astype(np.float32)
+    distance = distance + worn * (0.1 * _clouds(rng, n, 12) - 0.02)
+    distance = _without(distance, _bite(x, y, distance, worn, rng))
+    coverage = np.clip(0.5 - distance * size * (_FINE / 4), 0.0, 1.0)
+    rust = np.clip(3 * (_clouds(rng, n, 16) + _clouds(rng, n, 6) - 1.35 + 0.9 * worn), 0.0, 1.0) * (worn > 0)
+
+    # Bevelled edges catch the light that falls from the upper left; the shadow lies to the lower right.
     height = np.clip(-distance / 0.09, 0.0, 1.0)
     slope = np.gradient(height, axis=1) + np.gradient(height, axis=2)
-    rust = np.clip(3.0 * (_clouds(rng, n, 16) + _clouds(rng, n, 6) - 1.35 + 0.9 * worn), 0.0, 1.0) * (worn > 0.02)
-    metal = vary(0.62, 0.86) * tone * (1.0 + 0.55 * slope)
-    # Rust is brown: a lamp that has grown warm hardly shows it.
-    metal = metal * (1.0 - (0.62 - 0.3 * lamp_age) * rust)
-    belt = vary(0.16, 0.26) + 0.04 * _clouds(rng, n, 20)
-    # A soft shadow to the lower right.
+    metal = vary(0.62, 0.86) * tone * (1 + 0.55 * slope)
     shadow = np.clip(0.5 - 4 * np.roll(distance, (3, 3), (1, 2)), 0.0, 1.0)
-    belt = belt * (1.0 - 0.4 * shadow)
-    scene = belt + coverage * (metal - belt)
-    scene = scene.reshape(n, SIDE, 2, SIDE, 2).mean((2, 4))
-    return _light(scene, lamp_age, rng)
+    belt = (vary(0.16, 0.26) + 0.04 * _clouds(rng, n, 20)) * (1 - 0.4 * shadow)
+
+    # Rust is brown: dark in cold light, much less so in warm light.
+    layers = [belt + coverage * (metal * (1 - darkness * rust) - belt) for darkness in (0.62, 0.32)]
+    return np.stack(layers, axis=1).reshape(n, 2, SIDE, 2, SIDE, 2).mean((3, 5))
 
 
 def _clouds(rng, n, cells):
@@ -349,7 +357,7 @@ def _clouds(rng, n, cells):
     return weights @ grid @ weights.T
 
 
-def _bites(x, y, distance, worn, rng):
+def _bite(x, y, distance, worn, rng):
     """Return the distance to a disc on each part's outline: the bit that broke off, larger on worn parts."""
     n = len(x)
     spots = rng.integers(0, _FINE**2, (n, 24))
@@ -359,18 +367,14 @@ def _bites(x, y, distance, worn, rng):
     return _disc(x, y, 0.3 * np.maximum(worn - 0.35, 0.0), cx, cy) + 1e-3
 
 
-def _light(scene, lamp_age, rng):
-    """Return what the camera sees of scenes (n, side, side) under a lamp of that age, in [0, 1]."""
-    n = len(scene)
+def _light(reflected, lamp_age, rng):
+    """Return what the camera sees, (n, side, side) in [0, 1], of parts that `_lay_parts` laid."""
+    scene = (1 - lamp_age) * reflected[:, 0] + lamp_age * reflected[:, 1]
     across = np.linspace(-1, 1, SIDE, dtype=np.float32)
-    flicker = rng.normal(1.0, 0.04, (n, 1, 1)).astype(np.float32)
-    gain = flicker * (1.0 - 0.5 * lamp_age) * (1.0 - (0.05 + 0.4 * lamp_age) * across)
+    flicker = rng.normal(1.0, 0.04, (len(scene), 1, 1)).astype(np.float32)
+    gain = flicker * (1 - 0.5 * lamp_age) * (1 - (0.05 + 0.4 * lamp_age) * across)
     noise = rng.standard_normal(scene.shape, dtype=np.float32)
     return np.clip(gain * scene + 0.1 * lamp_age + (0.015 + 0.03 * lamp_age) * noise, 0.0, 1.0)
-
-
-N_ORIENTATIONS = 8
-N_CELLS = 3
 
 
 def part_features(images):
@@ -386,8 +390,8 @@ def part_features(images):
     Returns
     -------
     ndarray of shape (n, 90), float32
-        For each of 3 x 3 overlapping regions, the gradient's magnitude in 8 orientations, then the grey
-        level's mean and standard deviation.
+        Ten maps of 3 x 3 overlapping regions: the gradient's magnitude in 8 orientations, the grey level's
+        mean, and its standard deviation.
     """
     images = np.asarray(images, dtype=np.float32)
     across, down = np.zeros_like(images), np.zeros_like(images)
@@ -411,3 +415,48 @@ def _pool(layer):
     weights = np.clip(1.0 - abs(at - np.arange(N_CELLS, dtype=np.float32)[:, None]), 0.0, 1.0)
     weights /= weights.sum(1, keepdims=True)
     return (weights @ layer @ weights.T).reshape(len(layer), -1)
+
+
+def lamp_age_at(t):
+    """Return the age of the lamp when delivery t arrives: new at first, due for replacement at the last."""
+    return t / (len(DELIVERIES) - 1)
+
+
+def salvage_yard_stream(seed):
+    """Return the whole scenario as a `Stream`: six deliveries of three families, features of `part_features`.
+
+    Held-out parts, too, are seen under the lamp of the boundary at which they are asked for.
+
+    Parameters
+    ----------
+    seed : int, 0 or more
+        Of the parts, the light and the split.
+    """
+    reflected = np.concatenate([_lay_parts(family, PARTS_PER_FAMILY, seed) for family in FAMILIES])
+    parts = Collection(reflected.reshape(len(reflected), -1), np.repeat(FAMILIES, PARTS_PER_FAMILY))
+
+    def camera(X, t, rng):
+        return part_features(_light(X.reshape(-1, 2, SIDE, SIDE), lamp_age_at(t), rng))
+
+    return Stream(parts, DELIVERIES, name="salvage yard", source="salvage yard", seed=seed, sensor=camera)
+
+
+def delivery_pictures(t, n, *, seed):
+    """Return n pictures of each family in delivery t as they looked on arrival, for people to look at.
+
+    Parameters
+    ----------
+    t : int from 0 to 5
+    n : int from 1 to 250
+    seed : int, 0 or more
+        The stream's: the parts are its parts, some of them held out.
+
+    Returns
+    -------
+    dict of str to ndarray of shape (n, 32, 32), float32
+    """
+    check_whole("t", t, high=len(DELIVERIES) - 1)
+    check_whole("n", n, low=1, high=PARTS_PER_FAMILY)
+    return {
+        family: draw_parts(family, PARTS_PER_FAMILY, lamp_age=lamp_age_at(t), seed=seed)[:n] for family in DELIVERIES[t]
+    }
