@@ -14,6 +14,7 @@ from hyperforecast.storage import stored_array
 
 MISSING_TYPES = ("None", "Zero", "NaN")
 TINY = float(np.float32(1e-35))  # LightGBM takes smaller numbers for zero
+LARGEST = 1e300  # stands for infinity in a dump: a split that parts numbers from NaN
 ROWS_AT_ONCE = 512
 
 
@@ -206,7 +207,7 @@ class TreeEnsemble:
         """Return whether each of the S splits sends each of n rows left: (S, n) booleans."""
         X = X.T
         nan = np.isnan(X)
-        X = np.where(nan | (np.abs(X) <= TINY), 0.0, X)
+        X = np.where(nan | (np.abs(X) <= TINY), 0.0, np.clip(X, -LARGEST, LARGEST))
         is_missing = np.stack([np.zeros_like(nan), X == 0, nan])  # in the order of MISSING_TYPES
         goes_left = X[self.feature] <= self.threshold[:, None]
         return np.where(is_missing[self.missing, self.feature], self.default_left[:, None], goes_left)
