@@ -181,4 +181,4 @@ def _neighbour_distances(rows, reference, allowed=True):
     apart = np.where(allowed, np.sqrt(np.maximum(squares, 0) / rows.shape[1]), np.inf)
     nearest = np.sort(apart, axis=1)[:, :NEIGHBOURS]
     near = np.isfinite(nearest)
-    return np.where(near, nearest, 0).sum(axis=1) / near.sum(axis=1)
+    return (np.where(near, nearest, 0).sum(axis=1) / near.sum(axis=1)).astype(np.float32)
