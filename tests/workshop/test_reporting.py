@@ -50,7 +50,7 @@ def _every_chart(name):
     shares = np.linspace(0.9, 0.5, 5)
     points = np.stack([shares, shares - 0.1, shares + 0.1, shares[::-1]], axis=1)
     return [
-        charts.line_chart(name, {name: shares, "_second": [np.nan, *shares[1:]]}, y_label=name, x_label=name, shares=True),
+        charts.line_chart(name, {name: shares, "_b": [np.nan, *shares[1:]]}, y_label=name, x_label=name, shares=True),
         charts.line_chart(name, {name: [1e-4, 1e-2, 1e-3]}, y_label=name, logarithmic=True, first=2),
         charts.expected_and_achieved(name, {name: points, "new classes": points[:0]}),
         charts.interval_chart(name, [name] * 5, {name: points[:, :3], "other": points[:, :3] - 1}, x_label=name),
@@ -138,11 +138,9 @@ def test_charts_are_the_same_each_time():
 
 def _points(drawing):
     """Positions of the markers, from the SVG: (x, y) of every <use>, rightwards and downwards."""
-    ticks = {use for group in drawing.iter("g") if re.match("[xy]tick", group.get("id", "")) for use in group.iter("use")}
-    keys = {use for group in drawing.iter("g") if "legend" in group.get("id", "") for use in group.iter("use")}
-    return np.array([
-        (float(use.get("x")), float(use.get("y"))) for use in drawing.iter("use") if use not in ticks | keys
-    ])
+    groups = [group for group in drawing.iter("g") if re.match("[xy]tick|legend", group.get("id", ""))]
+    others = {use for group in groups for use in group.iter("use")}
+    return np.array([(float(use.get("x")), float(use.get("y"))) for use in drawing.iter("use") if use not in others])
 
 
 def test_lines_go_where_the_numbers_say():
@@ -177,8 +175,8 @@ def test_search_curve_keeps_the_best():
 
 
 def test_lines_differ_without_colour():
-    names = [f"policy {number}" for number in range(8)]
-    drawing = charts.line_chart("t", {name: [number, number + 1] for number, name in enumerate(names)}, y_label="y").drawing
+    series = {f"policy {number}": [number, number + 1] for number in range(8)}
+    drawing = charts.line_chart("t", series, y_label="y").drawing
     dashes = set()
     for path in drawing.iter("path"):
         style = path.get("style", "")

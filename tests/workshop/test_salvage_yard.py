@@ -4,7 +4,9 @@ import numpy as np
 import pytest
 
 from hyperforecast.checks import InputError
-from hyperforecast.workshop.streams.salvage_yard import DELIVERIES, FAMILIES, draw_parts, part_features
+from hyperforecast.workshop.streams.salvage_yard import (
+    DELIVERIES, FAMILIES, delivery_pictures, draw_parts, lamp_age_at, part_features, salvage_yard_stream,
+)
 
 
 @pytest.fixture(scope="module")
@@ -34,11 +36,6 @@ def test_same_seed_same_pictures_other_seed_others():
     other = draw_parts("washer", 130, lamp_age=0.4, seed=6)
     # Not one picture comes twice, within a draw or between seeds.
     assert len(np.unique(np.concatenate([first, other]).reshape(260, -1), axis=0)) == 260
-
-
-def test_seed_may_be_a_sequence():
-    one, other = (draw_parts("hook", 1, lamp_age=0.0, seed=(5, t)) for t in (0, 1))
-    assert not np.array_equal(one, other)
 
 
 def test_ageing_lamp_dims_flattens_and_fades_to_one_side():
@@ -99,3 +96,51 @@ def test_features_see_orientation():
 def test_unknown_part_lamp_or_wear_is_refused(family, lamp_age, wear):
     with pytest.raises(InputError, match="must be"):
         draw_parts(family, 1, lamp_age=lamp_age, seed=0, wear=wear)
+
+
+@pytest.mark.parametrize("t, n, seed", [(6, 1, 0), (0, 0, 0), (0, 251, 0), (0, 1, -1)])
+def test_unknown_delivery_is_refused(t, n, seed):
+    with pytest.raises(InputError, match="whole number"):
+        delivery_pictures(t, n, seed=seed)
+
+
+def test_delivery_pictures_show_the_new_families_under_the_lamp_of_the_day():
+    ages = [lamp_age_at(t) for t in range(6)]
+    assert ages[0] == 0.0 and ages == sorted(set(ages)) and ages[-1] <= 1.0
+    pictures = delivery_pictures(4, 3, seed=9)
+    assert tuple(pictures) == DELIVERIES[4]
+    for family, shown in pictures.items():
+        assert np.array_equal(shown, draw_parts(family, 250, lamp_age=ages[4], seed=9)[:3])
+
+
+@pytest.fixture(scope="module")
+def stream():
+    return salvage_yard_stream(4)
+
+
+def test_stream_brings_each_delivery_once_and_judges_on_all_seen(stream):
+    assert stream.n_boundaries == 6
+    for t in range(6):
+        training, scoring, selection = stream.training(t), stream.scoring(t), stream.selection(t)
+        assert set(training.y) == set(DELIVERIES[t]) and len(training) == 3 * 100
+        for held_out in (scoring, selection):
+            families, counts = np.unique(held_out.y, return_counts=True)
+            assert set(families) == set(FAMILIES[:3 * t + 3]) and set(counts) == {50}
+        assert training.X.shape[1] == scoring.X.shape[1] == 90
+
+
+def test_stream_is_seeded(stream):
+    again, other = salvage_yard_stream(4), salvage_yard_stream(5)
+    assert np.array_equal(stream.training(2).X, again.training(2).X)
+    assert np.array_equal(stream.scoring(3).X, again.scoring(3).X)
+    assert not np.array_equal(stream.training(2).X, other.training(2).X)
+
+
+def test_held_out_parts_are_seen_under_the_lamp_of_the_time(stream):
+    def spread_of_first_families(t):
+        scoring = stream.scoring(t)
+        return scoring.X[np.isin(scoring.y, DELIVERIES[0]), 81:].mean()
+
+    # The standard deviation of grey levels within regions, the last nine features, falls as the lamp dims.
+    spreads = [spread_of_first_families(t) for t in range(6)]
+    assert spreads == sorted(spreads, reverse=True) and spreads[5] < 0.9 * spreads[0]

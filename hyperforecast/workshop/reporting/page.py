@@ -129,7 +129,7 @@ class Page:
         rows = [list(row) for row in rows]
         numeric = [any(isinstance(row[at], numbers.Number) for row in rows) for at in range(len(columns))]
         classes = [' class="number"' if number else "" for number in numeric]
-        head = "".join(f'<th scope="col"{kind}>{_escaped(name)}</th>' for kind, name in zip(classes, columns, strict=True))
+        head = "".join(f'<th scope="col"{kind}>{_escaped(name)}</th>' for kind, name in zip(classes, columns))
         body = ""
         for row in rows:
             cells = [f"<td{kind}>{_escaped(value)}</td>" for kind, value in zip(classes[1:], row[1:], strict=True)]

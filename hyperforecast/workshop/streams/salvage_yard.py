@@ -25,6 +25,7 @@ DELIVERIES = (
 )
 FAMILIES = tuple(family for delivery in DELIVERIES for family in delivery)
 PARTS_PER_FAMILY = 250
+OLDEST_LAMP = 0.3
 N_ORIENTATIONS = 8
 N_CELLS = 3
 
@@ -418,8 +419,8 @@ def _pool(layer):
 
 
 def lamp_age_at(t):
-    """Return the age of the lamp when delivery t arrives: new at first, due for replacement at the last."""
-    return t / (len(DELIVERIES) - 1)
+    """Return the age of the lamp when delivery t arrives: new at first, a good part of its life spent at the last."""
+    return OLDEST_LAMP * t / (len(DELIVERIES) - 1)
 
 
 def salvage_yard_stream(seed):
