@@ -17,6 +17,8 @@ OPENING = {"learning_rate": 0.02, "regularization": 1.0, "kept_per_class": 20}
 # Settings of the boundaries that follow, where later outcomes are recorded.
 REFERENCE = {"ewc": (1e-3, 10.0, None), "lwf": (0.01, 1.0, None), "icarl": (0.03, 1.0, 20), "wa": (0.03, 1.0, 20)}
 BEST_FOLLOWED, OTHERS_FOLLOWED = 4, 4
+# Attempts trained side by side, and TPE's proposals made at once.
+SIDE_BY_SIDE = 16
 # Mean cost of an attempt is capped: plans that would spend more operations get fewer passes.
 MOST_OPERATIONS = 1.2e9
 # Outcomes are measured on at most this many selection rows.
@@ -136,11 +138,10 @@ def _follow(trainer, stream, search, places, t, key):
 
 
 def _search(search, box, space_filled, proposed, seed):
-    settings = box.from_unit(space_filling(space_filled, box.n_dimensions, seed=seed))
-    scores = search.evaluate(settings)
-    if proposed:
-        run_search(search.evaluate, box, strategy="tpe", attempts=space_filled + proposed,
-                   earlier=list(zip(settings, scores)), seed=seed)
+    """Make the attempts of a boundary; return the strategy behind each."""
+    design = box.from_unit(space_filling(space_filled, box.n_dimensions, seed=seed))
+    run_search(search.evaluate, box, strategy="tpe", attempts=space_filled + proposed, batch=SIDE_BY_SIDE,
+               warm_starts=design, seed=seed)
     return ["space_filling"] * space_filled + ["tpe"] * proposed
 
 

@@ -1,0 +1,267 @@
+"""A fitted forecaster: expected outcomes of settings at a boundary, evaluated with numpy alone.
+
+A forecaster file is a bundle (`hyperforecast.storage`) of kind "forecaster": trees, familiarity data and facts.
+"""
+
+from dataclasses import dataclass
+from importlib import resources
+
+import numpy as np
+
+from hyperforecast.checks import InputError, check_choice
+from hyperforecast.forecasting.familiarity import Familiarity
+from hyperforecast.forecasting.intervals import interval
+from hyperforecast.forecasting.trees import TreeEnsemble
+from hyperforecast.settings import COORDINATES, METHODS, SCALES, Settings, SettingsBox, scale_free
+from hyperforecast.storage import Bundle, bundle_checksum, read_bundle_file, write_bundle_file
+
+KIND = "forecaster"
+VERSION = 1
+# What is forecast, in the order of the arrays: accuracy on old and on new classes.
+OUTCOMES = ("old", "new")
+RANGES = ("old", "new", "all")
+MODELS = (*OUTCOMES, "diverged", "later", *(f"spread_{name}" for name in RANGES))
+DIRECT_MODELS = ("learning_rate", "regularization", "kept_per_class")
+RANKINGS = ("outcome", "direct")
+
+
+@dataclass(frozen=True)
+class Expected:
+    """An expected accuracy and the 90% interval around it, arrays of one shape or floats in [0, 1]."""
+
+    value: np.ndarray
+    low: np.ndarray
+    high: np.ndarray
+
+    def at(self, place):
+        """Return the `Expected` of one candidate, as floats."""
+        return Expected(float(self.value[place]), float(self.low[place]), float(self.high[place]))
+
+    def as_dict(self):
+        """Return a JSON-able dict."""
+        return {"value": float(self.value), "low": float(self.low), "high": float(self.high)}
+
+
+@dataclass(frozen=True)
+class Constant:
+    """The best fixed choice over the records.
+
+    Attributes
+    ----------
+    kind : {"raw", "scale_free"}
+        Whether the numbers are settings, or settings relative to the boundary's scales: learning rate times
+        curvature of the new rows, and regularization times curvature of the anchor over curvature of the new rows.
+    learning_rate, regularization : float
+    kept_per_class : int or None
+    """
+
+    kind: str
+    learning_rate: float
+    regularization: float
+    kept_per_class: int | None
+
+    def settings(self, descriptors, box):
+        """Return the constant as `Settings` at a boundary, cut to the box; None if it needs a scale that is missing."""
+        rate, strength = self.learning_rate, self.regularization
+        if self.kind == "scale_free":
+            new, anchor = descriptors["curvature_new"], descriptors["curvature_new"] / descriptors["anchor_curvature"]
+            rate, strength = rate / new, strength * anchor
+            if not (np.isfinite(rate) and np.isfinite(strength) and rate > 0 and strength > 0):
+                return None
+        return box.from_unit(box.to_unit([Settings(rate, strength, self.kept_per_class)]))[0]
+
+    def as_dict(self):
+        """Return a JSON-able dict."""
+        return dict(self.__dict__)
+
+
+@dataclass(frozen=True)
+class Forecaster:
+    """Models of outcomes at boundaries of one method.
+
+    Attributes
+    ----------
+    method : str
+    descriptor_names : tuple of str
+        Descriptors that the models read, in order; the coordinates of `hyperforecast.settings` follow.
+    models : dict of str to TreeEnsemble
+        Those of `MODELS`, and of `DIRECT_MODELS` where they advise.
+    ranking : {"outcome", "direct"}
+        What orders candidates: the expected outcome, or nearness to directly forecast settings.
+    thresholds : dict of str to float
+        For each of `RANGES` the conformal threshold of errors over spread.
+    familiarity : Familiarity
+    raw_constant, scale_free_constant : Constant
+        The best fixed choices over the records, and
+    constant_kind : {"raw", "scale_free"}
+        which of them does better there.
+    typical : ndarray of shape (F,)
+        Median of each descriptor over the records.
+    influential : tuple of str
+        Descriptors by their gain in the models of outcomes, greatest first.
+    recipe : dict
+        What made it: records, sources, seeds, versions, figures.
+    checksum : str
+        SHA-256 of the content.
+    """
+
+    method: str
+    descriptor_names: tuple
+    models: dict
+    ranking: str
+    thresholds: dict
+    familiarity: Familiarity
+    raw_constant: Constant
+    scale_free_constant: Constant
+    constant_kind: str
+    typical: np.ndarray
+    influential: tuple
+    recipe: dict
+    checksum: str = ""
+
+    def vector(self, descriptors):
+        """Return a dict of descriptors as the models' vector (F,); a name that is not there is missing (NaN)."""
+        return np.array([descriptors.get(name, np.nan) for name in self.descriptor_names], dtype=np.float64)
+
+    def constant_settings(self, descriptors, box):
+        """Return the best constant as `Settings` at a boundary."""
+        settings = self.scale_free_constant.settings(descriptors, box) if self.constant_kind == "scale_free" else None
+        return settings or self.raw_constant.settings(descriptors, box)
+
+    def at(self, descriptors):
+        """Return the `BoundaryForecast` for a dict of descriptors."""
+        return BoundaryForecast(self, descriptors)
+
+
+class BoundaryForecast:
+    """A forecaster at one boundary: its models with the descriptors filled in, so that only settings are left open.
+
+    Parameters
+    ----------
+    forecaster : Forecaster
+    descriptors : dict of str to float
+    """
+
+    def __init__(self, forecaster, descriptors):
+        self.forecaster, self.descriptors = forecaster, descriptors
+        vector = np.concatenate([forecaster.vector(descriptors), np.zeros(len(COORDINATES))])
+        fixed = np.arange(len(vector)) < len(forecaster.descriptor_names)
+        self._vector, self._fixed = vector, fixed
+        self._scales = {name: descriptors.get(name, np.nan) for name in SCALES}
+        self._restricted = {}
+
+    def _raw(self, model, coordinates):
+        if model not in self._restricted:
+            self._restricted[model] = self.forecaster.models[model].restrict(self._vector, self._fixed)
+        return self._restricted[model].predict(coordinates)
+
+    def coordinates(self, settings):
+        """Return the scale-free coordinates (n, G) of a list of `Settings` here."""
+        return scale_free(settings, self._scales)
+
+    def outcome(self, settings):
+        """Return {"old", "new", "all"}: expected accuracies (n,) of a list of `Settings`."""
+        coordinates = self.coordinates(settings)
+        expected = {name: np.clip(self._raw(name, coordinates), 0, 1) for name in OUTCOMES}
+        return {**expected, "all": combined(expected["old"], expected["new"], self.descriptors)}
+
+    def expected(self, settings):
+        """Return {"old", "new", "all"}: `Expected` with 90% intervals of a list of `Settings`, arrays (n,)."""
+        coordinates = self.coordinates(settings)
+        result = {}
+        for name, value in self.outcome(settings).items():
+            spread = np.exp(self._raw(f"spread_{name}", coordinates)) * self.forecaster.thresholds[name]
+            ends = interval(value - spread, value + spread, 0.0)
+            result[name] = Expected(value, ends.low, ends.high)
+        return result
+
+    def divergence(self, settings):
+        """Return the probability (n,) that each of a list of `Settings` diverges."""
+        return 1 / (1 + np.exp(-self._raw("diverged", self.coordinates(settings))))
+
+    def later(self, settings):
+        """Return how much more accuracy (n,) each settings leaves one and two boundaries later than it shows now.
+
+        The mean of both, relative to other good settings at this boundary.
+        """
+        return self._raw("later", self.coordinates(settings))
+
+    def direct(self, box):
+        """Return the directly forecast settings as a point (D,) of the unit cube of `box`."""
+        none = np.full((1, len(COORDINATES)), np.nan)
+        return np.array([self._raw(name, none)[0] for name in box.names])
+
+
+def combined(old, new, descriptors):
+    """Return the accuracy on all classes seen, every class alike, from that on old and on new ones."""
+    n_old, n_new = descriptors["classes_old"], descriptors["classes_new"]
+    return (n_old * old + n_new * new) / (n_old + n_new)
+
+
+def save_forecaster(path, forecaster):
+    """Write a forecaster file atomically; return its checksum."""
+    return write_bundle_file(path, _to_bundle(forecaster))
+
+
+def _to_bundle(forecaster):
+    arrays = {"typical": forecaster.typical, **forecaster.familiarity.to_arrays("familiarity_")}
+    for name, model in forecaster.models.items():
+        arrays.update(model.to_arrays(f"{name}_"))
+    facts = {
+        "method": forecaster.method, "descriptor_names": list(forecaster.descriptor_names),
+        "coordinates": list(COORDINATES), "models": sorted(forecaster.models), "ranking": forecaster.ranking,
+        "thresholds": forecaster.thresholds, "raw_constant": forecaster.raw_constant.as_dict(),
+        "scale_free_constant": forecaster.scale_free_constant.as_dict(), "constant_kind": forecaster.constant_kind,
+        "influential": list(forecaster.influential), "recipe": forecaster.recipe,
+    }
+    return Bundle(KIND, VERSION, facts, arrays)
+
+
+def with_checksum(forecaster):
+    """Return the forecaster with the checksum that its file will have."""
+    return Forecaster(**{**forecaster.__dict__, "checksum": bundle_checksum(_to_bundle(forecaster))})
+
+
+def load_forecaster(source):
+    """Return the `Forecaster` in a file, or the one that ships for a method.
+
+    Parameters
+    ----------
+    source : str or Path
+        A method ("ewc", "lwf", "icarl", "wa"), or the path of a forecaster file.
+
+    Raises
+    ------
+    InputError
+        If the file is missing, damaged, or of another kind or version.
+    """
+    if source in METHODS:
+        with resources.as_file(resources.files("hyperforecast.models") / f"{source}.forecaster") as path:
+            return _load(path)
+    return _load(source)
+
+
+def _load(path):
+    bundle, checksum = read_bundle_file(path, KIND, newest=VERSION)
+    facts, arrays = bundle.facts, bundle.arrays
+    try:
+        if facts["coordinates"] != list(COORDINATES):
+            raise InputError(path, "must use this program's coordinates", ", ".join(facts["coordinates"]),
+                             "fit it again with this version")
+        models = {name: TreeEnsemble.from_arrays(arrays, f"{name}_") for name in facts["models"]}
+        n_features = len(facts["descriptor_names"]) + len(COORDINATES)
+        if any(model.n_features != n_features for model in models.values()) or not set(MODELS) <= set(models):
+            raise InputError(path, f"must hold models of {n_features} features", ", ".join(models))
+        constants = {kind: Constant(**facts[f"{kind}_constant"]) for kind in ("raw", "scale_free")}
+        return Forecaster(
+            method=check_choice(f"{path} (method)", facts["method"], METHODS),
+            descriptor_names=tuple(facts["descriptor_names"]), models=models,
+            ranking=check_choice(f"{path} (ranking)", facts["ranking"], RANKINGS),
+            thresholds={name: float(facts["thresholds"][name]) for name in RANGES},
+            familiarity=Familiarity.from_arrays(arrays, "familiarity_"),
+            raw_constant=constants["raw"], scale_free_constant=constants["scale_free"],
+            constant_kind=facts["constant_kind"], typical=np.asarray(arrays["typical"], np.float64),
+            influential=tuple(facts["influential"]), recipe=facts["recipe"], checksum=checksum,
+        )
+    except (KeyError, TypeError, AttributeError) as error:
+        raise InputError(path, "must be a complete forecaster", error, "copy it again from the source") from None

@@ -1,0 +1,120 @@
+"""Records of one method as arrays. Letters: B boundaries, F descriptors, N attempts, G coordinates, D settings."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from hyperforecast.checks import InputError
+from hyperforecast.describing import DESCRIPTORS
+from hyperforecast.settings import COORDINATES, SCALES, SettingsBox, scale_free
+
+
+@dataclass(frozen=True)
+class Dataset:
+    """Boundaries and their attempts.
+
+    Attributes
+    ----------
+    method : str
+    descriptors : ndarray of shape (B, F)
+        In the order of `hyperforecast.describing.DESCRIPTORS`, NaN where missing.
+    sources, trajectories : ndarrays of shape (B,), text
+    most_kept : ndarray of shape (B,), int
+    boundary : ndarray of shape (N,), int
+        Of each attempt.
+    coordinates : ndarray of shape (N, G)
+    points : ndarray of shape (N, D)
+        Settings in the unit cube of each boundary's box.
+    logs : ndarray of shape (N, D)
+        Natural logarithms of the settings.
+    old, new, all, after : ndarrays of shape (N,)
+        Outcomes; `after` is the mean accuracy one and two boundaries later, NaN where that was not followed.
+    diverged : ndarray of shape (N,), bool
+    """
+
+    method: str
+    descriptors: np.ndarray
+    sources: np.ndarray
+    trajectories: np.ndarray
+    most_kept: np.ndarray
+    boundary: np.ndarray
+    coordinates: np.ndarray
+    points: np.ndarray
+    logs: np.ndarray
+    old: np.ndarray
+    new: np.ndarray
+    all: np.ndarray
+    after: np.ndarray
+    diverged: np.ndarray
+
+    @property
+    def n_boundaries(self):
+        """Number of boundaries B."""
+        return len(self.sources)
+
+    def column(self, name):
+        """Return one descriptor over the boundaries, shape (B,)."""
+        return self.descriptors[:, list(DESCRIPTORS).index(name)]
+
+    def inputs(self, attempts=slice(None)):
+        """Return what outcome models read of some attempts: descriptors and coordinates, (n, F + G)."""
+        return np.hstack([self.descriptors[self.boundary[attempts]], self.coordinates[attempts]])
+
+    def best(self):
+        """Return the best accuracy on all classes at each boundary, shape (B,)."""
+        best = np.full(self.n_boundaries, -np.inf)
+        np.maximum.at(best, self.boundary, self.all)
+        return best
+
+    def without(self, source):
+        """Return the mask (B,) of the boundaries of other sources."""
+        return self.sources != source
+
+
+def load_dataset(records, method, *, without=()):
+    """Return the `Dataset` of one method in a `RecordsFile`.
+
+    Parameters
+    ----------
+    records : RecordsFile
+    method : str
+    without : sequence of str
+        Sources to leave out.
+
+    Raises
+    ------
+    InputError
+        If fewer than two sources remain.
+    """
+    names = list(DESCRIPTORS)
+    descriptors, sources, trajectories, most_kept = [], [], [], []
+    parts = {name: [] for name in ("boundary", "coordinates", "points", "logs", "old", "new", "all", "after", "diverged")}
+    for trajectory in records.trajectories(method=method):
+        if trajectory.source in without:
+            continue
+        for one in trajectory.boundaries:
+            settings = [attempt.settings for attempt in one.attempts]
+            box = SettingsBox(method, one.most_kept)
+            old = np.array([attempt.accuracy_old for attempt in one.attempts])
+            new = np.array([attempt.accuracy_new for attempt in one.attempts])
+            after = np.array([[attempt.after_one, attempt.after_two] for attempt in one.attempts], dtype=np.float64)
+            known = ~np.isnan(after)
+            parts["boundary"].append(np.full(len(settings), len(sources)))
+            parts["coordinates"].append(scale_free(settings, {name: one.descriptors[name] for name in SCALES}))
+            parts["points"].append(box.to_unit(settings))
+            parts["logs"].append(np.log([[getattr(one_, name) for name in box.names] for one_ in settings]))
+            parts["old"].append(old)
+            parts["new"].append(new)
+            parts["all"].append((one.classes_old * old + one.classes_new * new) / (one.classes_old + one.classes_new))
+            with np.errstate(invalid="ignore"):
+                parts["after"].append(np.where(known, after, 0).sum(axis=1) / known.sum(axis=1))
+            parts["diverged"].append(np.array([attempt.diverged for attempt in one.attempts]))
+            descriptors.append([one.descriptors.get(name, np.nan) for name in names])
+            sources.append(trajectory.source)
+            trajectories.append(trajectory.key)
+            most_kept.append(one.most_kept)
+    if len(set(sources)) < 2:
+        raise InputError(records.path, f"must hold {method} boundaries of at least two sources",
+                         ", ".join(sorted(set(sources))) or "none", "gather more")
+    return Dataset(method, np.array(descriptors, dtype=np.float64), np.array(sources), np.array(trajectories),
+                   np.array(most_kept), **{name: np.concatenate(arrays) for name, arrays in parts.items()})

@@ -1,0 +1,187 @@
+"""Fitting a forecaster: models from records, judged and calibrated on sources they were not fitted on."""
+
+from dataclasses import dataclass
+from importlib import metadata
+
+import numpy as np
+
+from hyperforecast.describing import DESCRIPTORS
+from hyperforecast.forecasting import (
+    Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
+)
+from hyperforecast.workshop.fitting.constants import constant_outcome, fit_constants
+from hyperforecast.workshop.fitting.models import (
+    best_attempts, source_weights, train, train_direct, train_outcomes,
+)
+
+RANGES = ("old", "new", "all")
+MISS_RATE = 0.1
+# Attempts of each boundary, best forecast first, whose errors calibrate the intervals: advice falls among them.
+CALIBRATED = 4
+# Errors smaller than this do not make an interval narrower.
+SMALLEST_ERROR = 0.005
+MOST_DIVERGENCE = 0.1
+
+
+@dataclass(frozen=True)
+class SourceFigures:
+    """What each way of choosing reached on the recorded attempts of one source that it was not fitted on.
+
+    Mean accuracy on all classes over `boundaries` boundaries: of the constant (estimated), of the attempts that the
+    outcome models and the direct regressors would choose, of the best attempt.
+    """
+
+    source: str
+    boundaries: int
+    constant: float
+    outcome: float
+    direct: float
+    best: float
+
+    def as_dict(self):
+        """Return a JSON-able dict."""
+        return dict(self.__dict__)
+
+
+@dataclass(frozen=True)
+class HeldOut:
+    """Forecasts of every attempt by models that were fitted without its source.
+
+    Attributes
+    ----------
+    forecast : dict of str to ndarray of shape (N,)
+        "old", "new" and "all".
+    divergence : ndarray of shape (N,)
+    direct : ndarray of shape (B, D)
+    figures : list of SourceFigures
+    """
+
+    forecast: dict
+    divergence: np.ndarray
+    direct: np.ndarray
+    figures: list
+
+    def gap_closed(self, way):
+        """Return sum(way - constant) / sum(best - constant) over sources, each counting alike."""
+        gained = sum(getattr(one, way) - one.constant for one in self.figures)
+        return gained / sum(one.best - one.constant for one in self.figures)
+
+
+def hold_out(dataset, *, seed, threads=2, progress=None):
+    """Return `HeldOut`: leave one source out in turn, fit on the others, forecast its attempts."""
+    n = len(dataset.all)
+    forecast = {name: np.full(n, np.nan) for name in RANGES}
+    divergence, direct = np.full(n, np.nan), np.full((dataset.n_boundaries, dataset.points.shape[1]), np.nan)
+    figures = []
+    for source in np.unique(dataset.sources):
+        others = dataset.without(source)
+        models = train_outcomes(dataset, others, seed=seed, threads=threads)
+        rows = np.flatnonzero(~others[dataset.boundary])
+        inputs = dataset.inputs(rows)
+        for name in ("old", "new"):
+            forecast[name][rows] = np.clip(models[name].predict(inputs), 0, 1)
+        divergence[rows] = models["diverged"].predict(inputs)
+        b = np.flatnonzero(~others)
+        unset = np.full((len(b), dataset.coordinates.shape[1]), np.nan)
+        settings = train_direct(dataset, others, seed=seed, threads=threads)
+        for d, model in enumerate(settings.values()):
+            direct[b, d] = model.predict(np.hstack([dataset.descriptors[b], unset]))
+        raw, scale_free, kind = fit_constants(dataset, others, seed=seed)
+        constant = constant_outcome(dataset, ~others, raw if kind == "raw" else scale_free)
+        forecast["all"][rows] = _combined(dataset, rows, forecast)
+        figures.append(_figures(dataset, source, rows, forecast["all"], divergence, direct, constant))
+        if progress:
+            progress(figures[-1])
+    return HeldOut(forecast, divergence, direct, figures)
+
+
+def fit_forecaster(dataset, *, recipe, seed=0, threads=2, progress=None):
+    """Return a `Forecaster` fitted on all boundaries of a dataset.
+
+    The way of choosing that does better on held-out sources ranks candidates; their errors calibrate the intervals.
+
+    Parameters
+    ----------
+    dataset : Dataset
+    recipe : dict
+        What else should be told of its making.
+    seed, threads : int
+    progress : callable, optional
+        Called with the `SourceFigures` of each held-out source.
+    """
+    held = hold_out(dataset, seed=seed, threads=threads, progress=progress)
+    everything = np.ones(dataset.n_boundaries, bool)
+    boosters = train_outcomes(dataset, everything, seed=seed, threads=threads)
+    ranking = "outcome" if held.gap_closed("outcome") >= held.gap_closed("direct") else "direct"
+    if ranking == "direct":
+        boosters.update(train_direct(dataset, everything, seed=seed, threads=threads))
+    thresholds = {}
+    for name in RANGES:
+        boosters[f"spread_{name}"], thresholds[name] = _calibrate(dataset, held, name, seed=seed, threads=threads)
+    raw, scale_free, kind = fit_constants(dataset, everything, seed=seed)
+    names = tuple(DESCRIPTORS)
+    gain = sum(booster.feature_importance("gain") for booster in (boosters["old"], boosters["new"]))
+    order = np.argsort(-gain[:len(names)], kind="stable")
+    sources, counts = np.unique(dataset.sources, return_counts=True)
+    with np.errstate(all="ignore"):
+        typical = np.array([np.nanmedian(column) if np.isfinite(column).any() else np.nan
+                            for column in dataset.descriptors.T])
+    forecaster = Forecaster(
+        method=dataset.method, descriptor_names=names,
+        models={name: TreeEnsemble.from_dump(booster.dump_model()) for name, booster in boosters.items()},
+        ranking=ranking, thresholds=thresholds,
+        familiarity=Familiarity.fit(dataset.descriptors, names, dataset.sources, seed=seed),
+        raw_constant=raw, scale_free_constant=scale_free, constant_kind=kind, typical=typical,
+        influential=tuple(names[place] for place in order[:20]),
+        recipe={
+            **recipe, "seed": seed, "boundaries": {str(s): int(n) for s, n in zip(sources, counts)},
+            "attempts": len(dataset.all), "held_out": [one.as_dict() for one in held.figures],
+            "gap_closed": {way: round(held.gap_closed(way), 4) for way in ("outcome", "direct")},
+            "versions": {package: metadata.version(package) for package in ("hyperforecast", "numpy", "lightgbm")},
+        },
+    )
+    return with_checksum(forecaster)
+
+
+def _combined(dataset, rows, forecast):
+    b = dataset.boundary[rows]
+    n_old, n_new = dataset.column("classes_old")[b], dataset.column("classes_new")[b]
+    return (n_old * forecast["old"][rows] + n_new * forecast["new"][rows]) / (n_old + n_new)
+
+
+def _figures(dataset, source, rows, forecast, divergence, direct, constant):
+    b = dataset.boundary[rows]
+    safe = forecast[rows] - (divergence[rows] > MOST_DIVERGENCE)
+    distance = -np.linalg.norm(dataset.points[rows] - direct[b], axis=1)
+
+    def reached(scores):
+        order = np.lexsort((-scores, b))
+        return dataset.all[rows[order[np.searchsorted(b[order], np.unique(b))]]].mean()
+
+    return SourceFigures(str(source), len(np.unique(b)), float(constant.mean()), float(reached(safe)),
+                         float(reached(distance)), float(reached(dataset.all[rows])))
+
+
+def _calibrate(dataset, held, name, *, seed, threads):
+    """Return (Booster of the logarithm of the error, conformal threshold of error over that) for one outcome.
+
+    The threshold comes from errors of spread models that were fitted on the other half of the sources.
+    """
+    forecast = held.forecast["all"] - (held.divergence > MOST_DIVERGENCE)
+    order = np.lexsort((-forecast, dataset.boundary))
+    rank = np.arange(len(order)) - np.searchsorted(dataset.boundary[order], dataset.boundary[order])
+    rows = np.sort(order[rank < CALIBRATED])
+    error = np.abs(getattr(dataset, name)[rows] - held.forecast[name][rows])
+    target = np.log(np.maximum(error, SMALLEST_ERROR))
+    inputs, sources = dataset.inputs(rows), dataset.sources[dataset.boundary[rows]]
+    weights = source_weights(sources)
+
+    def spread_of(mask):
+        return train(inputs[mask], target[mask], weights[mask], small=True, seed=seed, threads=threads)
+
+    unique = np.random.default_rng(seed).permutation(np.unique(sources))
+    first = np.isin(sources, unique[::2])
+    scores = np.empty(len(rows))
+    for half in (first, ~first):
+        scores[half] = error[half] / np.exp(spread_of(~half).predict(inputs[half]))
+    return spread_of(np.ones(len(rows), bool)), grouped_conformal_threshold(scores, sources, MISS_RATE)

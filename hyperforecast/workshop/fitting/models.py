@@ -1,0 +1,86 @@
+"""LightGBM models of outcomes, and direct regressors of settings."""
+
+import lightgbm
+import numpy as np
+
+from hyperforecast.settings import SettingsBox
+
+# One set for all models; values chosen on folds of the training sources.
+PARAMETERS = {
+    "learning_rate": 0.06, "num_leaves": 31, "min_data_in_leaf": 40, "feature_fraction": 0.6, "lambda_l2": 1.0,
+    "max_bin": 127, "deterministic": True, "force_col_wise": True, "verbosity": -1,
+}
+ROUNDS = 260
+SMALL = {"num_leaves": 15, "learning_rate": 0.05}
+SMALL_ROUNDS = 100
+# Attempts within about this much of a boundary's best form the ridge, which weighs most in the fit.
+RIDGE = 0.1
+FAR_WEIGHT = 0.1
+
+
+def train(inputs, target, weights, *, objective="regression", small=False, seed, threads):
+    """Return a LightGBM Booster for inputs (n, F), target (n,) and weights (n,)."""
+    parameters = {**PARAMETERS, **(SMALL if small else {}), "objective": objective, "seed": seed, "num_threads": threads}
+    data = lightgbm.Dataset(inputs, target, weight=weights, free_raw_data=True)
+    return lightgbm.train(parameters, data, SMALL_ROUNDS if small else ROUNDS)
+
+
+def source_weights(sources):
+    """Return a weight for each entry so that sources count by the square root of their entries; mean 1."""
+    _, place, counts = np.unique(sources, return_inverse=True, return_counts=True)
+    weights = 1 / np.sqrt(counts[place])
+    return weights / weights.mean()
+
+
+def attempt_weights(dataset, attempts):
+    """Return the weight of each attempt in a fit: high on the ridge, sources evened out."""
+    b = dataset.boundary[attempts]
+    behind = dataset.best()[b] - dataset.all[attempts]
+    return source_weights(dataset.sources[b]) * (FAR_WEIGHT + np.exp(-behind / RIDGE))
+
+
+def train_outcomes(dataset, boundaries, *, seed, threads):
+    """Return Boosters "old", "new", "diverged" and "later" fitted on the boundaries in a mask (B,)."""
+    attempts = np.flatnonzero(boundaries[dataset.boundary])
+    inputs, weights = dataset.inputs(attempts), attempt_weights(dataset, attempts)
+    options = {"seed": seed, "threads": threads}
+    models = {name: train(inputs, getattr(dataset, name)[attempts], weights, **options) for name in ("old", "new")}
+    even = source_weights(dataset.sources[dataset.boundary[attempts]])
+    models["diverged"] = train(inputs, dataset.diverged[attempts].astype(float), even, objective="binary", small=True,
+                               **options)
+    extra = later_extra(dataset)
+    followed = attempts[~np.isnan(extra[attempts])]
+    models["later"] = train(dataset.inputs(followed), extra[followed],
+                            source_weights(dataset.sources[dataset.boundary[followed]]), small=True, **options)
+    return models
+
+
+def later_extra(dataset):
+    """Return how much more accuracy each attempt left later than it showed at once, (N,).
+
+    Relative to the other followed attempts of its boundary, so that what the future brings cancels; NaN where an
+    attempt was not followed.
+    """
+    gain = dataset.after - dataset.all
+    known = ~np.isnan(gain)
+    count = np.bincount(dataset.boundary[known], minlength=dataset.n_boundaries)
+    total = np.bincount(dataset.boundary[known], gain[known], minlength=dataset.n_boundaries)
+    with np.errstate(invalid="ignore"):
+        return gain - (total / count)[dataset.boundary]
+
+
+def train_direct(dataset, boundaries, *, seed, threads):
+    """Return Boosters from descriptors to the best attempt's settings, as unit-cube coordinates, by setting."""
+    rows = np.flatnonzero(boundaries)
+    best = best_attempts(dataset)[rows]
+    unset = np.full((len(rows), dataset.coordinates.shape[1]), np.nan)
+    inputs = np.hstack([dataset.descriptors[rows], unset])
+    weights = source_weights(dataset.sources[rows])
+    return {name: train(inputs, dataset.points[best, d], weights, small=True, seed=seed, threads=threads)
+            for d, name in enumerate(SettingsBox(dataset.method).names)}
+
+
+def best_attempts(dataset):
+    """Return the place of the best attempt of each boundary, shape (B,)."""
+    order = np.lexsort((-dataset.all, dataset.boundary))
+    return order[np.searchsorted(dataset.boundary[order], np.arange(dataset.n_boundaries))]
