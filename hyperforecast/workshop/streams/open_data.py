@@ -51,7 +51,7 @@ class OpenSet:
     package: str
 
 
-@lru_cache(maxsize=2)
+@lru_cache(maxsize=None)
 def load_open(name):
     """Return the `Collection` of an open set, kept for the next stream of it in this process.
 

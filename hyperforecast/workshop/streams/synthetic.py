@@ -18,9 +18,9 @@ INCREMENTS = (3, 10)
 CLASSES = (6, 60)
 DIMENSIONS = (4, 512)
 ROWS_PER_CLASS = (10, 100)
-SEPARATIONS = (0.5, 20.0)
+SEPARATIONS = (1.0, 24.0)
 NOISES = (0.01, 1.0)
-MOST_LATENT = 96
+MOST_LATENT = 128
 FEWEST_TRAINING = 2
 
 
@@ -135,8 +135,8 @@ def _axes(rng, n_latent, n_features):
 def _latent(rng, dimension):
     """Return the spreads of a random number of latent directions, falling as a power law."""
     most = min(dimension, MOST_LATENT)
-    n_latent = round(_log_uniform(rng, min(2, most), most))
-    return (np.arange(1, n_latent + 1) ** -rng.uniform(0, 1.2)).astype(np.float32)
+    n_latent = max(2, round(most ** rng.uniform(0.5, 1)))
+    return (np.arange(1, n_latent + 1) ** -rng.uniform(0, 0.9)).astype(np.float32)
 
 
 def _means(rng, n_classes, spreads, separation):
@@ -207,7 +207,7 @@ def _manifold(shape, rng):
     n_class = int(rng.integers(2, 9))
     width = int(rng.integers(16, 65))
     bend = rng.uniform(0.5, 2.0)
-    places = _rescaled(_normal(rng, (shape.classes, n_class)), shape.separation / 4)
+    places = _rescaled(_normal(rng, (shape.classes, n_class)), shape.separation / 3)
     inner = bend * _normal(rng, (n_hidden, width)) / np.float32(np.sqrt(n_hidden))
     outer = _normal(rng, (n_class, width)) / np.float32(np.sqrt(n_class))
     hidden = _normal(rng, (shape.classes, POOL_ROWS, n_hidden)) @ inner + (places @ outer)[:, None]
