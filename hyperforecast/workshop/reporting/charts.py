@@ -16,18 +16,20 @@ from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullFormat
 
 from hyperforecast.workshop.reporting.page import plain
 
-INK = "#1c1b19"
+_INK = "#1c1b19"
 _SOFT = "#8c867b"
 _STYLE = {
     "font.size": 10.5, "legend.fontsize": 10.5, "legend.frameon": False,
     "axes.spines.top": False, "axes.spines.right": False, "axes.edgecolor": _SOFT,
     "axes.linewidth": 0.8, "axes.grid": True, "axes.axisbelow": True, "grid.color": "#e4e0d8", "grid.linewidth": 0.6,
-    "xtick.color": INK, "ytick.color": INK, "xtick.major.size": 3.0, "ytick.major.size": 3.0, "text.color": INK,
-    "axes.labelcolor": INK, "figure.facecolor": "none", "axes.facecolor": "none", "lines.linewidth": 1.6,
+    "xtick.color": _INK, "ytick.color": _INK, "xtick.major.size": 3.0, "ytick.major.size": 3.0, "text.color": _INK,
+    "axes.labelcolor": _INK, "figure.facecolor": "none", "axes.facecolor": "none", "lines.linewidth": 1.6,
     "lines.markersize": 5.0, "svg.fonttype": "none", "svg.hashsalt": "hyperforecast", "text.parse_math": False,
 }
-_WIDTH, _HEIGHT = 360, 240  # points; a phone's width, so that text keeps its size there
+_WIDTH, _HEIGHT = 360, 225  # points; a phone's width, so that text keeps its size there
 _LONGEST_LABEL = 26
+_MOST_MARKERS = 12
+_CROWD = 60
 
 # Colour, line style and marker of the first, second, ... series.
 _LOOKS = (
@@ -88,7 +90,8 @@ def line_chart(title, series, *, y_label, x_label="boundary", first=1, logarithm
         handles = []
         for number, values in enumerate(series.values()):
             values = np.asarray(values, dtype=np.float64)
-            handles += axes.plot(np.arange(first, first + len(values)), values, **_look(number))
+            look = {**_look(number), "markevery": max(1, len(values) // _MOST_MARKERS)}
+            handles += axes.plot(np.arange(first, first + len(values)), values, **look)
         _whole_numbers(axes.xaxis)
         if logarithmic:
             _logarithmic(axes.yaxis)
@@ -140,16 +143,18 @@ def expected_and_achieved(title, groups):
         Columns expected, low, high, achieved: shares from 0 to 1.
     """
     with matplotlib.rc_context(_STYLE):
-        figure, axes = _panel("expected, with its interval", "achieved", height=300)
+        figure, axes = _panel("expected, with its interval", "achieved", height=285)
         axes.plot([0, 1], [0, 1], color=_SOFT, linewidth=1.0, linestyle="-", zorder=1)
+        # Many points are drawn finer.
+        fine = 1.0 if sum(map(len, groups.values())) <= _CROWD else 0.5
         handles = []
         for number, points in enumerate(groups.values()):
             expected, low, high, achieved = np.asarray(points, dtype=np.float64).reshape(-1, 4).T
-            look = {**_look(number), "linestyle": "none"}
-            axes.hlines(achieved, low, high, color=look["color"], linewidth=0.9)
+            look = {**_look(number), "linestyle": "none", "markersize": 5 * fine}
+            axes.hlines(achieved, low, high, color=look["color"], linewidth=0.9 * fine**2)
             handles += axes.plot(expected, achieved, **look)
             missed = (achieved < low) | (achieved > high)
-            axes.plot(expected[missed], achieved[missed], "o", markersize=10, color=INK, fillstyle="none",
+            axes.plot(expected[missed], achieved[missed], "o", markersize=10 * fine, color=_INK, fillstyle="none",
                       markeredgewidth=0.8)
         for axis in (axes.xaxis, axes.yaxis):
             axis.set_major_formatter(FuncFormatter(_percentage))
@@ -173,7 +178,7 @@ def interval_chart(title, names, series, *, x_label, marks=(0.0, 1.0)):
         Where upright lines help the eye; bars begin at the first.
     """
     with matplotlib.rc_context(_STYLE):
-        figure, axes = _panel(x_label, "", height=70 + len(names) * (8 + 12 * len(series)) + 16 * len(series))
+        figure, axes = _panel(x_label, "", height=60 + len(names) * (8 + 12 * len(series)))
         thickness = 0.8 / max(len(series), 1)
         handles = []
         for number, values in enumerate(series.values()):
@@ -196,7 +201,7 @@ def interval_chart(title, names, series, *, x_label, marks=(0.0, 1.0)):
 def _panel(x_label, y_label, height=_HEIGHT):
     figure = Figure(figsize=(_WIDTH / 72, height / 72), layout="constrained")
     axes = figure.add_subplot()
-    axes.set(xlabel=_short(x_label, 60), ylabel=_short(y_label, 40))
+    axes.set(xlabel=_short(x_label, 40), ylabel=_short(y_label, 30))
     return figure, axes
 
 
@@ -217,6 +222,8 @@ def _legend(figure, handles, names, *, lines=True):
         # Matplotlib leaves out labels that begin with an underscore, unless something stands before it.
         labels = ["\u200b" * name.startswith("_") + name for name in map(_short, names)]
         columns = 2 if max(map(len, labels)) <= 16 else 1
+        # Room for the legend comes on top of the axes' own.
+        figure.set_figheight(figure.get_figheight() + 15 / 72 * (-(-len(labels) // columns)))
         figure.legend(handles, labels, loc="outside lower left", ncols=columns, handlelength=3.2 if lines else 1.0)
 
 

@@ -33,7 +33,7 @@ figcaption, caption { color: var(--soft); font-size: .9rem; text-align: left; }
 figcaption { max-width: 44rem; margin-top: .4rem; }
 caption { padding: .3rem 0; }
 .panels { display: grid; gap: 1rem 2rem; grid-template-columns: repeat(auto-fit, minmax(min(100%, 21rem), 1fr)); }
-.panel { min-width: 0; max-width: 34rem; break-inside: avoid; }
+.panel { min-width: 0; max-width: 30rem; break-inside: avoid; }
 .panel h3, .panel caption { color: var(--ink); font-size: .95rem; font-weight: 600; margin: 0 0 .2rem; }
 .panel svg { display: block; width: 100%; height: auto; font-family: inherit; }
 .scroll { overflow-x: auto; max-width: 100%; }
@@ -41,12 +41,12 @@ table { border-collapse: collapse; font-size: .9rem; font-variant-numeric: tabul
 th, td { padding: .25rem .6rem; border-bottom: 1px solid var(--rule); text-align: left; vertical-align: top;
   overflow-wrap: normal; }
 thead th { border-bottom: 2px solid var(--ink); vertical-align: bottom; }
-tbody th { font-weight: 500; min-width: 6rem; overflow-wrap: anywhere; }
+tbody th { font-weight: 500; min-width: 8rem; overflow-wrap: anywhere; }
 .number { text-align: right; white-space: nowrap; }
 .heat { width: 100%; }
 .heat td { padding: .2rem .3rem; text-align: right; border: 1px solid #fff; print-color-adjust: exact;
   -webkit-print-color-adjust: exact; }
-dl { display: grid; grid-template-columns: fit-content(45%) 1fr; gap: .2rem 1.2rem; max-width: 44rem; }
+dl { display: grid; grid-template-columns: fit-content(45%) minmax(0, 1fr); gap: .2rem 1.2rem; max-width: 44rem; }
 dt { color: var(--soft); } dd { margin: 0; }
 .pictures { display: grid; gap: .8rem 1.2rem; grid-template-columns: repeat(auto-fill, minmax(10rem, 1fr)); margin: 0;
   padding: 0; list-style: none; }
@@ -135,7 +135,7 @@ class Page:
             cells = [f"<td{kind}>{_escaped(value)}</td>" for kind, value in zip(classes[1:], row[1:], strict=True)]
             body += f'<tr><th scope="row"{classes[0]}>{_escaped(row[0])}</th>{"".join(cells)}</tr>\n'
         self._parts.append(
-            f'<div class="scroll"><table><caption>{_escaped(caption)}</caption>\n'
+            f'<div class="scroll" tabindex="0"><table><caption>{_escaped(caption)}</caption>\n'
             f"<thead><tr>{head}</tr></thead>\n<tbody>\n{body}</tbody></table></div>"
         )
 
@@ -158,7 +158,7 @@ class Page:
                 cells = "".join(_heat_cell(value) for value in values)
                 body += f'<tr><th scope="row">{_escaped(name)}</th>{cells}</tr>\n'
             panels += (
-                f'<div class="panel scroll"><table class="heat"><caption>{_escaped(title)}</caption>\n'
+                f'<div class="panel scroll" tabindex="0"><table class="heat"><caption>{_escaped(title)}</caption>\n'
                 f"<thead><tr><td></td>{head}</tr></thead>\n<tbody>\n{body}</tbody></table></div>\n"
             )
         self._figure(f'<div class="panels">\n{panels}</div>', caption)
