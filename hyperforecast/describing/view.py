@@ -30,7 +30,7 @@ class BoundaryView:
 
     def fact(self, name):
         """Return a fact about the model, NaN if the trainer does not supply it."""
-        return self.facts.get(name, np.nan)
+        return np.float64(self.facts.get(name, np.nan))
 
     @property
     def summaries(self):

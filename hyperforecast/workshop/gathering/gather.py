@@ -4,6 +4,7 @@ import sys
 import time
 
 import joblib
+import numpy as np
 
 from hyperforecast.workshop.gathering.records import RecordsFile
 from hyperforecast.workshop.gathering.trajectories import run_trajectory, trajectory_key
@@ -30,19 +31,19 @@ def gather(definitions, records_path, *, methods, seed=0, workers=1, space_fille
     """
     records = RecordsFile(records_path, create=True)
     stored = records.stored()
-    # Streams outermost, methods within: a run that is stopped has seen all methods alike.
-    todo = [(definition, method) for definition in definitions for method in methods
-            if trajectory_key(definition, method, seed) not in stored]
+    # In random order, methods innermost: a run that is stopped has seen all kinds of streams and all methods.
+    order = np.random.default_rng(seed).permutation(len(definitions))
+    todo = [(definitions[place], method) for place in order for method in methods
+            if trajectory_key(definitions[place], method, seed) not in stored]
     tasks = (joblib.delayed(_run)(definition, method, seed, space_filled, proposed, trainer)
              for definition, method in todo)
     total = len(definitions) * len(methods)
     started = time.perf_counter()
-    with joblib.parallel_config(inner_max_num_threads=1) if workers > 1 else joblib.parallel_config():
-        finished = joblib.Parallel(n_jobs=workers, return_as="generator_unordered", pre_dispatch="2*n_jobs")(tasks)
-        for done, trajectory in enumerate(finished, 1):
-            records.store(trajectory)
-            if progress:
-                progress(Progress(total - len(todo) + done, total, done, time.perf_counter() - started, trajectory))
+    finished = joblib.Parallel(n_jobs=workers, return_as="generator_unordered", pre_dispatch="2*n_jobs")(tasks)
+    for done, trajectory in enumerate(finished, 1):
+        records.store(trajectory)
+        if progress:
+            progress(Progress(total - len(todo) + done, total, done, time.perf_counter() - started, trajectory))
     return len(todo)
 
 
