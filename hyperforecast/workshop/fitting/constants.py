@@ -55,7 +55,7 @@ def _scales(dataset):
     """Logarithms of what turns relative learning rate and strength into settings, (B, 2)."""
     with np.errstate(divide="ignore", invalid="ignore"):
         new, anchor = np.log(dataset.column("curvature_new")), np.log(dataset.column("anchor_curvature"))
-    scales = np.stack([-new, new - anchor], axis=1)
+        scales = np.stack([-new, new - anchor], axis=1)
     return np.where(np.isfinite(scales), scales, 0.0)
 
 
