@@ -37,7 +37,7 @@ class FamiliarityVerdict:
     familiar : bool
         Whether the score is at least `FAMILIAR_SHARE`.
     out_of_range : list of OutOfRange
-        The descriptors outside their range, the farthest first (in the records' spreads).
+        The descriptors outside their range, the farthest from its centre (in spreads) first.
     distance : float
         Mean distance to the `NEIGHBOURS` nearest reference records.
     """
@@ -115,12 +115,13 @@ class Familiarity:
         """Return the `FamiliarityVerdict` of descriptors (F,), NaN where missing."""
         vector = np.asarray(vector, np.float64)
         if vector.shape != self.names.shape or np.isinf(vector).any():
-            raise InputError("vector", f"must hold {len(self.names)} descriptors, finite or NaN", f"shape {vector.shape}")
+            raise InputError("vector", f"must hold {len(self.names)} descriptors, finite or NaN",
+                             f"shape {vector.shape}")
         row = _standardize(vector[None], self.centre, self.scale)
         distance = _neighbour_distances(row, self.reference)[0]
         score = float(np.mean(self.distances >= distance))
-        excess = np.maximum(self.low - vector, vector - self.high) / self.scale
-        outside = sorted(np.flatnonzero(excess > 0), key=lambda f: -excess[f])
+        outside = np.flatnonzero((vector < self.low) | (vector > self.high))
+        outside = outside[np.argsort(-np.abs(row[0, outside]), kind="stable")]
         return FamiliarityVerdict(
             score=score, familiar=score >= FAMILIAR_SHARE, distance=float(distance),
             out_of_range=[OutOfRange(str(self.names[f]), float(vector[f]), float(self.low[f]), float(self.high[f]))
@@ -146,7 +147,8 @@ class Familiarity:
         distances = read("distances", "f", len(reference))
         unknown = np.isnan(centre)
         for name, values in (("low", low), ("high", high), ("centre", centre), ("scale", scale)):
-            require(name, np.where(unknown, np.isnan(values), np.isfinite(values)), "must be finite, or NaN as the centre")
+            proper = np.where(unknown, np.isnan(values), np.isfinite(values))
+            require(name, proper, "must be finite, or NaN where the centre is")
         require("high", unknown | (low <= high), "must not be below low")
         require("scale", unknown | (scale > 0), "must be above 0")
         require("reference", len(reference) > 0 and not np.isinf(reference).any(), "must hold rows, finite or NaN")

@@ -73,7 +73,8 @@ class TreeEnsemble:
                 node = waiting.pop()
                 if "leaf_value" in node:
                     if node.get("leaf_coeff"):
-                        raise InputError("trees", "must have constant leaves", "linear trees", "fit without linear_tree")
+                        raise InputError("trees", "must have constant leaves", "linear trees",
+                                         "fit without linear_tree")
                     nodes.append(None)
                     leaf_value.append(node["leaf_value"])
                 else:

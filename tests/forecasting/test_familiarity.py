@@ -63,6 +63,13 @@ def test_strange_boundaries_are_flagged(records, familiarity):
     assert familiarity.assess(shifted(D, 20)).distance > familiarity.assess(shifted(D, 5)).distance
 
 
+def test_the_largest_numbers_are_no_trouble(records, familiarity):
+    vector = shifted(records[0], 0)
+    vector[0] = -1.7e308
+    verdict = familiarity.assess(vector)
+    assert not verdict.familiar and np.isfinite(verdict.distance)
+
+
 def test_the_middle_is_utterly_typical(records, familiarity):
     verdict = familiarity.assess(shifted(records[0], 0))
     assert verdict.familiar and verdict.score > .95 and verdict.out_of_range == []
@@ -118,6 +125,8 @@ def test_a_constant_descriptor(records, constant):
     vector = shifted(records[0], 0)
     vector[5] = constant
     assert fitted.assess(vector).score > .95
+    vector[5] = constant * (1 + 1e-12)
+    assert fitted.assess(vector).score > .95
     vector[5] = constant + 1e4
     verdict = fitted.assess(vector)
     assert not verdict.familiar and [entry.name for entry in verdict.out_of_range] == ["descriptor_5"]
@@ -142,8 +151,13 @@ def test_distance_worked_out():
     ends, middle = [0, 0, beside, beside, 2 * beside], [0, 0, beside, beside, beside]
     expected = [np.mean(middle)] * 3 + [np.mean(ends)] * 6
     assert fitted.distances == pytest.approx(expected, rel=1e-6)
-    score = fitted.assess([0]).score
-    assert score == 1.0
+    assert fitted.assess([0]).score == 1
+
+
+def test_as_far_as_the_records_counts_as_familiar():
+    fitted = Familiarity.fit(np.ones((8, 2)), ["a", "b"], [0, 1] * 4, seed=0)
+    assert (fitted.assess([1, 1]).distance, fitted.assess([1, 1]).score) == (0, 1)
+    assert fitted.assess([1, 2]).score == 0
 
 
 def test_reference_records_are_even_over_the_sources():

@@ -34,8 +34,8 @@ def fitted(X, y, **parameters):
 def data():
     rng = np.random.default_rng(0)
     X = drawn_rows(rng, 1500)
-    signal = np.nan_to_num(X[:, 0], nan=0.7) * (X[:, 5] == 0) + np.abs(np.nan_to_num(X[:, 1], nan=2)) + X[:, 6] * X[:, 7]
-    y = signal + 0.3 * rng.normal(size=len(X))
+    first, second = np.nan_to_num(X[:, 0], nan=0.7), np.nan_to_num(X[:, 1], nan=2)
+    y = first * (X[:, 5] == 0) + np.abs(second) + X[:, 6] * X[:, 7] + 0.3 * rng.normal(size=len(X))
     unseen = drawn_rows(rng, 700)
     unseen[0], unseen[1], unseen[2] = np.nan, np.inf, -np.inf
     unseen[3:6, 5] = -0.0, 1e-35, -1e-35
