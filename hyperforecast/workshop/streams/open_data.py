@@ -131,12 +131,12 @@ def _languages():
         if len(own) >= fewest:
             # An order that is the same everywhere, and that no alphabet decides.
             own = sorted(own, key=lambda name: zlib.crc32(name.encode()))[:most]
-            X += [_hash_name(name) for name in own]
+            X += [hash_name(name) for name in own]
             y += [code] * len(own)
     return Collection(np.array(X), np.array(y))
 
 
-def _hash_name(name):
+def hash_name(name):
     """Return the counts of a name's character 1-grams to 3-grams, hashed."""
     marked = f" {name} "
     grams = [marked[at:at + length] for length in (1, 2, 3) for at in range(len(marked) - length + 1)]

@@ -155,6 +155,8 @@ def check_labels_of_increments(increments):
             raise InputError("increments", f"must have at least {fewest} classes in increment {t}", list(increment))
         if len(set(increment)) < len(increment):
             raise InputError("increments", f"must name a class once in increment {t}", list(increment))
+    if len({isinstance(label, str) for increment in increments for label in increment}) > 1:
+        raise InputError("increments", "must hold labels that are all texts or all whole numbers", "both")
     return increments
 
 
