@@ -163,7 +163,8 @@ def test_definitions_that_do_not_fit_their_rows_are_refused_when_built(load, tab
     ("stream = 3", "must hold \\[\\[stream\\]\\] tables"),
     ("stream = []", "must hold \\[\\[stream\\]\\] tables"),
     ("[[streams]]\n" + DIGITS, "knows the keys stream"),
-    ("[[stream]]\n" + CLOUDS + "[[stream]]\n" + CLOUDS, "name: must differ from the other streams' names; received 'c'"),
+    ("[[stream]]\n" + CLOUDS + "[[stream]]\n" + CLOUDS,
+     "name: must differ from the other streams' names; received 'c'"),
 ])
 def test_files_that_hold_no_streams_are_refused(tmp_path, text, message):
     path = tmp_path / "bad.toml"
