@@ -10,7 +10,6 @@ import numpy as np
 
 from hyperforecast.checks import InputError, check_choice
 from hyperforecast.forecasting.familiarity import Familiarity
-from hyperforecast.forecasting.intervals import interval
 from hyperforecast.forecasting.trees import TreeEnsemble
 from hyperforecast.settings import COORDINATES, METHODS, SCALES, Settings, SettingsBox, scale_free
 from hyperforecast.storage import Bundle, bundle_checksum, read_bundle_file, write_bundle_file
@@ -89,7 +88,7 @@ class Forecaster:
     ranking : {"outcome", "direct"}
         What orders candidates: the expected outcome, or nearness to directly forecast settings.
     thresholds : dict of str to float
-        For each of `RANGES` the conformal threshold of errors over spread.
+        For each of `RANGES` the conformal threshold of errors over spread; infinite with too few sources.
     familiarity : Familiarity
     raw_constant, scale_free_constant : Constant
         The best fixed choices over the records, and
@@ -171,8 +170,7 @@ class BoundaryForecast:
         result = {}
         for name, value in self.outcome(settings).items():
             spread = np.exp(self._raw(f"spread_{name}", coordinates)) * self.forecaster.thresholds[name]
-            ends = interval(value - spread, value + spread, 0.0)
-            result[name] = Expected(value, ends.low, ends.high)
+            result[name] = Expected(value, np.clip(value - spread, 0, 1), np.clip(value + spread, 0, 1))
         return result
 
     def divergence(self, settings):
@@ -210,7 +208,8 @@ def _to_bundle(forecaster):
     facts = {
         "method": forecaster.method, "descriptor_names": list(forecaster.descriptor_names),
         "coordinates": list(COORDINATES), "models": sorted(forecaster.models), "ranking": forecaster.ranking,
-        "thresholds": forecaster.thresholds, "raw_constant": forecaster.raw_constant.as_dict(),
+        # JSON knows no infinity: null says that too few sources were there to bound the error.
+        "thresholds": {name: value if np.isfinite(value) else None for name, value in forecaster.thresholds.items()}, "raw_constant": forecaster.raw_constant.as_dict(),
         "scale_free_constant": forecaster.scale_free_constant.as_dict(), "constant_kind": forecaster.constant_kind,
         "influential": list(forecaster.influential), "recipe": forecaster.recipe,
     }
@@ -257,7 +256,8 @@ def _load(path):
             method=check_choice(f"{path} (method)", facts["method"], METHODS),
             descriptor_names=tuple(facts["descriptor_names"]), models=models,
             ranking=check_choice(f"{path} (ranking)", facts["ranking"], RANKINGS),
-            thresholds={name: float(facts["thresholds"][name]) for name in RANGES},
+            thresholds={name: np.inf if facts["thresholds"][name] is None else float(facts["thresholds"][name])
+                        for name in RANGES},
             familiarity=Familiarity.from_arrays(arrays, "familiarity_"),
             raw_constant=constants["raw"], scale_free_constant=constants["scale_free"],
             constant_kind=facts["constant_kind"], typical=np.asarray(arrays["typical"], np.float64),

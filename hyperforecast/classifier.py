@@ -1,0 +1,291 @@
+"""GrowingClassifier: a classifier that keeps learning; one call of `partial_fit` is one boundary."""
+
+import inspect
+import sys
+
+import numpy as np
+
+from hyperforecast.checks import InputError, check_whole
+from hyperforecast.describing import describe
+from hyperforecast.forecasting import Forecaster, advise_settings, load_forecaster, opening_settings
+from hyperforecast.increments import Increment, check_features, check_labels
+from hyperforecast.learning import HeadTrainer, close_boundary, open_boundary, predict_codes, try_settings
+from hyperforecast.settings import Plan, Settings, SettingsBox
+
+ADVISED = "advised"
+
+
+class GrowingClassifier:
+    """Learns new classes as they arrive, without losing the old ones, with settings advised at every boundary.
+
+    Parameters
+    ----------
+    method : {"ewc", "lwf", "icarl", "wa"}
+    hidden_units : int
+        Width of the head's hidden layer; 0 is a linear head.
+    passes, batch_size : int
+        Passes over the training rows at each boundary, and rows of a minibatch.
+    memory_limit : int or str
+        Most rows held in all, exemplars and check rows together; or bytes, as "2 MB".
+    settings : "advised" or Settings
+        Settings of each boundary: advised, or these.
+    forecaster : None, path or Forecaster
+        What advises; None is the one that ships for the method.
+    random_state : int, numpy RandomState or None
+        Fixes every draw; None draws a new seed at the first increment.
+
+    Attributes
+    ----------
+    classes_ : ndarray of shape (C,)
+        Labels in order of arrival.
+    n_features_in_ : int
+    feature_names_in_ : ndarray of str
+        Where the first increment had column names.
+    advice_ : Advice or None
+        That of the last boundary; None at the first increment, or where settings were given.
+    history_ : list of dict
+        What happened at each boundary.
+    carryover_ : Carryover
+        Everything that is kept between boundaries.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from hyperforecast import GrowingClassifier, Settings
+    >>> rng = np.random.default_rng(0)
+    >>> clf = GrowingClassifier(settings=Settings(learning_rate=0.02, regularization=0.1, kept_per_class=20))
+    >>> X, y = rng.normal(size=(60, 4)), np.repeat(["nut", "bolt", "hook"], 20)
+    >>> clf.partial_fit(X[:40], y[:40]).partial_fit(X[40:], y[40:]).classes_.tolist()
+    ['bolt', 'nut', 'hook']
+    """
+
+    def __init__(self, method="wa", *, hidden_units=64, passes=10, batch_size=32, memory_limit=2000, settings=ADVISED,
+                 forecaster=None, random_state=0):
+        self.method = method
+        self.hidden_units = hidden_units
+        self.passes = passes
+        self.batch_size = batch_size
+        self.memory_limit = memory_limit
+        self.settings = settings
+        self.forecaster = forecaster
+        self.random_state = random_state
+
+    def fit(self, X, y):
+        """Forget everything and learn (X, y) as a first increment; return self."""
+        for name in [name for name in vars(self) if name.endswith("_")]:
+            delattr(self, name)
+        return self.partial_fit(X, y)
+
+    def partial_fit(self, X, y, classes=None):
+        """Learn an increment; return self.
+
+        Parameters
+        ----------
+        X : array-like of shape (n, d)
+        y : array-like of shape (n,)
+            Labels, text or whole numbers; new ones are welcome.
+        classes : array-like, optional
+            Accepted for agreement with other classifiers: labels of y must be among them.
+
+        Raises
+        ------
+        InputError
+            If data or parameters break a rule; nothing is changed then.
+        """
+        increment = self._increment(X, y)
+        if classes is not None and not np.isin(increment.y, np.asarray(classes)).all():
+            raise InputError("classes", "must hold every label of y", np.setdiff1d(increment.y, classes))
+        seed = self._seed()
+        boundary, advice = self._advised(increment, seed)
+        settings = self._chosen(boundary, advice)
+        trainer = HeadTrainer()
+        attempt = try_settings(trainer, boundary, [settings], seed=_step(seed, boundary.carryover))[0]
+        carryover = close_boundary(trainer, boundary, attempt, seed=_step(seed, boundary.carryover))
+        if boundary.carryover is None:
+            self.seed_, self.history_, self.n_features_in_ = seed, [], increment.n_features
+            names = _column_names(X)
+            if names is not None:
+                self.feature_names_in_ = names
+        self.carryover_, self.advice_ = carryover, advice
+        self.history_ = [*self.history_, {
+            "boundary": boundary.number, "rows": len(increment), "classes": len(carryover.classes),
+            "new_classes": boundary.n_classes - boundary.n_old, "settings": settings.as_dict(),
+            "advised": advice is not None, "diverged": attempt.diverged, "operations": attempt.operations,
+        }]
+        return self
+
+    def predict(self, X):
+        """Return the predicted labels (n,) of rows X (n, d)."""
+        carryover, Z = self._standardized(X)
+        return carryover.classes[predict_codes(HeadTrainer(), carryover.head, Z)]
+
+    def predict_proba(self, X):
+        """Return class probabilities (n, C) of rows X (n, d), columns in the order of `classes_`."""
+        scores = self._scores(X)
+        scores -= scores.max(axis=1, keepdims=True)
+        exponentials = np.exp(scores)
+        return exponentials / exponentials.sum(axis=1, keepdims=True)
+
+    def score(self, X, y, sample_weight=None):
+        """Return the accuracy of `predict(X)` against labels y (n,), rows weighted by `sample_weight`."""
+        hits = self.predict(X) == check_labels(y, len(X))
+        return float(np.average(hits, weights=sample_weight))
+
+    @property
+    def classes_(self):
+        """Labels seen, in order of arrival, shape (C,)."""
+        return self._fitted().classes
+
+    def get_params(self, deep=True):
+        """Return the constructor's arguments by name; `deep` changes nothing."""
+        return {name: getattr(self, name) for name in _parameter_names()}
+
+    def set_params(self, **params):
+        """Set constructor arguments, between boundaries too; return self."""
+        for name, value in params.items():
+            if name not in _parameter_names():
+                raise InputError(name, f"must be one of the parameters {', '.join(_parameter_names())}", repr(value))
+            setattr(self, name, value)
+        return self
+
+    def __repr__(self):
+        given = ", ".join(f"{name}={value!r}" for name, value in self.get_params().items()
+                          if repr(value) != repr(_defaults()[name]))
+        return f"{type(self).__name__}({given})"
+
+    def __sklearn_tags__(self):
+        return _estimator_tags()
+
+    def __sklearn_is_fitted__(self):
+        return hasattr(self, "carryover_")
+
+    def _plan(self):
+        plan = Plan(self.method, self.hidden_units, self.passes, self.batch_size, self.memory_limit).checked()
+        carryover = getattr(self, "carryover_", None)
+        if carryover is not None:
+            for name in ("method", "hidden_units"):
+                if getattr(plan, name) != getattr(carryover.plan, name):
+                    raise InputError(name, f"must stay {getattr(carryover.plan, name)!r} once learning has begun",
+                                     repr(getattr(plan, name)), "call fit to start anew")
+        return plan
+
+    def _seed(self):
+        if hasattr(self, "seed_"):
+            return self.seed_
+        if self.random_state is None:
+            return int(np.random.default_rng().integers(2**31))
+        if isinstance(self.random_state, np.random.RandomState):
+            return int(self.random_state.randint(2**31 - 1))
+        return check_whole("random_state", self.random_state, high=2**32 - 1)
+
+    def _increment(self, X, y):
+        fitted = getattr(self, "carryover_", None)
+        features = self._features(X)
+        if y is None:
+            raise InputError("y", "must be one label for each row", "None", "pass the labels: y cannot be None")
+        known = None if fitted is None else fitted.n_features
+        features = check_features(features, n_features=known)
+        return Increment(features, check_labels(np.ravel(y) if np.ndim(y) == 2 and np.shape(y)[1] == 1 else y,
+                                                len(features)))
+
+    def _features(self, X):
+        expected, names = getattr(self, "feature_names_in_", None), _column_names(X)
+        if expected is not None and names is not None and list(names) != list(expected):
+            raise InputError("X", "must have the columns of the first increment, in their order",
+                             ", ".join(map(str, names)))
+        return np.asarray(X) if names is not None else X
+
+    def _advised(self, increment, seed):
+        """Return the boundary and the advice, or None where none is due."""
+        boundary = self._boundary(increment, seed)
+        if isinstance(self.settings, Settings) or boundary.carryover is None:
+            return boundary, None
+        return boundary, self._advice_at(boundary, seed)
+
+    def _boundary(self, increment, seed):
+        carryover = getattr(self, "carryover_", None)
+        return open_boundary(self._plan(), carryover, increment, seed=_step(seed, carryover))
+
+    def _advice_at(self, boundary, seed):
+        forecaster = self.forecaster
+        if not isinstance(forecaster, Forecaster):
+            forecaster = load_forecaster(self.method if forecaster is None else forecaster)
+        if forecaster.method != self.method:
+            raise InputError("forecaster", f"must be fitted for the method {self.method}", forecaster.method)
+        descriptors = describe(HeadTrainer(), boundary, seed=_step(seed, boundary.carryover))
+        return advise_settings(forecaster, descriptors, SettingsBox(self.method, boundary.most_kept))
+
+    def _chosen(self, boundary, advice):
+        if isinstance(self.settings, Settings):
+            return self.settings.checked(self.method)
+        if self.settings != ADVISED:
+            raise InputError("settings", f'must be "{ADVISED}" or a Settings', repr(self.settings))
+        return opening_settings(boundary.plan) if advice is None else advice.settings
+
+    def _fitted(self):
+        if not hasattr(self, "carryover_"):
+            raise _not_fitted(f"This {type(self).__name__} has learned nothing yet; call partial_fit or fit first.")
+        return self.carryover_
+
+    def _standardized(self, X):
+        carryover = self._fitted()
+        features = check_features(self._features(X), n_features=carryover.n_features)
+        return carryover, carryover.standardized(features)
+
+    def _scores(self, X):
+        carryover, Z = self._standardized(X)
+        return np.nan_to_num(HeadTrainer().class_scores(carryover.head, Z).astype(np.float64), nan=-1e30)
+
+
+def advise(classifier, X, y):
+    """Return the `Advice` that a `GrowingClassifier` would follow if (X, y) arrived now; nothing is trained.
+
+    Raises
+    ------
+    InputError
+        If the classifier has seen no increment yet (its first settings are fixed), or the data break a rule.
+    """
+    classifier._fitted()
+    increment = classifier._increment(X, y)
+    seed = classifier._seed()
+    return classifier._advice_at(classifier._boundary(increment, seed), seed)
+
+
+def _step(seed, carryover):
+    """Seed of the boundary that follows a carryover."""
+    return seed + 7919 * (0 if carryover is None else carryover.n_boundaries)
+
+
+def _parameter_names():
+    return list(_defaults())
+
+
+def _defaults():
+    parameters = inspect.signature(GrowingClassifier.__init__).parameters
+    return {name: one.default for name, one in parameters.items() if name != "self"}
+
+
+def _column_names(X):
+    """Column names of a data frame, if they are all text; else None."""
+    columns = getattr(X, "columns", None)
+    if columns is None:
+        return None
+    names = np.asarray(columns, dtype=object)
+    return names if all(isinstance(name, str) for name in names) else None
+
+
+def _not_fitted(message):
+    """scikit-learn's exception where it is loaded; it too is a ValueError."""
+    if "sklearn" in sys.modules:
+        from sklearn.exceptions import NotFittedError
+
+        return NotFittedError(message)
+    return ValueError(message)
+
+
+def _estimator_tags():
+    """scikit-learn asks for these, so that it is installed."""
+    from sklearn.utils import ClassifierTags, InputTags, Tags, TargetTags
+
+    return Tags(estimator_type="classifier", target_tags=TargetTags(required=True),
+                classifier_tags=ClassifierTags(), input_tags=InputTags())
