@@ -136,13 +136,13 @@ class SettingsBox:
     """
 
     def __init__(self, method, most_kept=KEPT_PER_CLASS[1]):
-        self.method = method
+        self.method, self.most_kept = method, min(most_kept, KEPT_PER_CLASS[1])
         self.names = ("learning_rate", "regularization")
         bounds = [LEARNING_RATES, REGULARIZATIONS[method]]
         if method in REHEARSAL_METHODS:
             self.names += ("kept_per_class",)
             # The half steps at both ends give the extreme whole numbers their fair share.
-            bounds.append((KEPT_PER_CLASS[0] - 0.5, min(most_kept, KEPT_PER_CLASS[1]) + 0.5))
+            bounds.append((KEPT_PER_CLASS[0] - 0.5, self.most_kept + 0.5))
         self._low, high = np.log(np.array(bounds, dtype=np.float64).T)
         self._span = high - self._low
 
@@ -154,16 +154,12 @@ class SettingsBox:
     def from_unit(self, points):
         """Return the list of `Settings` at the unit-cube `points` of shape (n, n_dimensions)."""
         values = np.exp(self._low + np.clip(points, 0.0, 1.0) * self._span)
-        highest = np.exp(self._low + self._span)
-        settings = []
-        for row in values:
-            # Twelve digits keep the value inside its range and its JSON short.
-            numbers = [float(f"{value:.6g}") for value in row[:2]]
-            kept = None
-            if len(row) == 3:
-                kept = int(np.clip(round(row[2]), KEPT_PER_CLASS[0], round(highest[2] - 0.5)))
-            settings.append(Settings(*numbers, kept))
-        return settings
+        # Six digits keep the value inside its range and its JSON short.
+        numbers = [[float(f"{value:.6g}") for value in column] for column in values[:, :2].T.tolist()]
+        kept = [None] * len(values)
+        if self.n_dimensions == 3:
+            kept = np.clip(np.round(values[:, 2]), KEPT_PER_CLASS[0], self.most_kept).astype(int).tolist()
+        return [Settings(*one) for one in zip(*numbers, kept)]
 
     def to_unit(self, settings):
         """Return the (n, n_dimensions) unit-cube points of a list of `Settings`, clipped to the box."""

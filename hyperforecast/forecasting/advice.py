@@ -218,8 +218,9 @@ def _objective(forecast, settings, now_weight):
 
 def _smooth(points, scores):
     """Return scores averaged over each point's neighbourhood."""
-    squares = ((points[:, None] - points) ** 2).sum(axis=2)
-    weights = np.exp(-0.5 * squares / NEIGHBOURHOOD**2)
+    lengths = (points**2).sum(axis=1)
+    squares = lengths[:, None] + lengths - 2 * points @ points.T
+    weights = np.exp(squares * (-0.5 / NEIGHBOURHOOD**2))
     return weights @ scores / weights.sum(axis=1)
 
 
@@ -227,8 +228,7 @@ def _fewest_kept(forecast, best, box, now_weight):
     """Return `best` with the fewest exemplars per class whose expected outcome is within tolerance of the best."""
     if best.kept_per_class is None:
         return best
-    most = box.from_unit(np.ones((1, box.n_dimensions)))[0].kept_per_class
-    kept = np.unique(np.round(np.geomspace(KEPT_PER_CLASS[0], most, 24)).astype(int))
+    kept = np.unique(np.round(np.geomspace(KEPT_PER_CLASS[0], box.most_kept, 24)).astype(int))
     candidates = [replace(best, kept_per_class=int(k)) for k in kept]
     values = _objective(forecast, candidates, now_weight)
     return candidates[int(np.argmax(values >= values.max() - KEPT_TOLERANCE))]

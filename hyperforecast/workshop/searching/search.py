@@ -171,10 +171,8 @@ def _fit_to_box(warm_starts, box):
         if not isinstance(one, Settings):
             raise InputError("warm_starts", "must be a sequence of Settings", repr(one))
         one.checked(box.method)
-    most_kept = box.from_unit(np.ones((1, box.n_dimensions)))[0].kept_per_class
-    if most_kept is None:
-        return list(warm_starts)
-    return [replace(one, kept_per_class=min(one.kept_per_class, most_kept)) for one in warm_starts]
+    return [one if one.kept_per_class is None else replace(one, kept_per_class=min(one.kept_per_class, box.most_kept))
+            for one in warm_starts]
 
 
 def _check_earlier(earlier, strategy, seed, batch, warm_starts, attempts):
