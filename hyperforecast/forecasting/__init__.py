@@ -6,8 +6,9 @@ from hyperforecast.forecasting.forecaster import (
     Constant, Expected, Forecaster, combined, load_forecaster, save_forecaster, with_checksum,
 )
 from hyperforecast.forecasting.intervals import grouped_conformal_threshold
+from hyperforecast.forecasting.opening import opening_settings
 from hyperforecast.forecasting.trees import TreeEnsemble
 
 __all__ = ["Advice", "Constant", "Expected", "Familiarity", "FamiliarityVerdict", "Forecaster", "Reason",
            "TreeEnsemble", "advise_settings", "combined", "explain", "grouped_conformal_threshold", "load_forecaster",
-           "save_forecaster", "with_checksum"]
+           "opening_settings", "save_forecaster", "with_checksum"]

@@ -6,14 +6,13 @@ import time
 import numpy as np
 
 from hyperforecast.describing import describe
+from hyperforecast.forecasting import opening_settings
 from hyperforecast.increments import Increment
 from hyperforecast.learning import HeadTrainer, Job, close_boundary, open_boundary, standardize
 from hyperforecast.settings import Plan, Settings, SettingsBox
 from hyperforecast.workshop.gathering.records import AttemptRecord, BoundaryRecord, Trajectory
 from hyperforecast.workshop.searching import BoundarySearch, class_codes, run_search, space_filling
 
-# The settings of every first increment: nothing is there to forget, so that they are not searched.
-OPENING = {"learning_rate": 0.02, "regularization": 1.0, "kept_per_class": 20}
 # Settings of the boundaries that follow, where later outcomes are recorded.
 # About the best constants of a first gathering over 28 synthetic streams.
 REFERENCE = {"ewc": (3e-4, 100.0, None), "lwf": (0.01, 0.4, None), "icarl": (0.02, 0.1, 20), "wa": (0.04, 0.01, 20)}
@@ -24,12 +23,6 @@ SIDE_BY_SIDE = 16
 MOST_OPERATIONS = 1.2e9
 # Outcomes are measured on at most this many selection rows.
 MOST_OUTCOME_ROWS = 1500
-
-
-def opening_settings(plan):
-    """Return the `Settings` of the first increment under a plan, the same for every policy."""
-    return Settings(OPENING["learning_rate"], OPENING["regularization"],
-                    OPENING["kept_per_class"] if plan.rehearses else None)
 
 
 def reference_settings(plan):
