@@ -2,6 +2,7 @@
 
 import inspect
 import sys
+import warnings
 
 import numpy as np
 
@@ -179,21 +180,29 @@ class GrowingClassifier:
         return check_whole("random_state", self.random_state, high=2**32 - 1)
 
     def _increment(self, X, y):
-        fitted = getattr(self, "carryover_", None)
         features = self._features(X)
         if y is None:
-            raise InputError("y", "must be one label for each row", "None", "pass the labels: y cannot be None")
-        known = None if fitted is None else fitted.n_features
-        features = check_features(features, n_features=known)
-        return Increment(features, check_labels(np.ravel(y) if np.ndim(y) == 2 and np.shape(y)[1] == 1 else y,
-                                                len(features)))
+            raise InputError("y", "must be one label for each row", "None",
+                             f"{type(self).__name__} requires y to be passed, but the target y is None")
+        labels = y if isinstance(y, np.ndarray) else np.asarray(y)
+        if labels.ndim == 2 and labels.shape[1] == 1:
+            _warn_of_column()
+            labels = labels[:, 0]
+        return Increment(features, check_labels(labels, len(features)))
 
     def _features(self, X):
+        """Return checked features (n, d); their number and names must be those of the first increment."""
         expected, names = getattr(self, "feature_names_in_", None), _column_names(X)
         if expected is not None and names is not None and list(names) != list(expected):
             raise InputError("X", "must have the columns of the first increment, in their order",
                              ", ".join(map(str, names)))
-        return np.asarray(X) if names is not None else X
+        features = check_features(X)
+        known = getattr(self, "n_features_in_", features.shape[1])
+        if features.shape[1] != known:
+            raise InputError("X", f"must have {known} features as before",
+                             f"X has {features.shape[1]} features, but {type(self).__name__} is expecting {known} "
+                             "features as input")
+        return features
 
     def _advised(self, increment, seed):
         """Return the boundary and the advice, or None where none is due."""
@@ -229,8 +238,7 @@ class GrowingClassifier:
 
     def _standardized(self, X):
         carryover = self._fitted()
-        features = check_features(self._features(X), n_features=carryover.n_features)
-        return carryover, carryover.standardized(features)
+        return carryover, carryover.standardized(self._features(X))
 
     def _scores(self, X):
         carryover, Z = self._standardized(X)
@@ -272,6 +280,14 @@ def _column_names(X):
         return None
     names = np.asarray(columns, dtype=object)
     return names if all(isinstance(name, str) for name in names) else None
+
+
+def _warn_of_column():
+    """Warn as scikit-learn does where it is loaded."""
+    category = UserWarning
+    if "sklearn" in sys.modules:
+        from sklearn.exceptions import DataConversionWarning as category
+    warnings.warn("A column-vector y was passed when a 1d array was expected.", category, stacklevel=4)
 
 
 def _not_fitted(message):

@@ -65,12 +65,16 @@ def check_features(X, *, name="X", n_features=None):
             X = X.astype(np.float64)
         except (TypeError, ValueError):
             raise InputError(name, "must hold numbers only, every row of the same length", _first_words(X)) from None
+    if X.dtype.kind == "c":
+        raise InputError(name, "must hold real numbers", "Complex data not supported", "split them in two features")
     if X.dtype.kind not in "fiub":
         raise InputError(name, "must hold real numbers", f"values of type {X.dtype}")
     if X.ndim != 2:
-        raise InputError(name, "must have two dimensions, rows and features", f"{X.ndim}, shape {X.shape}")
+        raise InputError(name, "must have two dimensions, rows and features", f"{X.ndim}, shape {X.shape}",
+                         "Reshape your data")
     if 0 in X.shape:
-        raise InputError(name, "must hold at least one row and one feature", f"shape {X.shape}")
+        raise InputError(name, "must hold at least one row and one feature",
+                         f"{len(X)} row(s), {X.shape[1]} feature(s) (shape={X.shape}) while a minimum of 1 is required.")
     if n_features is not None and X.shape[1] != n_features:
         raise InputError(name, f"must have {n_features} features as before", f"{X.shape[1]}")
     for start in range(0, len(X), CHUNK_ROWS):
@@ -80,7 +84,7 @@ def check_features(X, *, name="X", n_features=None):
         if not finite.all():
             row, column = np.argwhere(~finite)[0]
             raise InputError(name, "must hold finite numbers that fit float32",
-                             f"{X[start + row, column]} in row {start + row}, column {column}",
+                             f"{'NaN' if np.isnan(chunk[row, column]) else X[start + row, column]} in row {start + row}, column {column}",
                              "drop or mend such rows")
     return X if isinstance(X, np.memmap) else X.astype(np.float32, copy=False)
 
@@ -102,7 +106,8 @@ def check_labels(y, n_rows, *, name="y"):
             raise InputError(name, "must hold text only or whole numbers only", _first_words(y))
     if y.dtype.kind == "f":
         if not np.isfinite(y).all() or (y != np.round(y)).any():
-            raise InputError(name, "must hold text or whole numbers", _first_words(y[(y != np.round(y)) | ~np.isfinite(y)]))
+            raise InputError(name, "must hold text or whole numbers, no continuous values",
+                             _first_words(y[(y != np.round(y)) | ~np.isfinite(y)]))
         y = y.astype(np.int64)
     if y.dtype.kind in "iub":
         return y.astype(np.int64)

@@ -1,0 +1,227 @@
+"""The command line. Results go to standard output, progress and messages to standard error.
+
+Exit codes: 0 done; 2 bad input (one line says what, nothing was changed); 3 an update was rolled back; 130 interrupted.
+"""
+
+import os
+
+# One thread for each product: results are the same on every number of cores, and workers do not crowd each other out.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
+import argparse  # noqa: E402
+import json  # noqa: E402
+import sys  # noqa: E402
+
+from hyperforecast.checks import InputError  # noqa: E402
+from hyperforecast.settings import METHODS, Plan  # noqa: E402
+
+BAD_INPUT = 2
+INTERRUPTED = 130
+CAUTION = ("Advice is statistical. Never let it be the only safeguard of a safety function; "
+           "local codes and licensed practice come first.")
+
+
+def main(arguments=None):
+    """Run a command; return its exit code."""
+    parser = _parser()
+    options = parser.parse_args(arguments)
+    try:
+        return options.run(options) or 0
+    except InputError as error:
+        print(f"hyperforecast {options.command}: {error}", file=sys.stderr)
+        return BAD_INPUT
+    except ModuleNotFoundError as error:
+        print(f"hyperforecast {options.command}: needs {error.name}; install it with: "
+              f"pip install 'hyperforecast[workshop]'", file=sys.stderr)
+        return BAD_INPUT
+    except KeyboardInterrupt:
+        print(f"hyperforecast {options.command}: interrupted; what is stored stays stored", file=sys.stderr)
+        return INTERRUPTED
+
+
+class _Parser(argparse.ArgumentParser):
+    def error(self, message):
+        self.exit(BAD_INPUT, f"{self.prog}: {message}; see {self.prog} --help\n")
+
+
+def _parser():
+    parser = _Parser(prog="hyperforecast", description="Settings for class-incremental learning on small devices, "
+                     "advised at once from a forecaster, without a trial run.", epilog=CAUTION)
+    commands = parser.add_subparsers(dest="command", required=True, metavar="COMMAND", parser_class=_Parser)
+
+    def command(name, run, summary):
+        sub = commands.add_parser(name, help=summary, description=summary)
+        sub.set_defaults(run=run)
+        sub.add_argument("--json", action="store_true", help="write the result as JSON")
+        return sub
+
+    demo = command("demo", _demo, "Six deliveries to a salvage yard's sorting cell: advice next to the best constant.")
+    demo.add_argument("--html", default="hyperforecast-demo.html", metavar="FILE", help="report to write (%(default)s)")
+    demo.add_argument("--seed", type=int, default=0, help="of pictures and training (%(default)s)")
+
+    advise = command("advise", _advise, "Advise settings for an increment; nothing is trained.")
+    _add_device(advise)
+    _add_forecaster(advise)
+
+    update = command("update", _update, "Advise, learn, check, keep or roll back; the first one makes the device folder.")
+    _add_device(update)
+    _add_forecaster(update)
+    update.add_argument("--dry-run", action="store_true", help="stop after the advice")
+    update.add_argument("--seed", type=int, default=0, help="of training (%(default)s)")
+    plan = update.add_argument_group("plan, fixed at the first update")
+    for name, default in Plan().as_dict().items():
+        kind = int if isinstance(default, int) and name != "memory_limit" else str
+        plan.add_argument(f"--{name.replace('_', '-')}", type=kind, default=None,
+                          choices=METHODS if name == "method" else None,
+                          help=f"{PLAN_HELP[name]} ({default})")
+
+    history = command("history", _history, "What was advised, expected and achieved at each boundary of a device.")
+    history.add_argument("--device", required=True, metavar="DIR")
+
+    gather = command("gather", _gather, "Search at the boundaries of many streams, into a records file; resumes.")
+    _add_streams(gather)
+    gather.add_argument("--records", required=True, metavar="FILE", help="made if it does not exist")
+    gather.add_argument("--method", nargs="+", choices=METHODS, default=list(METHODS), help="(all)")
+    gather.add_argument("--seed", type=int, default=0, help="(%(default)s)")
+    _add_workers(gather)
+
+    fit = command("fit", _fit, "Fit a forecaster to records of one method; judged on held-out sources.")
+    fit.add_argument("--records", required=True, metavar="FILE")
+    fit.add_argument("--method", required=True, choices=METHODS)
+    fit.add_argument("--forecaster", required=True, metavar="FILE", help="forecaster to write")
+    fit.add_argument("--without", nargs="+", default=[], metavar="SOURCE", help="sources to leave out")
+    fit.add_argument("--seed", type=int, default=0, help="(%(default)s)")
+    _add_workers(fit)
+
+    search = command("search", _search, "Search settings for an increment, attempt by attempt; slower than advice.")
+    _add_device(search)
+    _add_forecaster(search)
+    search.add_argument("--selection", metavar="FILE", help="labelled rows to score attempts on "
+                        "(rows held back from the increment and from training)")
+    search.add_argument("--strategy", choices=("tpe", "random", "space_filling"), default="tpe", help="(%(default)s)")
+    search.add_argument("--attempts", type=int, default=64, help="(%(default)s)")
+    search.add_argument("--warm", action="store_true", help="begin with what the forecaster advises")
+    search.add_argument("--warm-starts", metavar="FILE", help="write the forecaster's ranked settings and spreads as "
+                        "JSON, for any optimizer, and stop")
+    search.add_argument("--seed", type=int, default=0, help="(%(default)s)")
+
+    contest = command("contest", _contest, "Advice against constants and full search on streams; resumes.")
+    _add_streams(contest)
+    contest.add_argument("--forecaster", nargs="+", required=True, metavar="FILE",
+                         help="one for each method that competes, fitted without the streams' sources")
+    contest.add_argument("--result", required=True, metavar="FILE", help="JSON; an unfinished one is continued")
+    contest.add_argument("--kind", choices=("one_step", "whole_stream"), default="one_step", help="(%(default)s)")
+    _add_workers(contest)
+
+    report = command("report", _report, "A self-contained HTML report of a device, a records file or a contest.")
+    subject = report.add_mutually_exclusive_group(required=True)
+    subject.add_argument("--device", metavar="DIR")
+    subject.add_argument("--records", metavar="FILE")
+    subject.add_argument("--result", metavar="FILE")
+    report.add_argument("--html", required=True, metavar="FILE", help="report to write")
+    return parser
+
+
+PLAN_HELP = {
+    "method": "what holds on to old classes", "hidden_units": "width of the hidden layer, 0 for none",
+    "passes": "passes over the rows", "batch_size": "rows of a minibatch",
+    "memory_limit": 'most exemplars held, or bytes as "2 MB"',
+}
+
+
+def _add_device(parser):
+    parser.add_argument("--increment", required=True, metavar="FILE", help=".npz, .npy, .csv or .parquet")
+    parser.add_argument("--device", required=True, metavar="DIR")
+
+
+def _add_forecaster(parser):
+    parser.add_argument("--forecaster", metavar="FILE", help="(the one that ships for the method)")
+
+
+def _add_streams(parser):
+    parser.add_argument("--streams", nargs="+", required=True, metavar="FILE", help="stream definitions in TOML")
+
+
+def _add_workers(parser):
+    parser.add_argument("--workers", type=int, default=os.cpu_count() or 1, help="(%(default)s, all processors)")
+
+
+def _say(options, document, lines):
+    """Write a result: JSON with --json, else lines for people."""
+    if options.json:
+        print(json.dumps(document, indent=1, allow_nan=False))
+    else:
+        print("\n".join(lines))
+
+
+def _progress(text):
+    print(text, file=sys.stderr, flush=True)
+
+
+def _gather(options):
+    from hyperforecast.workshop.gathering import RecordsFile, gather
+
+    definitions = _definitions(options.streams)
+    n_run = gather(definitions, options.records, methods=options.method, seed=_seed(options), workers=_workers(options),
+                   progress=_progress)
+    counts = RecordsFile(options.records).counts()
+    names = ("method", "source", "trajectories", "boundaries", "attempts")
+    _say(options, {"run": n_run, "records": [dict(zip(names, row)) for row in counts]},
+         [f"{n_run} trajectories run; {options.records} now holds", _table(names, counts)])
+
+
+def _fit(options):
+    from hyperforecast.forecasting import save_forecaster
+    from hyperforecast.workshop.fitting import fit_forecaster, load_dataset
+    from hyperforecast.workshop.gathering import RecordsFile
+
+    records = RecordsFile(options.records)
+    dataset = load_dataset(records, options.method, without=options.without)
+    forecaster = fit_forecaster(
+        dataset, recipe={"without": sorted(options.without)}, seed=_seed(options), threads=_workers(options),
+        progress=lambda one: _progress(f"held out {one.source}: {one.boundaries} boundaries"))
+    save_forecaster(options.forecaster, forecaster)
+    recipe = forecaster.recipe
+    rows = [(one["source"], one["boundaries"], *(f"{one[way]:.3f}" for way in ("constant", "direct", "outcome", "best")))
+            for one in recipe["held_out"]]
+    _say(options, {"forecaster": options.forecaster, "checksum": forecaster.checksum, "ranking": forecaster.ranking,
+                   "recipe": recipe},
+         ["Mean accuracy on recorded attempts of sources that were held out, chosen by",
+          _table(("source", "boundaries", "constant", "direct", "outcome", "best"), rows),
+          f"Gap closed: outcome models {recipe['gap_closed']['outcome']:.2f}, "
+          f"direct regressors {recipe['gap_closed']['direct']:.2f}; the {forecaster.ranking} models advise.",
+          f"{options.forecaster}: {os.path.getsize(options.forecaster)} bytes, checksum {forecaster.checksum[:12]}"])
+
+
+def _definitions(paths):
+    from hyperforecast.workshop.streams import load_streams
+
+    return [definition for path in paths for definition in load_streams(path)]
+
+
+def _seed(options):
+    from hyperforecast.checks import check_whole
+
+    return check_whole("--seed", options.seed)
+
+
+def _workers(options):
+    from hyperforecast.checks import check_whole
+
+    return check_whole("--workers", options.workers, low=1)
+
+
+def _table(names, rows):
+    """Columns of text, numbers to the right."""
+    cells = [[str(value) for value in row] for row in rows]
+    widths = [max(len(name), *(len(row[c]) for row in cells), 1) if cells else len(name)
+              for c, name in enumerate(names)]
+    def line(row):
+        return "  ".join(value.ljust(width) if c == 0 else value.rjust(width)
+                         for c, (value, width) in enumerate(zip(row, widths))).rstrip()
+
+    return "\n".join(line(row) for row in [names, *cells])
+
+
+if __name__ == "__main__":
+    sys.exit(main())
