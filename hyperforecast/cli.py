@@ -12,6 +12,8 @@ import argparse  # noqa: E402
 import json  # noqa: E402
 import sys  # noqa: E402
 
+import numpy as np  # noqa: E402
+
 from hyperforecast.checks import InputError  # noqa: E402
 from hyperforecast.settings import METHODS, Plan  # noqa: E402
 
@@ -158,6 +160,36 @@ def _progress(text):
     print(text, file=sys.stderr, flush=True)
 
 
+def _demo(options):
+    from hyperforecast.workshop.demo import run_demo
+    from hyperforecast.workshop.reporting.demo_report import demo_page
+
+    _progress("drawing parts ...")
+    deliveries = run_demo(seed=_seed(options), progress=lambda one: _progress(f"delivery {one.number} learned"))
+    demo_page(deliveries, seed=options.seed).write(options.html)
+    rows, document = [], []
+    for one in deliveries:
+        advised, constant = float(np.nanmean(one.advised)), float(np.nanmean(one.constant))
+        expected = one.advice and one.advice.expected_all
+        rows.append((", ".join(one.families), *(_settings_cells(one.advice and one.advice.settings)),
+                     f"{expected.value:.2f} ({expected.low:.2f}-{expected.high:.2f})" if expected else "-",
+                     f"{advised:.2f}", f"{constant:.2f}"))
+        document.append({"delivery": one.number, "families": list(one.families), "advised": advised,
+                         "constant": constant, "advice": one.advice and one.advice.as_dict()})
+    last = document[-1]
+    _say(options, {"deliveries": document, "html": options.html}, [
+        _table(("new families", "learning rate", "regularization", "kept", "expected (90%)", "advised", "constant"), rows),
+        f"Sorted right after the last delivery, over all {sum(len(one.families) for one in deliveries)} families: "
+        f"{last['advised']:.1%} with advice, {last['constant']:.1%} with the best constant settings.",
+        f"Report: {options.html}", CAUTION])
+
+
+def _settings_cells(settings):
+    if settings is None:
+        return "opening", "", ""
+    return f"{settings.learning_rate:.3g}", f"{settings.regularization:.3g}", settings.kept_per_class or "-"
+
+
 def _gather(options):
     from hyperforecast.workshop.gathering import RecordsFile, gather
 
@@ -221,6 +253,30 @@ def _table(names, rows):
                          for c, (value, width) in enumerate(zip(row, widths))).rstrip()
 
     return "\n".join(line(row) for row in [names, *cells])
+
+
+def _advise(options):
+    pass
+
+
+def _update(options):
+    pass
+
+
+def _history(options):
+    pass
+
+
+def _search(options):
+    pass
+
+
+def _contest(options):
+    pass
+
+
+def _report(options):
+    pass
 
 
 if __name__ == "__main__":
