@@ -10,9 +10,13 @@ more memory is spent than the manifest and the file's size allow.
 import hashlib
 import io
 import json
+import math
 import os
 import re
+import stat
+import tokenize
 import uuid
+import warnings
 import zipfile
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -25,6 +29,12 @@ MANIFEST = "manifest.json"
 LARGEST_MANIFEST = 16 * 2**20
 LARGEST_ARRAY = 2**31
 ARRAY_NAME = re.compile(r"[A-Za-z0-9_]{1,80}")
+ARRAY_TYPE = re.compile(r"[<>|][biufU][0-9]{1,6}")
+MOST_DIMENSIONS = 32
+
+
+class VersionError(InputError):
+    """An undamaged file of a version that this program does not read."""
 
 
 @dataclass
@@ -83,9 +93,11 @@ def read_bytes(path, *, largest):
     """Return the bytes of the file `path`; `InputError` if missing, unreadable or above `largest` bytes."""
     path = Path(path)
     try:
-        size = path.stat().st_size
-        if size > largest:
-            raise InputError(path, f"must hold at most {largest} bytes", f"{size} bytes")
+        status = path.stat()
+        if not stat.S_ISREG(status.st_mode):
+            raise InputError(path, "must be a file", "a folder, pipe or device")
+        if status.st_size > largest:
+            raise InputError(path, f"must hold at most {largest} bytes", f"{status.st_size} bytes")
         return path.read_bytes()
     except OSError as error:
         raise InputError(path, "must be a readable file", error.strerror or error) from None
@@ -115,7 +127,7 @@ def checksum(data):
 def array_bytes(array):
     """Return an array in .npy format (version 1.0 header, C order)."""
     stream = io.BytesIO()
-    np.lib.format.write_array(stream, np.ascontiguousarray(array), allow_pickle=False)
+    np.lib.format.write_array(stream, np.asarray(array, order="C"), allow_pickle=False)
     return stream.getvalue()
 
 
@@ -135,8 +147,12 @@ def read_array_header(name, stream):
     try:
         version = np.lib.format.read_magic(stream)
         read = {(1, 0): np.lib.format.read_array_header_1_0, (2, 0): np.lib.format.read_array_header_2_0}[version]
-        shape, fortran, dtype = read(stream, max_header_size=10_000)
-    except (ValueError, KeyError, TypeError, SyntaxError, EOFError, RecursionError, MemoryError) as error:
+        with warnings.catch_warnings():
+            # numpy guesses at old or odd headers with a warning; here they are refused.
+            warnings.simplefilter("error")
+            shape, fortran, dtype = read(stream, max_header_size=10_000)
+    except (ValueError, KeyError, TypeError, SyntaxError, EOFError, RecursionError, MemoryError, tokenize.TokenError,
+            Warning) as error:
         raise InputError(name, "must be an array in .npy format", error) from None
     if dtype.hasobject or dtype.fields is not None or any(side < 0 for side in shape):
         raise InputError(name, "must hold numbers or text, not Python objects", dtype)
@@ -153,9 +169,11 @@ def _manifest(bundle, encoded):
 
 
 def _encode(bundle):
-    for name in bundle.arrays:
-        if not ARRAY_NAME.fullmatch(name):
+    for name, array in bundle.arrays.items():
+        if not isinstance(name, str) or not ARRAY_NAME.fullmatch(name):
             raise InputError("array name", "must be letters, digits and underscores", repr(name))
+        if not isinstance(array, np.ndarray) or not ARRAY_TYPE.fullmatch(array.dtype.str):
+            raise InputError(name, "must be an array of numbers or text", getattr(array, "dtype", type(array).__name__))
     encoded = {name: array_bytes(array) for name, array in sorted(bundle.arrays.items())}
     return _manifest(bundle, encoded), encoded
 
@@ -196,26 +214,40 @@ def _check_manifest(path, data, kind, newest):
         raise InputError(path, f"must be a {kind} manifest", "other content")
     if document["kind"] != kind:
         raise InputError(path, f"must be a {kind}", repr(document["kind"]))
-    version = document["version"]
-    if not isinstance(version, int) or not 1 <= version <= newest:
-        raise InputError(path, f"must be of version 1 to {newest}", f"version {version!r}",
-                         "use the program's version that wrote it, or a newer one")
     body = {key: document[key] for key in ("kind", "version", "facts", "arrays")}
     if checksum(dump_json(body)) != document["sha256"]:
         raise InputError(path, "must match its checksum", "altered content", "copy it again from the source")
+    # Undamaged from here on, but perhaps made by somebody who means harm.
+    version = document["version"]
+    if type(version) is not int or not 1 <= version <= newest:
+        raise VersionError(path, f"must be of version 1 to {newest}", f"version {version!r}",
+                           "use the program's version that wrote it, or a newer one")
+    for name, entry in document["arrays"].items():
+        if not ARRAY_NAME.fullmatch(name) or not _is_array_entry(entry):
+            raise InputError(path, "must list arrays by a plain name, with checksum, type and shape", repr(name))
     return document
+
+
+def _is_array_entry(entry):
+    return (isinstance(entry, dict) and set(entry) == {"sha256", "dtype", "shape"}
+            and isinstance(entry["dtype"], str) and ARRAY_TYPE.fullmatch(entry["dtype"]) is not None
+            and isinstance(entry["shape"], list) and len(entry["shape"]) <= MOST_DIMENSIONS
+            and all(type(side) is int and side >= 0 for side in entry["shape"]))
 
 
 def _read_bundle(path, kind, newest, read_member):
     document = _check_manifest(path, read_member(MANIFEST, LARGEST_MANIFEST), kind, newest)
     arrays = {}
     for name, entry in document["arrays"].items():
-        size = int(np.prod(entry["shape"], dtype=object)) * np.dtype(entry["dtype"]).itemsize
-        data = read_member(f"{name}.npy", size + 10_000)
+        dtype, shape = np.dtype(entry["dtype"]), tuple(entry["shape"])
+        data = read_member(f"{name}.npy", math.prod(shape) * dtype.itemsize + 10_000)
         if checksum(data) != entry["sha256"]:
             raise InputError(path, f"must match its checksums ({name}.npy)", "altered content",
                              "copy it again from the source")
         arrays[name] = parse_array(f"{path} ({name}.npy)", data)
+        if arrays[name].dtype != dtype or arrays[name].shape != shape:
+            raise InputError(f"{path} ({name}.npy)", "must have the type and shape that the manifest says",
+                             f"{arrays[name].dtype.str} {arrays[name].shape}")
     return Bundle(document["kind"], document["version"], document["facts"], arrays), document["sha256"]
 
 
@@ -250,7 +282,7 @@ def read_bundle_folder(folder, kind, *, newest):
         return _read_bundle(folder, kind, newest, lambda name, largest: read_bytes(folder / name, largest=largest))
     except InputError:
         raise
-    except (KeyError, ValueError, TypeError, OverflowError) as error:
+    except (KeyError, ValueError, TypeError, OverflowError, RecursionError, MemoryError) as error:
         raise InputError(folder, f"must be a complete {kind}", error, "copy it again from the source") from None
 
 
