@@ -94,8 +94,10 @@ class Carryover:
 
 def standardize(X, center, scale):
     """Return (X - center) / scale, cut to +-10, as float32."""
-    Z = np.subtract(X, center, dtype=np.float32)
-    Z /= scale
+    # Overflow means far beyond the cut.
+    with np.errstate(over="ignore"):
+        Z = np.subtract(X, center, dtype=np.float32)
+        Z /= scale
     return np.clip(Z, -LARGEST_Z, LARGEST_Z, out=Z)
 
 
@@ -108,7 +110,7 @@ def fit_scaling(X):
     center = X.mean(axis=0, dtype=np.float64)
     deviation = X.std(axis=0, dtype=np.float64)
     typical = np.sqrt(np.mean(deviation**2))
-    scale = np.maximum(deviation, 0.1 * typical) if typical > 0 else np.ones_like(deviation)
+    scale = np.maximum(deviation, 0.1 * typical) if typical > 1e-30 else np.ones_like(deviation)
     return center.astype(np.float32), scale.astype(np.float32)
 
 

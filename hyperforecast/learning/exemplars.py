@@ -47,7 +47,7 @@ class Exemplars:
         return Exemplars(self.Z[keep], self.y[keep], self.rank[keep])
 
     def joined(self, other):
-        """Return the memory with the exemplars of `other`, which holds different classes."""
+        """Return the memory with the exemplars of `other`; where classes meet, its ranks go on from those here."""
         rank = np.concatenate([self.rank, other.rank])
         order = np.argsort(rank, kind="stable")
         Z, y = np.concatenate([self.Z, other.Z]), np.concatenate([self.y, other.y])

@@ -91,10 +91,11 @@ class _Minibatches:
         self.row_sets, self.batch_size, self.seed = row_sets, batch_size, seed
         self.steps_per_pass = np.array([-(-len(rows) // batch_size) for rows in row_sets])
         width = int(self.steps_per_pass.max()) * batch_size
-        # Places after the last row of a set stay at row 0 with weight 0.
-        self.order = np.zeros((len(row_sets), width), np.int64)
+        # Places after the last row of a set stay at its first row, with weight 0.
+        self.order = np.empty((len(row_sets), width), np.int64)
         self.weight = np.zeros((len(row_sets), width), np.float32)
         for s, rows in enumerate(row_sets):
+            self.order[s] = rows[0]
             full = len(rows) // batch_size * batch_size
             self.weight[s, :full] = 1 / batch_size
             self.weight[s, full:len(rows)] = 1 / max(len(rows) - full, 1)
@@ -172,6 +173,8 @@ class _Block:
         if layout.hidden_units:
             self.hidden = np.empty((n_heads, n_rows, layout.hidden_units), np.float32)
             self.inner = np.empty_like(self.hidden)
+            # A maximum with an array is several times faster than with a number.
+            self.zeros = np.zeros((n_rows, layout.hidden_units), np.float32)
         self.head_strength = self.strength[:, :, None]
 
     def _advance(self, step):
@@ -188,15 +191,15 @@ class _Block:
             within = first[self.set_of][:, None] + np.arange(n_rows)
             places = batches.order[self.set_of[:, None], within]
             weight = batches.weight[self.set_of[:, None], within][:, :, None]
-        X, y = self.Z[places], self.y[places]
-        targets = None if self.targets is None else self.targets[places]
+        X, y = self.Z.take(places, axis=0), self.y.take(places)
+        targets = None if self.targets is None else self.targets.take(places, axis=0)
         parts, gradient = self.parts, self.gradient_parts
         features = X
         if self.layout.hidden_units:
             features = self.hidden
             np.matmul(X, parts["hidden_weights"], out=features)
             features += parts["hidden_bias"]
-            np.maximum(features, 0, out=features)
+            np.maximum(features, self.zeros, out=features)
         np.matmul(features, parts["output_weights"], out=self.logits)
         self.logits += parts["output_bias"]
         looks = step % LOOK_EVERY == LOOK_EVERY - 1

@@ -61,7 +61,7 @@ class Trainer(Protocol):
     """What a learner offers. Rows Z are standardized float32 features (n, d); codes y count from 0."""
 
     def learn(self, jobs, *, seed):
-        """Return one `Attempt` per `Job`; all jobs share increment and plan, and differ in settings or carryover.
+        """Return one `Attempt` per `Job`; all jobs share plan and new rows, and differ in settings or carryover.
 
         At the first increment `boundary.carryover` is None: start a fresh model. `job.kept` exemplars of each old
         class are in `boundary.old_exemplars.cut(job.kept)`.
