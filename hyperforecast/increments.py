@@ -115,6 +115,10 @@ def check_labels(y, n_rows, *, name="y"):
         raise InputError(name, "must hold text or whole numbers", f"values of type {y.dtype}")
     if (np.char.str_len(np.char.strip(y)) == 0).any():
         raise InputError(name, "must name a class in every row", f"an empty label in row {np.argmin(np.char.str_len(np.char.strip(y)))}")
+    try:
+        "".join(y.tolist()).encode()
+    except UnicodeEncodeError as error:
+        raise InputError(name, "must hold text that UTF-8 can write", ascii(error.object[error.start])) from None
     return y
 
 

@@ -165,7 +165,10 @@ def _manifest(bundle, encoded):
         for name, data in encoded.items()
     }
     body = {"kind": bundle.kind, "version": bundle.version, "facts": bundle.facts, "arrays": listed}
-    return dump_json({**body, "sha256": checksum(dump_json(body))})
+    manifest = dump_json({**body, "sha256": checksum(dump_json(body))})
+    if len(manifest) > LARGEST_MANIFEST:
+        raise InputError("facts", f"must fit a manifest of {LARGEST_MANIFEST} bytes", f"{len(manifest)} bytes")
+    return manifest
 
 
 def _encode(bundle):

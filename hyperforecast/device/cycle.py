@@ -1,0 +1,266 @@
+"""The update cycle of a device: advise, learn once, check, keep or roll back, write down.
+
+An entry of the history, a JSON-able dict, tells of one update:
+
+    number, time            from 1, and UTC as ISO text; the order is that of the numbers, clocks may jump
+    rows, classes_old       rows of the increment, and how many classes were known before
+    classes_new             labels that were new
+    classes_again           labels of the increment that were known before
+    descriptors             by name; null where one could not be had
+    advice                  settings, expected accuracies with intervals, divergence, familiarity; null at the first update
+    forecaster              checksum of the one that advised, or null
+    overruled               whether settings were given, whatever was advised
+    settings, expected, diverged, achieved, operations, reasons
+                            of the last try: what it was trained with, forecast and achieved (see `update`), and why it
+                            was not kept, in words
+    earlier_tries           the tries before it, each with the same six
+    kept                    whether the last try was kept; otherwise the device carries on as before
+    seconds                 spent on the update
+"""
+
+import time
+from contextlib import nullcontext
+from dataclasses import dataclass, replace
+from datetime import UTC, datetime
+
+import numpy as np
+
+from hyperforecast.checks import InputError, check_number, check_whole
+from hyperforecast.describing import describe
+from hyperforecast.device.folder import DeviceFolder
+from hyperforecast.device.status import UpdateStatus
+from hyperforecast.forecasting import Advice, advise_settings, load_forecaster, opening_settings
+from hyperforecast.learning import Carryover, HeadTrainer, accuracies, close_boundary, open_boundary, try_settings
+from hyperforecast.settings import SettingsBox
+
+# A try is not kept if old classes lose more than this on average, or one of them more than that.
+MOST_LOST = 0.15
+MOST_LOST_BY_CLASS = 0.6
+# A single class is judged only if it has this many check rows.
+FEWEST_ROWS_OF_CLASS = 4
+# Accuracy may lie below its forecast by this many standard deviations of so few check rows.
+NOISE_DEVIATIONS = 2.0
+# Without alternatives, at the first update, the next try is this much slower.
+SLOWER = 0.1
+
+
+@dataclass(frozen=True)
+class UpdateReport:
+    """What became of an update.
+
+    Attributes
+    ----------
+    status : UpdateStatus or None
+        KEPT or ROLLED_BACK; None for a dry run.
+    generation : int or None
+        Number of the generation that tells of it; None if nothing was stored.
+    entry : dict
+        What the history says of it.
+    advice : Advice or None
+        None at the first update.
+    carryover : Carryover or None
+        What the device carries now; None if the first update was rolled back or a dry run.
+    """
+
+    status: UpdateStatus | None
+    generation: int | None
+    entry: dict
+    advice: Advice | None
+    carryover: Carryover | None
+
+    def as_dict(self):
+        """Return a JSON-able dict: the entry, with status and generation."""
+        status = "dry_run" if self.status is None else self.status.name.lower()
+        return {"status": status, "generation": self.generation, **self.entry}
+
+
+def update(folder, increment, *, plan=None, forecaster=None, trainer=None, settings=None, retries=1,
+           most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0, dry_run=False):
+    """Learn an increment on a device, in one new generation of its folder; return an `UpdateReport`.
+
+    Parameters
+    ----------
+    folder : str, Path or DeviceFolder
+        Made by the first update.
+    increment : Increment
+    plan : Plan, optional
+        Needed at the first update, and fixed by it.
+    forecaster : Forecaster, optional
+        By default the one that ships for the plan's method.
+    trainer : Trainer, optional
+        The built-in one by default.
+    settings : Settings, optional
+        Train with these, whatever is advised.
+    retries : int
+        How often a try that is not kept is followed by another one: with the next alternative of the advice, at the
+        first update with a tenth of the learning rate. Settings that were given are tried once.
+    most_lost, most_lost_by_class : float in [0, 1]
+        See the rules below.
+    seed : int
+        With the same seed, settings and data, a `GrowingClassifier` learns the same.
+    dry_run : bool
+        Stop after the advice: nothing is trained or stored, and the folder may be read-only.
+
+    Raises
+    ------
+    InputError
+        If the increment, the plan or another argument breaks a rule; `FolderBusy`, `FolderDamaged` or
+        `FolderNotWritable` for what they say. The current generation stays as it is.
+
+    Notes
+    -----
+    A try is checked on rows never trained on: the check rows that the device holds of old classes, and rows held back
+    from the increment. Let b_c and a_c be the accuracy on the n_c check rows of class c before and after, C the number
+    of classes that have some. `achieved` holds the mean of a_c over old classes (`old`), over new classes, or those of
+    the increment if none is new (`new`), and over all (`all`), the mean of b_c over old classes (`old_before`), and
+    the number of check rows (`rows`). The try is not kept if
+
+    - training diverged;
+    - the mean of b_c - a_c over old classes is more than `most_lost`;
+    - b_c - a_c of an old class with n_c >= 4 is more than `most_lost_by_class`;
+    - `all` is below low - 2 s, where low is the low end of the interval forecast for these settings and
+      s = sqrt(low (1 - low) sum_c 1 / n_c) / C is the standard deviation of a mean over classes of binomial shares.
+
+    At the first update, which has no old classes and no forecast, only the first rule can apply. An update that is
+    rolled back stores a generation too: its history tells of it, its carryover is that of before. Where there is none
+    before, nothing is stored.
+    """
+    started = time.perf_counter()
+    folder = folder if isinstance(folder, DeviceFolder) else DeviceFolder(folder)
+    check_whole("retries", retries)
+    check_whole("seed", seed, high=2**32 - 1)
+    most_lost = check_number("most_lost", most_lost, low=0, high=1)
+    most_lost_by_class = check_number("most_lost_by_class", most_lost_by_class, low=0, high=1)
+    if plan is not None:
+        plan.checked()
+    with nullcontext() if dry_run else folder.locked(create=plan is not None):
+        before = folder.read() if plan is None or folder.numbers() else None
+        carryover = None if before is None else before.carryover
+        plan = _agreed_plan(plan, carryover, increment)
+        # The boundary's seed is the one that GrowingClassifier derives.
+        seed += 7919 * (0 if carryover is None else carryover.n_boundaries)
+        boundary = open_boundary(plan, carryover, increment, seed=seed)
+        trainer = HeadTrainer() if trainer is None else trainer
+        advice = None if carryover is None else _advise(trainer, boundary, forecaster, seed)
+        candidates = _candidates(plan, advice, settings, retries)
+        check = _Check(trainer, boundary, advice, most_lost, most_lost_by_class)
+        tries = []
+        for candidate in () if dry_run else candidates:
+            attempt = try_settings(trainer, boundary, [candidate], seed=seed)[0]
+            tries.append(check.judged(attempt))
+            if not tries[-1]["reasons"]:
+                carryover = close_boundary(trainer, boundary, attempt, seed=seed)
+                break
+        history = [] if before is None else before.history
+        entry = {
+            "number": history[-1]["number"] + 1 if history else 1,
+            "time": datetime.now(UTC).isoformat(timespec="seconds"),
+            **_arrived(boundary, increment), **_advised(advice), "overruled": settings is not None,
+            **(tries[-1] if tries else {"settings": candidates[0].as_dict()}), "earlier_tries": tries[:-1],
+            "kept": bool(tries) and not tries[-1]["reasons"], "seconds": round(time.perf_counter() - started, 4),
+        }
+        stored = not dry_run and carryover is not None
+        generation = folder.store(carryover, [*history, entry]) if stored else None
+    status = None if dry_run else UpdateStatus.KEPT if entry["kept"] else UpdateStatus.ROLLED_BACK
+    return UpdateReport(status, generation, entry, advice, carryover)
+
+
+def _agreed_plan(plan, carryover, increment):
+    if carryover is None:
+        return plan
+    if plan is not None and plan != carryover.plan:
+        raise InputError("plan", f"must stay as the first update fixed it, {carryover.plan}", plan, "leave it out")
+    if increment.n_features != carryover.n_features:
+        raise InputError("increment", f"must have {carryover.n_features} features as before", increment.n_features)
+    return carryover.plan
+
+
+def _advise(trainer, boundary, forecaster, seed):
+    method = boundary.plan.method
+    forecaster = load_forecaster(method) if forecaster is None else forecaster
+    if forecaster.method != method:
+        raise InputError("forecaster", f"must be one for {method}, the method of the plan", forecaster.method)
+    descriptors = describe(trainer, boundary, seed=seed)
+    return advise_settings(forecaster, descriptors, SettingsBox(method, boundary.most_kept))
+
+
+def _candidates(plan, advice, settings, retries):
+    """Settings to try, in order."""
+    if settings is not None:
+        return [settings.checked(plan.method)]
+    if advice is not None:
+        return advice.ranked[:1 + retries]
+    opening = opening_settings(plan)
+    return [replace(opening, learning_rate=opening.learning_rate * SLOWER**k) for k in range(1 + retries)]
+
+
+class _Check:
+    """Judges attempts at a boundary by the rules of `update`."""
+
+    def __init__(self, trainer, boundary, advice, most_lost, most_lost_by_class):
+        self.trainer, self.boundary, self.advice = trainer, boundary, advice
+        self.most_lost, self.most_lost_by_class = most_lost, most_lost_by_class
+        self.rows = boundary.check_set()
+        self.count = np.bincount(self.rows.y, minlength=boundary.n_classes)
+        n_old = boundary.n_old
+        self.before = np.empty(0) if boundary.carryover is None else self._accuracies(boundary.carryover.head)[:n_old]
+        self.new = np.arange(n_old, boundary.n_classes) if n_old < boundary.n_classes else boundary.arrived
+
+    def judged(self, attempt):
+        """Return what the history tells of an attempt."""
+        after = self._accuracies(attempt.head)
+        achieved = {"old": _mean(after[:self.boundary.n_old]), "new": _mean(after[self.new]), "all": _mean(after),
+                    "old_before": _mean(self.before), "rows": len(self.rows)}
+        expected = None
+        if self.advice is not None:
+            forecast = self.advice.forecaster.at(self.advice.descriptors).expected([attempt.settings])
+            expected = {name: one.at(0).as_dict() for name, one in forecast.items()}
+        return {"settings": attempt.settings.as_dict(), "expected": expected, "diverged": bool(attempt.diverged),
+                "achieved": achieved, "operations": float(attempt.operations),
+                "reasons": list(self._reasons(attempt, after, achieved, expected))}
+
+    def _accuracies(self, head):
+        return accuracies(self.trainer, head, self.rows.Z, self.rows.y, self.boundary.n_classes)
+
+    def _reasons(self, attempt, after, achieved, expected):
+        """Yield why the attempt is not to be kept."""
+        if attempt.diverged:
+            yield "training diverged"
+            return
+        lost = self.before - after[:self.boundary.n_old]
+        rows = self.count[:self.boundary.n_old]
+        mean = _mean(lost)
+        if mean is not None and mean > self.most_lost:
+            yield (f"accuracy on old classes fell by {mean:.2f} on average over {rows.sum()} check rows, "
+                   f"more than {self.most_lost:.2f}")
+        for code in np.flatnonzero((rows >= FEWEST_ROWS_OF_CLASS) & (lost > self.most_lost_by_class)):
+            yield (f"accuracy on class {self.boundary.classes[code]} fell by {lost[code]:.2f} over {rows[code]} check "
+                   f"rows, more than {self.most_lost_by_class:.2f}")
+        if expected is not None and achieved["all"] is not None:
+            low, count = expected["all"]["low"], self.count[self.count > 0]
+            noise = NOISE_DEVIATIONS * np.sqrt(low * (1 - low) * (1 / count).sum()) / len(count)
+            if achieved["all"] < low - noise:
+                yield (f"accuracy over all classes is {achieved['all']:.2f} on {len(self.rows)} check rows, below the "
+                       f"forecast's low end {low:.2f} by more than the noise of so few rows, {noise:.2f}")
+
+
+def _mean(values):
+    """Mean of the known values as a float, None if there is none."""
+    known = values[~np.isnan(values)]
+    return float(known.mean()) if len(known) else None
+
+
+def _arrived(boundary, increment):
+    again = boundary.arrived[boundary.arrived < boundary.n_old]
+    return {"rows": len(increment), "classes_old": boundary.n_old,
+            "classes_new": boundary.classes[boundary.n_old:].tolist(), "classes_again": boundary.classes[again].tolist()}
+
+
+def _advised(advice):
+    if advice is None:
+        return {"descriptors": None, "advice": None, "forecaster": None}
+    told = advice.as_dict()
+    return {
+        "descriptors": told["descriptors"], "forecaster": told["forecaster"],
+        "advice": {name: told[name] for name in ("settings", "expected", "divergence", "familiarity")},
+    }
