@@ -6,6 +6,9 @@ Every rule about arguments and files that can be stated in a sentence raises
 
 import math
 import numbers
+import sys
+
+LARGEST_FLOAT = sys.float_info.max
 
 
 class InputError(ValueError):
@@ -26,10 +29,10 @@ class InputError(ValueError):
     def __init__(self, parameter, rule, received, remedy=""):
         self.parameter = str(parameter)
         self.rule = rule
-        self.received = " ".join(str(received).split())[:200]
+        self.received = _one_line(str(received))[:200]
         self.remedy = remedy
         line = f"{self.parameter}: {rule}; received {self.received}"
-        super().__init__(f"{line}; {remedy}" if remedy else line)
+        super().__init__(_one_line(f"{line}; {remedy}" if remedy else line))
 
     def __reduce__(self):
         return type(self), (self.parameter, self.rule, self.received, self.remedy)
@@ -38,8 +41,8 @@ class InputError(ValueError):
 def check_number(name, value, *, low=-math.inf, high=math.inf, remedy=""):
     """Return `value` as a float in [low, high], or raise `InputError`."""
     proper = isinstance(value, numbers.Real) and not isinstance(value, bool)
-    if not proper or not math.isfinite(value) or not low <= value <= high:
-        raise InputError(name, f"must be a number from {low:g} to {high:g}", repr(value), remedy)
+    if not proper or not max(low, -LARGEST_FLOAT) <= value <= min(high, LARGEST_FLOAT):
+        raise InputError(name, f"must be a number from {low:g} to {high:g}", _shown(value), remedy)
     return float(value)
 
 
@@ -48,7 +51,7 @@ def check_whole(name, value, *, low=0, high=None, remedy=""):
     proper = isinstance(value, numbers.Integral) and not isinstance(value, bool)
     if not proper or value < low or (high is not None and value > high):
         limit = f"of at least {low}" if high is None else f"from {low} to {high}"
-        raise InputError(name, f"must be a whole number {limit}", repr(value), remedy)
+        raise InputError(name, f"must be a whole number {limit}", _shown(value), remedy)
     return int(value)
 
 
@@ -64,3 +67,16 @@ def check_keys(name, given, known):
     for key in given:
         if key not in known:
             raise InputError(name, f"knows the keys {', '.join(known)}", repr(key), "correct or remove it")
+
+
+def _shown(value):
+    try:
+        return repr(value)
+    except ValueError:
+        return "a number of thousands of digits"
+
+
+def _one_line(text):
+    """Text from anywhere, a terminal's control characters escaped, as one line."""
+    signs = (sign if sign.isprintable() or sign.isspace() else ascii(sign)[1:-1] for sign in text)
+    return " ".join("".join(signs).split())

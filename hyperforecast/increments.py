@@ -7,18 +7,20 @@ and NAME.labels.npy, .csv with a header line and a column named label, and
 
 import csv
 import io
-import zipfile
+import math
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 
 from hyperforecast.checks import InputError
-from hyperforecast.storage import read_array_header
+from hyperforecast.storage import opened_zip, read_array_header
 
 LABEL_COLUMN = "label"
 LARGEST_TEXT_FILE = 2**31
 CHUNK_ROWS = 16_384
+# All labels of an array take the room of the longest.
+LONGEST_LABEL = 1000
 
 
 @dataclass(frozen=True)
@@ -60,10 +62,12 @@ def check_features(X, *, name="X", n_features=None):
         X = X if isinstance(X, np.ndarray) else np.asarray(X)
     except ValueError:
         raise InputError(name, "must be a table of numbers, every row of the same length", "ragged rows") from None
+    if np.ma.is_masked(X):
+        raise InputError(name, "must hold no masked values", "a masked array", "drop or mend such rows")
     if X.dtype.kind == "O":
         try:
             X = X.astype(np.float64)
-        except (TypeError, ValueError):
+        except (TypeError, ValueError, OverflowError):
             raise InputError(name, "must hold numbers only, every row of the same length", _first_words(X)) from None
     if X.dtype.kind == "c":
         raise InputError(name, "must hold real numbers", "Complex data not supported", "split them in two features")
@@ -83,14 +87,16 @@ def check_features(X, *, name="X", n_features=None):
         finite = np.isfinite(chunk)
         if not finite.all():
             row, column = np.argwhere(~finite)[0]
+            value = "NaN" if np.isnan(chunk[row, column]) else X[start + row, column]
             raise InputError(name, "must hold finite numbers that fit float32",
-                             f"{'NaN' if np.isnan(chunk[row, column]) else X[start + row, column]} in row {start + row}, column {column}",
-                             "drop or mend such rows")
+                             f"{value} in row {start + row}, column {column}", "drop or mend such rows")
     return X if isinstance(X, np.memmap) else X.astype(np.float32, copy=False)
 
 
 def check_labels(y, n_rows, *, name="y"):
     """Return labels as an int64 or text array of shape (n_rows,), or raise `InputError`."""
+    if np.ma.is_masked(y):
+        raise InputError(name, "must hold no masked values", "a masked array", "drop or mend such rows")
     try:
         y = np.asarray(y)
     except ValueError:
@@ -98,27 +104,32 @@ def check_labels(y, n_rows, *, name="y"):
     if y.ndim != 1 or len(y) != n_rows:
         raise InputError(name, f"must be one label for each of the {n_rows} rows", f"shape {y.shape}")
     if y.dtype.kind == "O":
-        if all(isinstance(label, str) for label in y):
-            y = y.astype(str)
-        elif all(isinstance(label, (int, np.integer)) and not isinstance(label, bool) for label in y):
-            y = y.astype(np.int64)
-        else:
+        whole = all(isinstance(label, (int, np.integer)) and not isinstance(label, bool) for label in y)
+        if not whole and not all(isinstance(label, str) for label in y):
             raise InputError(name, "must hold text only or whole numbers only", _first_words(y))
-    if y.dtype.kind == "f":
-        if not np.isfinite(y).all() or (y != np.round(y)).any():
-            raise InputError(name, "must hold text or whole numbers, no continuous values",
-                             _first_words(y[(y != np.round(y)) | ~np.isfinite(y)]))
-        y = y.astype(np.int64)
-    if y.dtype.kind in "iub":
+    else:
+        whole = y.dtype.kind in "iubf"
+    if y.dtype.kind == "f" and (not np.isfinite(y).all() or (y != np.round(y)).any()):
+        raise InputError(name, "must hold text or whole numbers, no continuous values",
+                         _first_words(y[(y != np.round(y)) | ~np.isfinite(y)]))
+    if whole:
+        y = y.astype({"f": np.float64, "b": np.int64}.get(y.dtype.kind, y.dtype), copy=False)
+        fits = (y >= -2**63) & (y < 2**63)
+        if not fits.all():
+            raise InputError(name, "must hold whole numbers of 64 bits", _first_words(y[~fits.astype(bool)]))
         return y.astype(np.int64)
-    if y.dtype.kind != "U":
+    if y.dtype.kind not in "OU":
         raise InputError(name, "must hold text or whole numbers", f"values of type {y.dtype}")
-    if (np.char.str_len(np.char.strip(y)) == 0).any():
-        raise InputError(name, "must name a class in every row", f"an empty label in row {np.argmin(np.char.str_len(np.char.strip(y)))}")
-    try:
-        "".join(y.tolist()).encode()
-    except UnicodeEncodeError as error:
-        raise InputError(name, "must hold text that UTF-8 can write", ascii(error.object[error.start])) from None
+    longest = max(map(len, y)) if y.dtype.kind == "O" else y.dtype.itemsize // 4
+    if longest > LONGEST_LABEL:
+        raise InputError(name, f"must hold labels of at most {LONGEST_LABEL} characters", longest)
+    y = y.astype(str)
+    signs = y.view(np.uint32)
+    if ((signs > 0x10FFFF) | (signs >= 0xD800) & (signs < 0xE000)).any():
+        raise InputError(name, "must hold text that UTF-8 can write", "signs that are no characters")
+    empty = np.char.str_len(np.char.strip(y)) == 0
+    if empty.any():
+        raise InputError(name, "must name a class in every row", f"an empty label in row {np.argmax(empty)}")
     return y
 
 
@@ -154,18 +165,11 @@ def _first_words(values):
 
 
 def _read_npz(path):
-    try:
-        with zipfile.ZipFile(path) as archive:
-            arrays = {}
-            for name in ("X", "y"):
-                if f"{name}.npy" not in archive.namelist():
-                    raise InputError(path, "must hold the arrays X and y", ", ".join(archive.namelist()) or "none")
-                arrays[name] = _read_member(path, archive, f"{name}.npy")
-            return arrays["X"], arrays["y"]
-    except (zipfile.BadZipFile, zipfile.zlib.error, EOFError, NotImplementedError, RuntimeError, ValueError) as error:
-        if isinstance(error, InputError):
-            raise
-        raise InputError(path, "must be a complete .npz file", error) from None
+    with opened_zip(path, path, what="a complete .npz file") as archive:
+        names = archive.namelist()
+        if not {"X.npy", "y.npy"} <= set(names):
+            raise InputError(path, "must hold the arrays X and y", ", ".join(names) or "none")
+        return _read_member(path, archive, "X.npy"), _read_member(path, archive, "y.npy")
 
 
 def _read_member(path, archive, member):
@@ -174,12 +178,12 @@ def _read_member(path, archive, member):
         # The header is read through a small window: a hostile one cannot make us allocate.
         head = io.BytesIO(stream.read(12_000))
         shape, _, dtype = read_array_header(name, head)
-    expected = int(np.prod(shape, dtype=object)) * dtype.itemsize
+    expected = math.prod(shape) * dtype.itemsize
     present = archive.getinfo(member).file_size - head.tell()
     if expected != present:
         raise InputError(name, "must hold as many bytes as its header says", f"{present}, not {expected}")
     # Deflate cannot expand more than about 1032 times; far more is a lie in the directory.
-    if present > 1100 * max(archive.getinfo(member).compress_size, 1):
+    if present > 1100 * max(min(archive.getinfo(member).compress_size, path.stat().st_size), 1):
         raise InputError(name, "must not expand more than deflate can", f"{present} bytes")
     with archive.open(member) as stream:
         return np.lib.format.read_array(stream, allow_pickle=False)
@@ -188,7 +192,7 @@ def _read_member(path, archive, member):
 def _map_npy(path):
     with open(path, "rb") as stream:
         shape, _, dtype = read_array_header(path, stream)
-        expected = stream.tell() + int(np.prod(shape, dtype=object)) * dtype.itemsize
+        expected = stream.tell() + math.prod(shape) * dtype.itemsize
     if path.stat().st_size != expected:
         raise InputError(path, "must hold as many bytes as its header says", f"{path.stat().st_size}, not {expected}")
     return np.load(path, mmap_mode="r", allow_pickle=False)
@@ -222,6 +226,9 @@ def _read_csv(path):
                 except ValueError:
                     raise InputError(path, f"must hold numbers in every column but {LABEL_COLUMN}",
                                      f"{', '.join(row)[:80]} in line {rows.line_num}") from None
+                if len(row[at]) > LONGEST_LABEL:
+                    raise InputError(path, f"must hold labels of at most {LONGEST_LABEL} characters",
+                                     f"{len(row[at])} in line {rows.line_num}")
                 labels.append(row[at])
     except (UnicodeDecodeError, csv.Error) as error:
         raise InputError(path, "must be a .csv file in UTF-8", error) from None
@@ -247,8 +254,10 @@ def _read_parquet(path):
                          "install hyperforecast[workshop], or convert to .npz") from None
     try:
         table = pyarrow.parquet.read_table(path)
-    except (pyarrow.ArrowInvalid, OSError) as error:
+    except (pyarrow.ArrowException, OSError, ValueError) as error:
         raise InputError(path, "must be a .parquet file", error) from None
+    if len(set(table.column_names)) < len(table.column_names):
+        raise InputError(path, "must name every column once", ", ".join(table.column_names)[:80])
     if table.column_names.count(LABEL_COLUMN) != 1:
         raise InputError(path, f"must have one column named {LABEL_COLUMN}", ", ".join(table.column_names)[:80])
     labels = np.array(table.column(LABEL_COLUMN).to_pylist(), dtype=object)

@@ -119,7 +119,7 @@ UNITS = {"b": 1, "kb": 10**3, "mb": 10**6, "gb": 10**9, "kib": 2**10, "mib": 2**
 
 def parse_bytes(name, text):
     """Return the bytes that a text such as "2 MB" or "512 KiB" names; `name` is what errors call it."""
-    match = re.fullmatch(r"\s*(\d+(?:\.\d+)?)\s*([A-Za-z]+)\s*", text)
+    match = re.fullmatch(r"\s*([0-9]{1,15}(?:\.[0-9]{1,15})?)\s*([A-Za-z]+)\s*", text)
     if not match or match[2].lower() not in UNITS or float(match[1]) * UNITS[match[2].lower()] < 1:
         raise InputError(name, 'must be a number of exemplars, or of bytes such as "2 MB" or "512 KiB"', repr(text))
     return int(float(match[1]) * UNITS[match[2].lower()])

@@ -14,10 +14,13 @@ import math
 import os
 import re
 import stat
+import struct
 import tokenize
 import uuid
 import warnings
 import zipfile
+import zlib
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -29,8 +32,13 @@ MANIFEST = "manifest.json"
 LARGEST_MANIFEST = 16 * 2**20
 LARGEST_ARRAY = 2**31
 ARRAY_NAME = re.compile(r"[A-Za-z0-9_]{1,80}")
-ARRAY_TYPE = re.compile(r"[<>|][biufU][0-9]{1,6}")
+ARRAY_TYPE = re.compile(r"[<>|][biufU][1-9][0-9]{0,5}")
 MOST_DIMENSIONS = 32
+# numpy's own limit, as every product of sides (those of no length aside) must fit a pointer.
+MOST_BYTES = 2**62
+# What zipfile and zlib raise on damaged bytes.
+DAMAGE = (zipfile.BadZipFile, zlib.error, struct.error, OSError, ValueError, TypeError, LookupError, ArithmeticError,
+          EOFError, RuntimeError, MemoryError)
 
 
 class VersionError(InputError):
@@ -60,19 +68,22 @@ class Bundle:
 
 
 def write_atomically(path, data):
-    """Write bytes to `path` by way of a temporary name, fsync and one rename."""
+    """Write bytes to `path` by way of a temporary name, fsync and one rename; `InputError` if it cannot be written."""
     path = Path(path)
-    partial = path.with_name(f".{path.name}.{uuid.uuid4().hex[:8]}.partial")
     try:
-        with open(partial, "wb") as file:
-            file.write(data)
-            file.flush()
-            os.fsync(file.fileno())
-        os.replace(partial, path)
-    except BaseException:
-        partial.unlink(missing_ok=True)
-        raise
-    sync_folder(path.parent)
+        partial = path.with_name(f".{path.name}.{uuid.uuid4().hex[:8]}.partial")
+        try:
+            with open(partial, "wb") as file:
+                file.write(data)
+                file.flush()
+                os.fsync(file.fileno())
+            os.replace(partial, path)
+        except BaseException:
+            partial.unlink(missing_ok=True)
+            raise
+        sync_folder(path.parent)
+    except (OSError, ValueError) as error:
+        raise InputError(path, "must be a file that can be written", _reason(error)) from None
 
 
 def sync_folder(folder):
@@ -99,17 +110,26 @@ def read_bytes(path, *, largest):
         if status.st_size > largest:
             raise InputError(path, f"must hold at most {largest} bytes", f"{status.st_size} bytes")
         return path.read_bytes()
-    except OSError as error:
-        raise InputError(path, "must be a readable file", error.strerror or error) from None
+    except InputError:
+        raise
+    except (OSError, ValueError) as error:
+        raise InputError(path, "must be a readable file", _reason(error)) from None
+
+
+def _reason(error):
+    return getattr(error, "strerror", None) or error
 
 
 def parse_json(name, data):
-    """Parse JSON bytes strictly (no NaN or Infinity); `name` is what errors call them."""
+    """Parse JSON bytes strictly (no NaN, Infinity or numbers beyond float64); `name` is what errors call them."""
     def refuse(word):
-        raise ValueError(f"the constant {word}")
+        raise ValueError(f"the number {word}")
+
+    def finite(digits):
+        return float(digits) if math.isfinite(float(digits)) else refuse(digits)
 
     try:
-        return json.loads(data.decode("utf-8"), parse_constant=refuse)
+        return json.loads(data.decode("utf-8"), parse_constant=refuse, parse_float=finite)
     except (ValueError, RecursionError) as error:
         raise InputError(name, "must hold a JSON document", error) from None
 
@@ -135,7 +155,7 @@ def parse_array(name, data):
     """Return the array in .npy bytes; object arrays and sizes that do not match are refused."""
     stream = io.BytesIO(data)
     shape, _, dtype = read_array_header(name, stream)
-    expected = int(np.prod(shape, dtype=object)) * dtype.itemsize
+    expected = math.prod(shape) * dtype.itemsize
     if expected != len(data) - stream.tell():
         raise InputError(name, "must hold as many bytes as its header says", f"{len(data) - stream.tell()}, not {expected}")
     stream.seek(0)
@@ -151,12 +171,39 @@ def read_array_header(name, stream):
             # numpy guesses at old or odd headers with a warning; here they are refused.
             warnings.simplefilter("error")
             shape, fortran, dtype = read(stream, max_header_size=10_000)
-    except (ValueError, KeyError, TypeError, SyntaxError, EOFError, RecursionError, MemoryError, tokenize.TokenError,
-            Warning) as error:
+    except (*DAMAGE, SyntaxError, AttributeError, tokenize.TokenError, Warning) as error:
         raise InputError(name, "must be an array in .npy format", error) from None
-    if dtype.hasobject or dtype.fields is not None or any(side < 0 for side in shape):
-        raise InputError(name, "must hold numbers or text, not Python objects", dtype)
+    if not ARRAY_TYPE.fullmatch(dtype.str):
+        raise InputError(name, "must hold real numbers or text, no Python objects", dtype)
+    sides = [max(side, 1) for side in shape]
+    if len(sides) > MOST_DIMENSIONS or any(type(side) is not int or side < 0 for side in shape) \
+            or math.prod(sides) * dtype.itemsize > MOST_BYTES:
+        raise InputError(name, "must have a shape that memory can hold", shape)
     return shape, fortran, dtype
+
+
+@contextmanager
+def opened_zip(path, source, *, what):
+    """Context with the zip archive in `source`, a path or file; any damage found within is an `InputError`.
+
+    Parameters
+    ----------
+    path : str or Path
+        What errors call it.
+    source : path or binary file
+    what : str
+        What it must be, for errors.
+    """
+    try:
+        with zipfile.ZipFile(source) as archive:
+            for member in archive.infolist():
+                if member.compress_type not in (zipfile.ZIP_STORED, zipfile.ZIP_DEFLATED):
+                    raise InputError(path, "must be stored or deflated", f"method {member.compress_type}")
+            yield archive
+    except InputError:
+        raise
+    except DAMAGE as error:
+        raise InputError(path, f"must be {what}", error, "copy it again from the source") from None
 
 
 def _manifest(bundle, encoded):
@@ -218,7 +265,7 @@ def _check_manifest(path, data, kind, newest):
     if document["kind"] != kind:
         raise InputError(path, f"must be a {kind}", repr(document["kind"]))
     body = {key: document[key] for key in ("kind", "version", "facts", "arrays")}
-    if checksum(dump_json(body)) != document["sha256"]:
+    if checksum(dump_json(body)) != document["sha256"] or dump_json(document) != data:
         raise InputError(path, "must match its checksum", "altered content", "copy it again from the source")
     # Undamaged from here on, but perhaps made by somebody who means harm.
     version = document["version"]
@@ -263,19 +310,14 @@ def read_bundle_file(path, kind, *, newest):
         If the file is missing, truncated, altered, of another kind or of a version above `newest`.
     """
     path = Path(path)
-    try:
-        with zipfile.ZipFile(io.BytesIO(read_bytes(path, largest=LARGEST_ARRAY))) as archive:
-            def read_member(name, largest):
-                if archive.getinfo(name).file_size > largest:
-                    raise InputError(path, f"must hold a {name} of at most {largest} bytes", "more")
-                return archive.read(name)
+    data = read_bytes(path, largest=LARGEST_ARRAY)
+    with opened_zip(path, io.BytesIO(data), what=f"a complete {kind} file") as archive:
+        def read_member(name, largest):
+            if archive.getinfo(name).file_size > largest:
+                raise InputError(path, f"must hold a {name} of at most {largest} bytes", "more")
+            return archive.read(name)
 
-            return _read_bundle(path, kind, newest, read_member)
-    except InputError:
-        raise
-    except (zipfile.BadZipFile, KeyError, OSError, ValueError, EOFError, NotImplementedError, RuntimeError,
-            TypeError, zipfile.zlib.error) as error:
-        raise InputError(path, f"must be a complete {kind} file", error, "copy it again from the source") from None
+        return _read_bundle(path, kind, newest, read_member)
 
 
 def read_bundle_folder(folder, kind, *, newest):
@@ -285,7 +327,7 @@ def read_bundle_folder(folder, kind, *, newest):
         return _read_bundle(folder, kind, newest, lambda name, largest: read_bytes(folder / name, largest=largest))
     except InputError:
         raise
-    except (KeyError, ValueError, TypeError, OverflowError, RecursionError, MemoryError) as error:
+    except DAMAGE as error:
         raise InputError(folder, f"must be a complete {kind}", error, "copy it again from the source") from None
 
 
