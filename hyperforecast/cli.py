@@ -1,6 +1,8 @@
 """The command line. Results go to standard output, progress and messages to standard error.
 
-Exit codes: 0 done; 2 bad input (one line says what, nothing was changed); 3 an update was rolled back; 130 interrupted.
+Exit codes: 0 done; 2 bad input (one line says what, nothing was changed); 130 interrupted. Of an update also those of
+`hyperforecast.device.UpdateStatus`: 3 rolled back; 4 another update is at work; 5 the device folder is damaged; 6 it
+cannot be written.
 """
 
 import os
@@ -11,6 +13,7 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 import argparse  # noqa: E402
 import json  # noqa: E402
 import sys  # noqa: E402
+from dataclasses import replace  # noqa: E402
 
 import numpy as np  # noqa: E402
 
@@ -31,7 +34,7 @@ def main(arguments=None):
         return options.run(options) or 0
     except InputError as error:
         print(f"hyperforecast {options.command}: {error}", file=sys.stderr)
-        return BAD_INPUT
+        return int(getattr(error, "status", BAD_INPUT))
     except ModuleNotFoundError as error:
         print(f"hyperforecast {options.command}: needs {error.name}; install it with: "
               f"pip install 'hyperforecast[workshop]'", file=sys.stderr)
@@ -190,6 +193,178 @@ def _settings_cells(settings):
     return f"{settings.learning_rate:.3g}", f"{settings.regularization:.3g}", settings.kept_per_class or "-"
 
 
+def _advise(options):
+    advice = _dry_run(options).advice
+    _say(options, advice.as_dict(), _advice_lines(advice))
+
+
+def _dry_run(options):
+    from hyperforecast.device import DeviceFolder, update
+    from hyperforecast.increments import read_increment
+
+    folder = DeviceFolder(options.device)
+    carryover = folder.read().carryover
+    increment = read_increment(options.increment, n_features=carryover.n_features)
+    return update(folder, increment, forecaster=_forecaster(options, carryover.plan.method), dry_run=True)
+
+
+def _advice_lines(advice):
+    verdict = advice.familiarity
+    lines = ["Advised settings", *_settings_lines(advice.settings), "Accuracy to expect, with 90% interval"]
+    for name, one in (("old classes", advice.expected_old), ("new classes", advice.expected_new),
+                      ("all classes", advice.expected_all)):
+        lines.append(f"  {name:<18} {one.value:.3f}  ({one.low:.3f} to {one.high:.3f})")
+    lines += [f"Probability of divergence  {advice.divergence:.3f}",
+              f"Familiarity  {verdict.score:.2f}: " + (
+                  "the records know boundaries like this one" if verdict.familiar
+                  else "NOT FAMILIAR, few records lie this far out; check the result with care")]
+    lines += [f"  out of range: {one.name} {one.value:.4g}, records from {one.low:.4g} to {one.high:.4g}"
+              for one in verdict.out_of_range[:5]]
+    lines += ["What moved the advice most", *(f"  {reason}" for reason in advice.reasons or ["nothing unusual"])]
+    lines.append("Alternatives, best first")
+    lines += [f"  {place}. {_short(one)}" for place, one in enumerate(advice.alternatives, 2)]
+    return [*lines, CAUTION]
+
+
+def _settings_lines(settings):
+    return [f"  {name:<18} {value:.4g}" for name, value in settings.as_dict().items()]
+
+
+def _short(settings):
+    return _listed(settings.as_dict())
+
+
+def _listed(settings):
+    return ", ".join(f"{name} {value:.3g}" for name, value in settings.items())
+
+
+def _forecaster(options, method):
+    from hyperforecast.forecasting import load_forecaster
+
+    return load_forecaster(options.forecaster or method)
+
+
+def _update(options):
+    from hyperforecast.device import DeviceFolder, update
+    from hyperforecast.increments import read_increment
+
+    folder = DeviceFolder(options.device)
+    given = {name: getattr(options, name) for name in PLAN_HELP if getattr(options, name) is not None}
+    plan, forecaster, n_features = None, None, None
+    if folder.numbers():
+        carryover = folder.read().carryover
+        forecaster, n_features = _forecaster(options, carryover.plan.method), carryover.n_features
+        plan = replace(carryover.plan, **_plan_arguments(given)) if given else None
+    else:
+        plan = Plan(**_plan_arguments(given)).checked()
+    increment = read_increment(options.increment, n_features=n_features)
+    report = update(folder, increment, plan=plan, forecaster=forecaster, seed=_seed(options), dry_run=options.dry_run)
+    _say(options, report.as_dict(), _update_lines(report))
+    return report.status or 0
+
+
+def _plan_arguments(given):
+    if "memory_limit" in given and given["memory_limit"].isdecimal():
+        given["memory_limit"] = int(given["memory_limit"])
+    return given
+
+
+def _update_lines(report):
+    entry = report.entry
+    lines = [] if report.advice is None else _advice_lines(report.advice)[:-1]
+    if report.status is None:
+        return [*lines, "Dry run: nothing was trained or stored."]
+    lines += ["Trained with", *(f"  {name:<18} {value:.4g}" for name, value in entry["settings"].items())]
+    achieved = entry["achieved"]
+    lines.append(f"Achieved on {achieved['rows']} rows held back from training")
+    lines += [f"  {name + ' classes':<18} {achieved[name]:.3f}" for name in ("old", "new", "all")
+              if achieved[name] is not None]
+    lines += [f"  rolled back: {reason}" for one in [*entry["earlier_tries"], entry] for reason in one["reasons"]]
+    kept = "Kept" if entry["kept"] else "ROLLED BACK"
+    return [*lines, f"{kept}; generation {report.generation} of the device folder, update {entry['number']}.", CAUTION]
+
+
+def _history(options):
+    from hyperforecast.device import DeviceFolder
+
+    generation = DeviceFolder(options.device).read()
+    rows = [(one["number"], one["time"], one["rows"], len(one["classes_new"]), _listed(one["settings"]),
+             _expected(one["expected"]), _number(one["achieved"]["all"]), _number(one["achieved"]["old"]),
+             "kept" if one["kept"] else "rolled back") for one in generation.history]
+    names = ("update", "time", "rows", "new classes", "settings", "expected (90%)", "achieved", "old classes", "outcome")
+    lines = [_table(names, rows)]
+    lines += [f"update {one['number']}: {reason}" for one in generation.history for reason in one["reasons"]]
+    _say(options, {"device": options.device, "generation": generation.number, "updates": generation.history}, lines)
+
+
+def _expected(expected):
+    return "-" if expected is None else "{value:.2f} ({low:.2f}-{high:.2f})".format(**expected["all"])
+
+
+def _number(value):
+    return "-" if value is None else f"{value:.2f}"
+
+
+def _search(options):
+    from hyperforecast.device import DeviceFolder
+    from hyperforecast.increments import read_increment
+    from hyperforecast.workshop.searching import prepare_search, write_warm_starts
+
+    carryover = DeviceFolder(options.device).read().carryover
+    increment, selection = (path and read_increment(path, n_features=carryover.n_features)
+                            for path in (options.increment, options.selection))
+    search = prepare_search(carryover, increment, _forecaster(options, carryover.plan.method), selection=selection,
+                            seed=_seed(options))
+    if options.warm_starts:
+        warm_starts = search.warm_starts()
+        write_warm_starts(options.warm_starts, warm_starts, carryover.plan.method)
+        _say(options, {"warm_starts": options.warm_starts, "points": len(warm_starts)},
+             [f"{len(warm_starts)} warm starts written to {options.warm_starts}"])
+        return
+    result = search.run(
+        strategy=options.strategy, attempts=options.attempts, warm=options.warm, seed=options.seed,
+        on_progress=lambda one: _progress(f"{len(one)} of {options.attempts} attempts, best {one.best_so_far[-1]:.3f}"))
+    _say(options, {**result.as_dict(), "warm": options.warm, "best": result.best.as_dict()},
+         [f"Best of {len(result)} attempts: {result.best_so_far[-1]:.3f} on {len(search.search.y)} rows, "
+          f"attempt {result.best_index + 1}", *_settings_lines(result.best)])
+
+
+def _contest(options):
+    from hyperforecast.forecasting import load_forecaster
+    from hyperforecast.workshop.contest import as_text, run_contest, summarize
+
+    forecasters = {}
+    for path in options.forecaster:
+        forecaster = load_forecaster(path)
+        if forecaster.method in forecasters:
+            raise InputError("--forecaster", "must name one file for each method", f"two for {forecaster.method}")
+        forecasters[forecaster.method] = forecaster
+    contest = run_contest(_definitions(options.streams), forecasters, options.result, kind=options.kind,
+                          workers=_workers(options), progress=_progress)
+    summary = summarize(contest)
+    _say(options, summary, [as_text(summary), f"Result file: {options.result}"])
+
+
+def _report(options):
+    if options.device:
+        from hyperforecast.device import DeviceFolder
+        from hyperforecast.workshop.reporting.device_report import device_page
+
+        page = device_page(DeviceFolder(options.device).read(), name=os.path.basename(os.path.normpath(options.device)))
+    elif options.records:
+        from hyperforecast.workshop.gathering import RecordsFile
+        from hyperforecast.workshop.reporting.records_report import records_page
+
+        page = records_page(RecordsFile(options.records))
+    else:
+        from hyperforecast.workshop.contest import load_contest
+        from hyperforecast.workshop.reporting.contest_report import contest_page
+
+        page = contest_page(load_contest(options.result))
+    page.write(options.html)
+    _say(options, {"html": options.html}, [f"Report: {options.html}"])
+
+
 def _gather(options):
     from hyperforecast.workshop.gathering import RecordsFile, gather
 
@@ -253,30 +428,6 @@ def _table(names, rows):
                          for c, (value, width) in enumerate(zip(row, widths))).rstrip()
 
     return "\n".join(line(row) for row in [names, *cells])
-
-
-def _advise(options):
-    pass
-
-
-def _update(options):
-    pass
-
-
-def _history(options):
-    pass
-
-
-def _search(options):
-    pass
-
-
-def _contest(options):
-    pass
-
-
-def _report(options):
-    pass
 
 
 if __name__ == "__main__":

@@ -81,17 +81,18 @@ def run_contest(definitions, forecasters, path, *, kind, plan=Plan(), seed=0, wo
         if held[key] != forecasters[key[1]].checksum:
             raise InputError(path, f"must hold the piece {' '.join(key)} of the same forecaster", held[key],
                              "use another result file")
-    tasks = [joblib.delayed(_run_piece)(
-        Course(definition, forecasters[method], replace(plan, method=method), seed, trainer or HeadTrainer()), kind)
-        for key, (definition, method) in wanted.items() if key not in held]
+    todo = [key for key in wanted if key not in held]
+    tasks = (joblib.delayed(_run_piece)(
+        Course(wanted[key][0], forecasters[key[1]], replace(plan, method=key[1]), seed, trainer or HeadTrainer()), kind)
+        for key in todo)
     started = time.perf_counter()
     finished = joblib.Parallel(n_jobs=workers, return_as="generator_unordered", pre_dispatch="2*n_jobs")(tasks)
     for done, piece in enumerate(finished, 1):
         contest.add(piece)
         contest.write(path)
         if progress:
-            left = (time.perf_counter() - started) / done * (len(tasks) - done)
-            progress(Progress(len(wanted) - len(tasks) + done, len(wanted), left, piece))
+            left = (time.perf_counter() - started) / done * (len(todo) - done)
+            progress(Progress(len(wanted) - len(todo) + done, len(wanted), left, piece))
     return contest
 
 

@@ -2,6 +2,7 @@
 
 from hyperforecast.workshop.searching.boundary_search import BoundarySearch, Outcome, class_codes
 from hyperforecast.workshop.searching.designs import space_filling, uniform_draws
+from hyperforecast.workshop.searching.increment_search import IncrementSearch, prepare_search
 from hyperforecast.workshop.searching.search import STARTUP, STRATEGIES, SearchResult, run_search
 from hyperforecast.workshop.searching.warm_starts import (
     WarmStart,
@@ -12,12 +13,14 @@ from hyperforecast.workshop.searching.warm_starts import (
 
 __all__ = [
     "BoundarySearch",
+    "IncrementSearch",
     "Outcome",
     "STARTUP",
     "STRATEGIES",
     "SearchResult",
     "WarmStart",
     "class_codes",
+    "prepare_search",
     "read_warm_starts",
     "run_search",
     "space_filling",
