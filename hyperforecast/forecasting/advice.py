@@ -209,8 +209,8 @@ def _scores(forecast, settings, box, now_weight):
 
 
 def _objective(forecast, settings, now_weight):
-    """Return the expected outcome (n,), now and later; candidates that may well diverge come last."""
-    value = forecast.outcome(settings)["all"]
+    """Return the expected outcome (n,), now and later, from the best; candidates that may well diverge come last."""
+    value = forecast.shortfall(settings)
     if now_weight < 1:
         value = value + (1 - now_weight) * forecast.later(settings)
     return value - (forecast.divergence(settings) > MOST_DIVERGENCE)

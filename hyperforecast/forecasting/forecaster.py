@@ -19,7 +19,7 @@ VERSION = 1
 # What is forecast, in the order of the arrays: accuracy on old and on new classes.
 OUTCOMES = ("old", "new")
 RANGES = ("old", "new", "all")
-MODELS = (*OUTCOMES, "diverged", "later", *(f"spread_{name}" for name in RANGES))
+MODELS = (*OUTCOMES, "shortfall", "diverged", "later", *(f"spread_{name}" for name in RANGES))
 DIRECT_MODELS = ("learning_rate", "regularization", "kept_per_class")
 RANKINGS = ("outcome", "direct")
 
@@ -172,6 +172,14 @@ class BoundaryForecast:
             spread = np.exp(self._raw(f"spread_{name}", coordinates)) * self.forecaster.thresholds[name]
             result[name] = Expected(value, np.clip(value - spread, 0, 1), np.clip(value + spread, 0, 1))
         return result
+
+    def shortfall(self, settings):
+        """Return how far (n,) each settings is expected to stay from the best accuracy on all classes here; at most 0.
+
+        A model of its own: it spends nothing on what differs between boundaries, and orders settings better than
+        differences of `outcome`.
+        """
+        return np.minimum(self._raw("shortfall", self.coordinates(settings)), 0)
 
     def divergence(self, settings):
         """Return the probability (n,) that each of a list of `Settings` diverges."""

@@ -65,7 +65,7 @@ def jacobian(head, Z, step=1e-6):
 
 
 def test_fisher_diagonal_of_a_linear_head_is_its_hessian_diagonal():
-    # Kirkpatrick et al. 2017; that Fisher and Hessian agree for a softmax-linear head: Martens 2020, section 9 (memory).
+    # Kirkpatrick et al. 2017; Fisher and Hessian agree for a softmax-linear head: Martens 2020, section 9 (from memory).
     rng = np.random.default_rng(0)
     head, Z = drawn_head(rng, 4, 0, 3), rng.standard_normal((20, 4)).astype(np.float32)
     y, rows = rng.integers(3, size=20), np.arange(20)
@@ -355,8 +355,9 @@ def test_icarl_classifies_by_the_nearest_mean_of_its_exemplars(hidden_units):
         assert set(kept.y) == set(range(len(carryover.classes)))
 
         def features(Z):
-            hidden = np.maximum(Z @ attempt.head["hidden_weights"] + attempt.head["hidden_bias"], 0) if hidden_units else Z
-            return hidden / np.linalg.norm(hidden, axis=1, keepdims=True)
+            if hidden_units:
+                Z = np.maximum(Z @ attempt.head["hidden_weights"] + attempt.head["hidden_bias"], 0)
+            return Z / np.linalg.norm(Z, axis=1, keepdims=True)
 
         means = np.stack([features(kept.Z)[kept.y == code].mean(axis=0) for code in range(len(carryover.classes))])
         means /= np.linalg.norm(means, axis=1, keepdims=True)

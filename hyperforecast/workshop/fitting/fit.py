@@ -50,7 +50,7 @@ class HeldOut:
     Attributes
     ----------
     forecast : dict of str to ndarray of shape (N,)
-        "old", "new" and "all".
+        "old", "new", "all" and "shortfall".
     divergence : ndarray of shape (N,)
     direct : ndarray of shape (B, D)
     figures : list of SourceFigures
@@ -70,7 +70,7 @@ class HeldOut:
 def hold_out(dataset, *, seed, threads=2, progress=None):
     """Return `HeldOut`: leave one source out in turn, fit on the others, forecast its attempts."""
     n = len(dataset.all)
-    forecast = {name: np.full(n, np.nan) for name in RANGES}
+    forecast = {name: np.full(n, np.nan) for name in (*RANGES, "shortfall")}
     divergence, direct = np.full(n, np.nan), np.full((dataset.n_boundaries, dataset.points.shape[1]), np.nan)
     figures = []
     for source in np.unique(dataset.sources):
@@ -80,6 +80,7 @@ def hold_out(dataset, *, seed, threads=2, progress=None):
         inputs = dataset.inputs(rows)
         for name in ("old", "new"):
             forecast[name][rows] = np.clip(models[name].predict(inputs), 0, 1)
+        forecast["shortfall"][rows] = models["shortfall"].predict(inputs)
         divergence[rows] = models["diverged"].predict(inputs)
         b = np.flatnonzero(~others)
         unset = np.full((len(b), dataset.coordinates.shape[1]), np.nan)
@@ -89,7 +90,7 @@ def hold_out(dataset, *, seed, threads=2, progress=None):
         raw, scale_free, kind = fit_constants(dataset, others, seed=seed)
         constant = constant_outcome(dataset, ~others, raw if kind == "raw" else scale_free)
         forecast["all"][rows] = _combined(dataset, rows, forecast)
-        figures.append(_figures(dataset, source, rows, forecast["all"], divergence, direct, constant))
+        figures.append(_figures(dataset, source, rows, forecast["shortfall"], divergence, direct, constant))
         if progress:
             progress(figures[-1])
     return HeldOut(forecast, divergence, direct, figures)
@@ -167,7 +168,7 @@ def _calibrate(dataset, held, name, *, seed, threads):
 
     The threshold comes from errors of spread models that were fitted on the other half of the sources.
     """
-    forecast = held.forecast["all"] - (held.divergence > MOST_DIVERGENCE)
+    forecast = held.forecast["shortfall"] - (held.divergence > MOST_DIVERGENCE)
     order = np.lexsort((-forecast, dataset.boundary))
     rank = np.arange(len(order)) - np.searchsorted(dataset.boundary[order], dataset.boundary[order])
     rows = np.sort(order[rank < CALIBRATED])

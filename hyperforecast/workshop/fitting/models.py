@@ -40,11 +40,13 @@ def attempt_weights(dataset, attempts):
 
 
 def train_outcomes(dataset, boundaries, *, seed, threads):
-    """Return Boosters "old", "new", "diverged" and "later" fitted on the boundaries in a mask (B,)."""
+    """Return Boosters of outcomes, by the names in `hyperforecast.forecasting`, on the boundaries in a mask (B,)."""
     attempts = np.flatnonzero(boundaries[dataset.boundary])
     inputs, weights = dataset.inputs(attempts), attempt_weights(dataset, attempts)
     options = {"seed": seed, "threads": threads}
     models = {name: train(inputs, getattr(dataset, name)[attempts], weights, **options) for name in ("old", "new")}
+    shortfall = (dataset.all - dataset.best()[dataset.boundary])[attempts]
+    models["shortfall"] = train(inputs, shortfall, weights, **options)
     even = source_weights(dataset.sources[dataset.boundary[attempts]])
     models["diverged"] = train(inputs, dataset.diverged[attempts].astype(float), even, objective="binary", small=True,
                                **options)
