@@ -63,8 +63,10 @@ class Constant:
         """Return the constant as `Settings` at a boundary, cut to the box; None if it needs a scale that is missing."""
         rate, strength = self.learning_rate, self.regularization
         if self.kind == "scale_free":
-            new, anchor = descriptors["curvature_new"], descriptors["curvature_new"] / descriptors["anchor_curvature"]
-            rate, strength = rate / new, strength * anchor
+            # A head that has diverged may have no curvature at all.
+            with np.errstate(divide="ignore", invalid="ignore"):
+                new, anchor = np.float64([descriptors["curvature_new"], descriptors["anchor_curvature"]])
+                rate, strength = float(rate / new), float(strength * new / anchor)
             if not (np.isfinite(rate) and np.isfinite(strength) and rate > 0 and strength > 0):
                 return None
         return box.from_unit(box.to_unit([Settings(rate, strength, self.kept_per_class)]))[0]

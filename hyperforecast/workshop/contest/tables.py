@@ -180,19 +180,19 @@ def _tests(rows, names):
 
 
 def as_text(summary):
-    """Return the tables of `summarize` as text of fixed width, for a screen of 110 columns."""
+    """Return the tables of `summarize` as text of fixed width, for a screen of 120 columns."""
     show = _one_step_text if summary["contest"] == one_step.KIND else _whole_stream_text
     return "\n\n".join(show(name, table) for name, table in summary["methods"].items()) + "\n"
 
 
 def _one_step_text(method, table):
     policies = [(name, f"{one['attempts']:.3g}", with_interval(one["accuracy"]), with_interval(one["over_constant"], signed=True),
-                 with_interval(one["gap_closed"]), f"{one['operations']:.1e}", f"{one['seconds']:.3f}")
+                 with_interval(one["gap_closed"], digits=2), f"{one['operations']:.1e}", f"{one['seconds']:.3f}")
                 for name, one in table["policies"].items()]
     shown = ("advice", "advice+4")
     sources = [(source, one["n_streams"], *(f"{one['policies'][name]['accuracy']:.3f}"
                                             for name in (FLOOR, *shown, CEILING)),
-                *(with_interval(one["policies"][name]["gap_closed"]) for name in shown),
+                *(with_interval(one["policies"][name]["gap_closed"], digits=2) for name in shown),
                 f"{one['policies']['advice']['worst']:+.3f}") for source, one in table["sources"].items()]
     return "\n".join([
         f"One step, {method}: {_counts(table, 'boundaries')}.",
@@ -209,10 +209,10 @@ def _one_step_text(method, table):
 
 
 def _whole_stream_text(method, table):
-    policies = [(name, *(with_interval(one[measure], signed=measure == "backward_transfer") for measure in MEASURES),
-                 f"{one['exemplars']:.0f}", f"{one['attempts']:.0f}", f"{one['operations']:.1e}", f"{one['seconds']:.2f}")
+    policies = [(name, *(with_interval(one[measure], signed=measure == "backward_transfer") for measure in MEASURES))
                 for name, one in table["policies"].items()]
-    against = [(name, with_interval(one["over_constant"], signed=True), with_interval(one["over_search"], signed=True))
+    against = [(name, with_interval(one["over_constant"], signed=True), with_interval(one["over_search"], signed=True),
+                f"{one['exemplars']:.0f}", f"{one['attempts']:.0f}", f"{one['operations']:.1e}", f"{one['seconds']:.2f}")
                for name, one in table["policies"].items()]
     names = list(table["policies"])
     sources = [(source, one["n_streams"], *(f"{one['policies'][name]['average_incremental']:.3f}" for name in names),
@@ -220,10 +220,10 @@ def _whole_stream_text(method, table):
                for source, one in table["sources"].items()]
     return "\n".join([
         f"Whole stream, {method}: {_counts(table, 'ways')}.",
-        _aligned(("policy", "incremental", "final", "backward", "forgetting", "exemplars", "attempts", "operations",
-                  "CPU s"), policies), "",
-        _aligned(("incremental accuracy", f"over {FLOOR}", f"over {CEILING}"), against), "",
-        _aligned(("source", "streams", *names, f"advice over {FLOOR}"), sources),
+        _aligned(("policy", "average incremental", "final", "backward transfer", "forgetting"), policies), "",
+        _aligned(("incremental", f"over {FLOOR}", f"over {CEILING}", "exemplars", "attempts", "operations", "CPU s"),
+                 against), "",
+        _aligned(("incremental", "streams", *names, f"advice over {FLOOR}"), sources),
         *_tests_text(table["tests"]),
     ])
 
@@ -244,9 +244,9 @@ def _tests_text(tests):
             + ", ".join(ranks) + "."]
 
 
-def with_interval(estimate, *, signed=False):
-    """Return an estimate as text, such as "0.52 [0.40, 0.61]"; a dash is a number that cannot be had."""
-    value, low, high = ("–" if estimate[name] is None else f"{estimate[name]:{'+' if signed else ''}.3f}"
+def with_interval(estimate, *, digits=3, signed=False):
+    """Return an estimate as text, such as "0.520 [0.401, 0.612]"; a dash is a number that cannot be had."""
+    value, low, high = ("–" if estimate[name] is None else f"{estimate[name]:{'+' if signed else ''}.{digits}f}"
                         for name in ("estimate", "low", "high"))
     return value if low == high == "–" else f"{value} [{low}, {high}]"
 

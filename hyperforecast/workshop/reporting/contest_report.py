@@ -38,13 +38,14 @@ def _one_step(page, table, pieces):
     page.charts(*charts, caption="Left of 0 the constant is better, right of 1 advice beats the search. Ringed points "
                                  "lie outside their 90% interval.")
     page.table(("policy", "attempts", "accuracy", "over constant", "gap closed", "operations", "CPU seconds"), [
-        (name, one["attempts"], with_interval(one["accuracy"]), with_interval(one["over_constant"], signed=True),
-         with_interval(one["gap_closed"]), one["operations"], one["seconds"])
+        (name, f"{one['attempts']:.3g}", with_interval(one["accuracy"]), with_interval(one["over_constant"], signed=True),
+         with_interval(one["gap_closed"], digits=2), one["operations"], one["seconds"])
         for name, one in table["policies"].items()], caption="Means at a boundary, every source alike.")
-    page.table(("source", "boundaries", *table["policies"], "worst"), [
-        (source, one["n"], *(policy["accuracy"] for policy in one["policies"].values()),
-         one["policies"]["advice"]["worst"]) for source, one in table["sources"].items()],
-        caption="Accuracy by source; worst is advice's least difference from the constant at a boundary.")
+    page.table(("source", "boundaries", FLOOR, *_SHOWN, CEILING, *(f"gap: {name}" for name in _SHOWN), "worst"), [
+        (source, one["n"], *(one["policies"][name]["accuracy"] for name in (FLOOR, *_SHOWN, CEILING)),
+         *(with_interval(one["policies"][name]["gap_closed"], digits=2) for name in _SHOWN), one["policies"]["advice"]["worst"])
+        for source, one in table["sources"].items()],
+        caption="Accuracy and gap closed by source; worst is advice's least difference from the constant at a boundary.")
     page.facts({
         "spread of the same settings over other seeds": table["noise"]["deviation"],
         f"accuracy of {CEILING}'s settings with other seeds": table["noise"]["ceiling_again"],
@@ -61,7 +62,7 @@ def _whole_stream(page, table, pieces):
         (name, *(with_interval(one[measure]) for measure in (*MEASURES, "over_constant", "over_search")))
         for name, one in table["policies"].items()], caption="Means over streams, every source alike.")
     page.table(("policy", "exemplars", "attempts", "operations", "CPU seconds"), [
-        (name, one["exemplars"], one["attempts"], one["operations"], one["seconds"])
+        (name, round(one["exemplars"]), round(one["attempts"]), one["operations"], one["seconds"])
         for name, one in table["policies"].items()], caption="Exemplars held on average, and costs of a whole stream.")
 
 
