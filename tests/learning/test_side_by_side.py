@@ -7,7 +7,9 @@ import numpy as np
 import pytest
 
 from hyperforecast.increments import Increment
-from hyperforecast.learning import HeadTrainer, Job, accuracies, close_boundary, open_boundary, side_by_side, try_settings
+from hyperforecast.learning import (
+    HeadTrainer, Job, accuracies, close_boundary, open_boundary, side_by_side, try_settings,
+)
 from hyperforecast.learning.head import HeadLayout
 from hyperforecast.learning.side_by_side import Regimen, train_side_by_side
 from hyperforecast.settings import METHODS, Plan, Settings, SettingsBox
@@ -62,7 +64,8 @@ def test_bits_do_not_depend_on_company(method, monkeypatch):
 
 
 @pytest.mark.parametrize("n_features, hidden_units, batch_size, classes", [
-    (1, 0, 1, (2,)), (33, 0, 50, (2, 3, 4)), (64, 64, 32, tuple(range(2, 26))), (257, 16, 7, (2, 3)), (100, 128, 64, (0, 2)),
+    (1, 0, 1, (2,)), (33, 0, 50, (2, 3, 4)), (64, 64, 32, tuple(range(2, 26))), (257, 16, 7, (2, 3)),
+    (100, 128, 64, (0, 2)),
 ])
 def test_bits_do_not_depend_on_company_in_any_shape(n_features, hidden_units, batch_size, classes):
     rng = np.random.default_rng(8)

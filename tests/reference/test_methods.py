@@ -65,7 +65,7 @@ def jacobian(head, Z, step=1e-6):
 
 
 def test_fisher_diagonal_of_a_linear_head_is_its_hessian_diagonal():
-    # Kirkpatrick et al. 2017; Fisher and Hessian agree for a softmax-linear head: Martens 2020, section 9 (from memory).
+    # Kirkpatrick et al. 2017; that both agree for a softmax-linear head: Martens 2020, section 9 (from memory).
     rng = np.random.default_rng(0)
     head, Z = drawn_head(rng, 4, 0, 3), rng.standard_normal((20, 4)).astype(np.float32)
     y, rows = rng.integers(3, size=20), np.arange(20)
