@@ -7,7 +7,8 @@ An entry of the history, a JSON-able dict, tells of one update:
     classes_new             labels that were new
     classes_again           labels of the increment that were known before
     descriptors             by name; null where one could not be had
-    advice                  settings, expected accuracies with intervals, divergence, familiarity; null at the first update
+    advice                  settings, expected accuracies with intervals, divergence, familiarity, and reasons in words;
+                            null at the first update
     forecaster              checksum of the one that advised, or null
     overruled               whether settings were given, whatever was advised
     settings, expected, diverged, achieved, operations, reasons
@@ -260,7 +261,6 @@ def _advised(advice):
     if advice is None:
         return {"descriptors": None, "advice": None, "forecaster": None}
     told = advice.as_dict()
-    return {
-        "descriptors": told["descriptors"], "forecaster": told["forecaster"],
-        "advice": {name: told[name] for name in ("settings", "expected", "divergence", "familiarity")},
-    }
+    shortened = {name: told[name] for name in ("settings", "expected", "divergence", "familiarity")}
+    return {"descriptors": told["descriptors"], "forecaster": told["forecaster"],
+            "advice": {**shortened, "reasons": [str(reason) for reason in advice.reasons]}}
