@@ -41,15 +41,16 @@ class Settings:
     kept_per_class: int | None = None
 
     def checked(self, method):
-        """Return these settings if they are valid for `method`, else raise `InputError`."""
-        check_number("learning_rate", self.learning_rate, low=LEARNING_RATES[0], high=LEARNING_RATES[1])
+        """Return these settings, as Python's own numbers, if they are valid for `method`, else raise `InputError`."""
+        rate = check_number("learning_rate", self.learning_rate, low=LEARNING_RATES[0], high=LEARNING_RATES[1])
         low, high = REGULARIZATIONS[method]
-        check_number("regularization", self.regularization, low=low, high=high)
+        strength = check_number("regularization", self.regularization, low=low, high=high)
+        kept = self.kept_per_class
         if method in REHEARSAL_METHODS:
-            check_whole("kept_per_class", self.kept_per_class, low=KEPT_PER_CLASS[0], high=KEPT_PER_CLASS[1])
-        elif self.kept_per_class is not None:
-            raise InputError("kept_per_class", f"must be None: {method} trains without exemplars", self.kept_per_class)
-        return self
+            kept = check_whole("kept_per_class", kept, low=KEPT_PER_CLASS[0], high=KEPT_PER_CLASS[1])
+        elif kept is not None:
+            raise InputError("kept_per_class", f"must be None: {method} trains without exemplars", kept)
+        return Settings(rate, strength, kept)
 
     def as_dict(self):
         """Return the settings as a JSON-able dict, without the ones that do not apply."""
@@ -79,16 +80,17 @@ class Plan:
     memory_limit: int | str = 2000
 
     def checked(self):
-        """Return this plan if it is valid, else raise `InputError`."""
-        check_choice("method", self.method, METHODS)
-        check_whole("hidden_units", self.hidden_units, low=0, high=4096)
-        check_whole("passes", self.passes, low=1, high=10_000)
-        check_whole("batch_size", self.batch_size, low=1, high=65_536)
-        if isinstance(self.memory_limit, str):
-            parse_bytes("memory_limit", self.memory_limit)
+        """Return this plan, with Python's own numbers, if it is valid, else raise `InputError`."""
+        limit = self.memory_limit
+        if isinstance(limit, str):
+            parse_bytes("memory_limit", limit)
         else:
-            check_whole("memory_limit", self.memory_limit, low=1)
-        return self
+            limit = check_whole("memory_limit", limit, low=1)
+        return Plan(
+            method=check_choice("method", self.method, METHODS),
+            hidden_units=check_whole("hidden_units", self.hidden_units, low=0, high=4096),
+            passes=check_whole("passes", self.passes, low=1, high=10_000),
+            batch_size=check_whole("batch_size", self.batch_size, low=1, high=65_536), memory_limit=limit)
 
     def memory_rows(self, n_features):
         """Return how many rows of `n_features` float32 numbers (and a label of 8 bytes) the memory limit holds."""
