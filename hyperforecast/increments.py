@@ -123,7 +123,7 @@ def check_labels(y, n_rows, *, name="y"):
     longest = max(map(len, y)) if y.dtype.kind == "O" else y.dtype.itemsize // 4
     if longest > LONGEST_LABEL:
         raise InputError(name, f"must hold labels of at most {LONGEST_LABEL} characters", longest)
-    y = y.astype(str)
+    y = y.astype(str if y.dtype.kind == "O" else y.dtype.newbyteorder("="))
     signs = y.view(np.uint32)
     if ((signs > 0x10FFFF) | (signs >= 0xD800) & (signs < 0xE000)).any():
         raise InputError(name, "must hold text that UTF-8 can write", "signs that are no characters")
@@ -145,9 +145,9 @@ def read_increment(path, *, n_features=None):
     readers = {".npz": _read_npz, ".npy": _read_npy_pair, ".csv": _read_csv, ".parquet": _read_parquet}
     if path.suffix not in readers:
         raise InputError(path, f"must end in one of {', '.join(readers)}", repr(path.suffix))
-    if not path.is_file():
-        raise InputError(path, "must be a file that exists", "nothing of that name")
     try:
+        if not path.is_file():
+            raise InputError(path, "must be a file that exists", "nothing of that name")
         X, y = readers[path.suffix](path)
         X = check_features(X, n_features=n_features)
         return Increment(X, check_labels(y, len(X)))
@@ -211,7 +211,7 @@ def _read_csv(path):
     features, labels = [], []
     try:
         with open(path, newline="", encoding="utf-8-sig") as stream:
-            rows = csv.reader(stream)
+            rows = csv.reader(stream, strict=True)
             header = next(rows, [])
             if header.count(LABEL_COLUMN) != 1:
                 raise InputError(path, f"must have one column named {LABEL_COLUMN} in its header line",
@@ -256,8 +256,6 @@ def _read_parquet(path):
         table = pyarrow.parquet.read_table(path)
     except (pyarrow.ArrowException, OSError, ValueError) as error:
         raise InputError(path, "must be a .parquet file", error) from None
-    if len(set(table.column_names)) < len(table.column_names):
-        raise InputError(path, "must name every column once", ", ".join(table.column_names)[:80])
     if table.column_names.count(LABEL_COLUMN) != 1:
         raise InputError(path, f"must have one column named {LABEL_COLUMN}", ", ".join(table.column_names)[:80])
     labels = np.array(table.column(LABEL_COLUMN).to_pylist(), dtype=object)
