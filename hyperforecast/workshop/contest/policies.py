@@ -92,7 +92,8 @@ def choose(policy, bench, earlier=None):
         proposals = getattr(bench, policy.proposals)
         candidates, seconds = proposals.settings[:policy.candidates], proposals.seconds
     trials = bench.try_out(candidates)
-    # The first of equals: candidates come in order of their promise.
-    best = trials[int(np.argmax([bench.judge(trial, policy.judged_on) for trial in trials]))]
+    # The first of equals, for candidates come in order of promise; rounded, as sums of equal shares may differ.
+    scores = np.round([bench.judge(trial, policy.judged_on) for trial in trials], 9)
+    best = trials[int(np.argmax(scores))]
     return Choice(best.attempt, best.outcome.all, len(trials) if len(trials) > 1 else 0,
                   sum(trial.attempt.operations for trial in trials), seconds + sum(trial.seconds for trial in trials))

@@ -94,6 +94,8 @@ def load_contest(path):
         check_choice("contest", document["contest"], CONTESTS)
         check_whole("seed", document["seed"])
         Plan(**document["plan"]).checked()
+        if not isinstance(document["pieces"], list):
+            raise TypeError("pieces is not a list")
         for piece in document["pieces"]:
             _check_piece(piece, document["contest"])
         contest = Contest(document["contest"], document["plan"], document["seed"], document["pieces"])

@@ -180,7 +180,7 @@ def _tests(rows, names):
 
 
 def as_text(summary):
-    """Return the tables of `summarize` as text of fixed width, for a screen of 120 columns."""
+    """Return the tables of `summarize` as text of fixed width, about 120 columns."""
     show = _one_step_text if summary["contest"] == one_step.KIND else _whole_stream_text
     return "\n\n".join(show(name, table) for name, table in summary["methods"].items()) + "\n"
 
