@@ -142,9 +142,10 @@ def load_streams(path):
         Naming file, stream, key and value, if the file cannot be read or breaks a rule.
     """
     path = Path(path)
+    data = read_bytes(path, largest=LARGEST_DEFINITIONS)
     try:
-        document = tomllib.loads(read_bytes(path, largest=LARGEST_DEFINITIONS).decode("utf-8"))
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError, RecursionError) as error:
+        document = tomllib.loads(data.decode("utf-8"))
+    except (ValueError, RecursionError) as error:
         raise InputError(path, "must be a TOML file", error) from None
     check_keys(path, document, ("stream",))
     tables = document.get("stream")
