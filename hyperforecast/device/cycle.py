@@ -142,6 +142,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         seed += 7919 * (0 if carryover is None else carryover.n_boundaries)
         boundary = open_boundary(plan, carryover, increment, seed=seed)
         trainer = HeadTrainer() if trainer is None else trainer
+        _check_head(folder, trainer, carryover)
         advice = None if carryover is None else _advise(trainer, boundary, forecaster, seed)
         candidates = _candidates(plan, advice, settings, retries)
         check = _Check(trainer, boundary, advice, most_lost, most_lost_by_class)
@@ -174,6 +175,20 @@ def _agreed_plan(plan, carryover, increment):
     if increment.n_features != carryover.n_features:
         raise InputError("increment", f"must have {carryover.n_features} features as before", increment.n_features)
     return carryover.plan
+
+
+def _check_head(folder, trainer, carryover):
+    """Refuse a head that is another trainer's."""
+    if carryover is None:
+        return
+    expected, received = (1, len(carryover.classes)), "one that it cannot score with"
+    try:
+        received = np.shape(trainer.class_scores(carryover.head, np.zeros((1, carryover.n_features), np.float32)))
+    except (KeyError, IndexError, TypeError, ValueError):
+        pass
+    if received != expected:
+        raise InputError(folder.path, f"must hold a head that {type(trainer).__name__} scores a row with, {expected}",
+                         received, "use the trainer of the first update")
 
 
 def _advise(trainer, boundary, forecaster, seed):
@@ -253,8 +268,8 @@ def _mean(values):
 
 def _arrived(boundary, increment):
     again = boundary.arrived[boundary.arrived < boundary.n_old]
-    return {"rows": len(increment), "classes_old": boundary.n_old,
-            "classes_new": boundary.classes[boundary.n_old:].tolist(), "classes_again": boundary.classes[again].tolist()}
+    return {"rows": len(increment), "classes_old": boundary.n_old, "classes_again": boundary.classes[again].tolist(),
+            "classes_new": boundary.classes[boundary.n_old:].tolist()}
 
 
 def _advised(advice):

@@ -153,7 +153,9 @@ class DeviceFolder:
         return number
 
     def revert(self):
-        """Go back to the generation before the current one, which is removed; return the number that is current now.
+        """Go back to the newest intact generation before the current one; return its number.
+
+        The current one is removed, and damaged ones in between.
 
         Raises
         ------
@@ -162,13 +164,14 @@ class DeviceFolder:
         """
         with self.locked():
             numbers = self.numbers()
-            if len(numbers) < 2:
-                raise InputError(self.path, "must hold a generation to go back to", f"{len(numbers)} generations")
-            self._read(numbers[-2])
-            _remove(self.path / _name(numbers[-1]))
-            if self.numbers()[-1] == numbers[-1]:
-                raise FolderNotWritable(self.path, "must let go of its newest generation", _name(numbers[-1]))
-            return numbers[-2]
+            intact = self._intact_before(numbers)
+            if intact is None:
+                raise InputError(self.path, "must hold an intact generation before the current one", "none before it")
+            for number in reversed(numbers[numbers.index(intact) + 1:]):
+                _remove(self.path / _name(number))
+            if self.numbers()[-1] != intact:
+                raise FolderNotWritable(self.path, "must let go of its newest generation", _name(self.numbers()[-1]))
+            return intact
 
     @contextmanager
     def locked(self, *, create=False):
@@ -200,6 +203,8 @@ class DeviceFolder:
             except BlockingIOError:
                 raise FolderBusy(self.path, "must not be in use", "a folder that another update is at work in",
                                  "try again when that has ended") from None
+            except OSError as error:
+                raise FolderNotWritable(self.path, "must lie where files can be locked", error.strerror) from None
             for name in os.listdir(self.path):
                 if PARTIAL.fullmatch(name):
                     shutil.rmtree(self.path / name, ignore_errors=True)
@@ -212,14 +217,20 @@ class DeviceFolder:
         carryover, history = carryover_from(bundle)
         return Generation(number, carryover, history, checksum)
 
-    def _way_back(self, numbers):
+    def _intact_before(self, numbers):
+        """Return the number of the newest intact generation before the current one, or None."""
         for number in reversed(numbers[:-1]):
             try:
-                self._read(number)
+                return self._read(number).number
             except InputError:
                 continue
-            return f"generation {number} is intact: revert to it"
-        return "no other generation is intact: copy the folder again from where it was saved"
+        return None
+
+    def _way_back(self, numbers):
+        intact = self._intact_before(numbers)
+        if intact is None:
+            return "no other generation is intact: copy the folder again from where it was saved"
+        return f"generation {intact} is intact: revert to it"
 
     def _without_path(self, error):
         return str(error).replace(f"{self.path}{os.sep}", "")

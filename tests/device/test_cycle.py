@@ -35,8 +35,8 @@ def forecasters(tmp_path_factory):
     """Small forecasters by method, gathered and fitted on the spot."""
     records = RecordsFile(tmp_path_factory.mktemp("gathered") / "records.sqlite", create=True)
     for family in ("gaussian", "drifting"):
-        definition = StreamDefinition(family, f"synthetic_{family}", family, 0, increments=3, classes=6, raw_dimension=6,
-                                      rows_per_class=20)
+        definition = StreamDefinition(family, f"synthetic_{family}", family, 0, increments=3, classes=6,
+                                      raw_dimension=6, rows_per_class=20)
         for method in METHODS:
             records.store(run_trajectory(definition, method, seed=0, space_filled=16, proposed=0))
     return {method: fit_forecaster(load_dataset(records, method), recipe={}, threads=1) for method in METHODS}
@@ -45,7 +45,8 @@ def forecasters(tmp_path_factory):
 def clouds(labels, *, seed=0, rows=40, features=6, apart=4.0):
     """Return an increment of Gaussian classes; a label always lies at the same place."""
     rng = np.random.default_rng(seed)
-    places = [np.random.default_rng([7, *str(label).encode()]).normal(0, apart / np.sqrt(2), features) for label in labels]
+    places = [np.random.default_rng([7, *str(label).encode()]).normal(0, apart / np.sqrt(2), features)
+              for label in labels]
     X = np.concatenate([rng.normal(0, 1, (rows, features)) + place for place in places])
     return check_increment(X, np.repeat(labels, rows))
 
@@ -107,7 +108,8 @@ def test_achieved_is_measured_on_rows_never_trained_on(started, forecasters):
     achieved = report.entry["achieved"]
     assert achieved["rows"] == len(rows) == 5 * 8
     assert achieved["old"] == pytest.approx(np.mean(by_class[:3]))
-    assert achieved["new"] == pytest.approx(np.mean(by_class[3:])) and achieved["all"] == pytest.approx(np.mean(by_class))
+    assert achieved["new"] == pytest.approx(np.mean(by_class[3:]))
+    assert achieved["all"] == pytest.approx(np.mean(by_class))
     assert achieved["old_before"] == pytest.approx(np.mean(before.best_check_accuracy))
     exemplars = report.carryover.exemplars.Z
     assert not {row.tobytes() for row in rows.Z} & {row.tobytes() for row in exemplars}
@@ -318,6 +320,18 @@ def test_bad_input_is_one_line_and_changes_nothing(started, forecasters, argumen
 def test_a_forecaster_for_another_method_is_refused(started, forecasters):
     with pytest.raises(InputError, match="forecaster: must be one for ewc, the method of the plan; received wa"):
         update(started(), clouds(SECOND), forecaster=forecasters["wa"])
+
+
+@pytest.mark.parametrize("head", [{}, {"weights": np.zeros(3)}, {"output_weights": np.zeros((8, 2), np.float32)},
+                                  {"output_weights": np.zeros((6, 2), np.float32),
+                                   "output_bias": np.zeros((1, 2), np.float32)}])
+def test_a_head_of_another_trainer_is_refused(started, forecasters, head):
+    folder = DeviceFolder(started())
+    with folder.locked():
+        generation = folder.read()
+        folder.store(replace(generation.carryover, head=head), generation.history)
+    with pytest.raises(InputError, match="must hold a head that HeadTrainer scores a row with"):
+        update(folder, clouds(SECOND), forecaster=forecasters["ewc"])
 
 
 def test_a_first_update_needs_a_plan_and_makes_no_folder_without(tmp_path):

@@ -86,9 +86,9 @@ def test_a_carryover_comes_back_bit_for_bit_and_learns_on_as_if_never_stored(tmp
     assert generation.history == [ENTRY] and generation.number == 1
     assert generation.checksum == bundle_checksum(carryover_bundle(carryover, [ENTRY]))
     settings = Settings(0.02, 0.5, 5 if carryover.plan.rehearses else None)
-    heads = []
+    heads, labels = [], ["rod", "nut"] if carryover.classes.dtype.kind == "U" else [7, 3]
     for one in (carryover, generation.carryover):
-        boundary = open_boundary(one.plan, one, clouds(np.array(["rod", "nut"] if one.classes.dtype.kind == "U" else [7, 3])))
+        boundary = open_boundary(one.plan, one, clouds(labels))
         heads.append(try_settings(HeadTrainer(), boundary, [settings], seed=1)[0].head)
     assert parts(heads[0]) == parts(heads[1])
 
@@ -156,8 +156,20 @@ def test_revert_goes_back_one_generation(two):
     first = learned(batches=(["nut", "bolt"],))
     assert two.revert() == 1
     assert parts(two.read().carryover) == parts(first) and sorted(os.listdir(two.path)) == ["generation-000001", "lock"]
-    with pytest.raises(InputError, match="must hold a generation to go back to; received 1"):
+    with pytest.raises(InputError, match="must hold an intact generation before the current one"):
         two.revert()
+
+
+def test_revert_passes_over_damaged_generations(two, monkeypatch):
+    with monkeypatch.context() as patch:
+        # As after an update that could not remove the oldest.
+        patch.setattr("hyperforecast.device.folder.GENERATIONS_KEPT", 3)
+        store(two.path, learned())
+    for number in (2, 3):
+        (two.path / f"generation-00000{number}" / "scale.npy").write_bytes(b"")
+    with pytest.raises(FolderDamaged, match="generation 1 is intact"):
+        two.read()
+    assert two.revert() == 1 and two.numbers() == [1]
 
 
 # --- damage ---------------------------------------------------------------------------------------------------------
@@ -167,7 +179,7 @@ def files(folder):
 
 
 def damages(data, rng):
-    """Yield damaged versions of a file's bytes: truncated, grown, with a byte or two changed, zeroed from a block on."""
+    """Yield damaged versions of a file's bytes: truncated, grown, zeroed from somewhere on, a bit changed."""
     for length in sorted({0, 1, 8, len(data) // 2, len(data) - 1}):
         yield data[:length]
     yield data + b"\0"
@@ -213,7 +225,7 @@ def test_with_both_generations_damaged_there_is_no_way_back(two):
         (two.path / f"generation-00000{number}" / "manifest.json").write_bytes(b"{}")
     with pytest.raises(FolderDamaged, match="no other generation is intact"):
         two.read()
-    with pytest.raises(InputError, match="must be a carryover manifest"):
+    with pytest.raises(InputError, match="must hold an intact generation before the current one"):
         two.revert()
     assert two.numbers() == [1, 2]
 
@@ -300,7 +312,8 @@ def other_arrays():
     return changes
 
 
-@pytest.mark.parametrize("name, what, change", other_arrays(), ids=lambda value: value if isinstance(value, str) else "")
+@pytest.mark.parametrize("name, what, change", other_arrays(),
+                         ids=lambda value: value if isinstance(value, str) else None)
 def test_arrays_that_do_not_fit_together_are_refused(name, what, change):
     bundle = carryover_bundle(learned(), [])
     if change is None:
@@ -338,7 +351,7 @@ def test_a_plan_of_other_values_is_refused(name, value):
 
 def test_a_missing_or_empty_folder_reads_as_one_clear_line_and_is_not_made(tmp_path):
     folder = DeviceFolder(tmp_path / "arm")
-    with pytest.raises(InputError, match="must be a device folder with a generation in it; received nothing of that name"):
+    with pytest.raises(InputError, match="with a generation in it; received nothing of that name; make"):
         folder.read()
     with pytest.raises(InputError, match="nothing of that name"), folder.locked():
         pass
@@ -354,7 +367,8 @@ def test_a_folder_or_file_of_something_else_is_refused_and_left_alone(tmp_path):
         DeviceFolder(tmp_path)
     with pytest.raises(InputError, match="must be a device folder; received Not a directory"):
         DeviceFolder(tmp_path / "notes.txt")
-    with pytest.raises(FolderNotWritable, match="No such file"), DeviceFolder(tmp_path / "no" / "arm").locked(create=True):
+    nowhere = DeviceFolder(tmp_path / "no" / "arm")
+    with pytest.raises(FolderNotWritable, match="No such file"), nowhere.locked(create=True):
         pass
     assert os.listdir(tmp_path) == ["notes.txt"]
 
