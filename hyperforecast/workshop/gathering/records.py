@@ -13,6 +13,7 @@ import numpy as np
 
 from hyperforecast.checks import InputError
 from hyperforecast.settings import Settings
+from hyperforecast.storage import parse_json
 
 APPLICATION = 0x68666331
 VERSION = 1
@@ -165,9 +166,15 @@ class RecordsFile:
                             " diverged, operations, after_one, after_two FROM attempts WHERE trajectory = ? AND boundary = ? ORDER BY attempt",
                             (key, number))]
                     descriptors = {name: np.nan if value is None else value
-                                   for name, value in json.loads(described).items()}
+                                   for name, value in self._mapping(described).items()}
                     boundaries.append(BoundaryRecord(number, old, new, most_kept, descriptors, attempts))
-                yield Trajectory(key, stream, source, seed, method_, json.loads(plan), seconds, boundaries)
+                yield Trajectory(key, stream, source, seed, method_, self._mapping(plan), seconds, boundaries)
+
+    def _mapping(self, text):
+        document = parse_json(self.path, str(text).encode())
+        if not isinstance(document, dict):
+            raise InputError(self.path, "must hold plans and descriptors by name", text)
+        return document
 
     def counts(self):
         """Return rows (method, source, trajectories, boundaries, attempts), sorted."""
