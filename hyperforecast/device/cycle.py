@@ -35,7 +35,7 @@ from hyperforecast.learning import Carryover, HeadTrainer, accuracies, close_bou
 from hyperforecast.settings import SettingsBox
 
 # A try is not kept if old classes lose more than this on average, or one of them more than that.
-MOST_LOST = 0.15
+MOST_LOST = 0.3
 MOST_LOST_BY_CLASS = 0.6
 # A single class is judged only if it has this many check rows.
 FEWEST_ROWS_OF_CLASS = 4
