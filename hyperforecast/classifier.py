@@ -10,7 +10,9 @@ from hyperforecast.checks import InputError, check_whole
 from hyperforecast.describing import describe
 from hyperforecast.forecasting import Forecaster, advise_settings, load_forecaster, opening_settings
 from hyperforecast.increments import Increment, check_features, check_labels
-from hyperforecast.learning import HeadTrainer, close_boundary, open_boundary, predict_codes, try_settings
+from hyperforecast.learning import (
+    HeadTrainer, boundary_seed, close_boundary, open_boundary, predict_codes, try_settings,
+)
 from hyperforecast.settings import Plan, Settings, SettingsBox
 
 ADVISED = "advised"
@@ -100,8 +102,8 @@ class GrowingClassifier:
         boundary, advice = self._advised(increment, seed)
         settings = self._chosen(boundary, advice)
         trainer = HeadTrainer()
-        attempt = try_settings(trainer, boundary, [settings], seed=_step(seed, boundary.carryover))[0]
-        carryover = close_boundary(trainer, boundary, attempt, seed=_step(seed, boundary.carryover))
+        attempt = try_settings(trainer, boundary, [settings], seed=boundary_seed(seed, boundary.carryover))[0]
+        carryover = close_boundary(trainer, boundary, attempt, seed=boundary_seed(seed, boundary.carryover))
         if boundary.carryover is None:
             self.seed_, self.history_, self.n_features_in_ = seed, [], increment.n_features
             names = _column_names(X)
@@ -213,7 +215,7 @@ class GrowingClassifier:
 
     def _boundary(self, increment, seed):
         carryover = getattr(self, "carryover_", None)
-        return open_boundary(self._plan(), carryover, increment, seed=_step(seed, carryover))
+        return open_boundary(self._plan(), carryover, increment, seed=boundary_seed(seed, carryover))
 
     def _advice_at(self, boundary, seed):
         forecaster = self.forecaster
@@ -221,7 +223,7 @@ class GrowingClassifier:
             forecaster = load_forecaster(self.method if forecaster is None else forecaster)
         if forecaster.method != self.method:
             raise InputError("forecaster", f"must be fitted for the method {self.method}", forecaster.method)
-        descriptors = describe(HeadTrainer(), boundary, seed=_step(seed, boundary.carryover))
+        descriptors = describe(HeadTrainer(), boundary, seed=boundary_seed(seed, boundary.carryover))
         return advise_settings(forecaster, descriptors, SettingsBox(self.method, boundary.most_kept))
 
     def _chosen(self, boundary, advice):
@@ -257,11 +259,6 @@ def advise(classifier, X, y):
     increment = classifier._increment(X, y)
     seed = classifier._seed()
     return classifier._advice_at(classifier._boundary(increment, seed), seed)
-
-
-def _step(seed, carryover):
-    """Seed of the boundary that follows a carryover."""
-    return seed + 7919 * (0 if carryover is None else carryover.n_boundaries)
 
 
 def _parameter_names():

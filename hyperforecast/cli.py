@@ -385,7 +385,7 @@ def _fit(options):
     records = RecordsFile(options.records)
     dataset = load_dataset(records, options.method, without=options.without)
     forecaster = fit_forecaster(
-        dataset, recipe={"without": sorted(options.without)}, seed=_seed(options), threads=_workers(options),
+        dataset, recipe={"without": sorted(options.without)}, seed=_seed(options), workers=_workers(options),
         progress=lambda one: _progress(f"held out {one.source}: {one.boundaries} boundaries"))
     save_forecaster(options.forecaster, forecaster)
     recipe = forecaster.recipe

@@ -31,7 +31,7 @@ from hyperforecast.describing import describe
 from hyperforecast.device.folder import DeviceFolder
 from hyperforecast.device.status import UpdateStatus
 from hyperforecast.forecasting import Advice, advise_settings, load_forecaster, opening_settings
-from hyperforecast.learning import Carryover, HeadTrainer, accuracies, close_boundary, open_boundary, try_settings
+from hyperforecast.learning import Carryover, HeadTrainer, accuracies, boundary_seed, close_boundary, open_boundary, try_settings
 from hyperforecast.settings import SettingsBox
 
 # A try is not kept if old classes lose more than this on average, or one of them more than that.
@@ -138,8 +138,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         before = folder.read() if plan is None or folder.numbers() else None
         carryover = None if before is None else before.carryover
         plan = _agreed_plan(plan, carryover, increment)
-        # The boundary's seed is the one that GrowingClassifier derives.
-        seed += 7919 * (0 if carryover is None else carryover.n_boundaries)
+        seed = boundary_seed(seed, carryover)
         boundary = open_boundary(plan, carryover, increment, seed=seed)
         trainer = HeadTrainer() if trainer is None else trainer
         _check_head(folder, trainer, carryover)

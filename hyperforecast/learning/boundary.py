@@ -184,6 +184,11 @@ class Boundary:
         return old.without(self.held_back.y).joined(self.held_back)
 
 
+def boundary_seed(seed, carryover):
+    """Return the seed of the boundary that follows a carryover (None: of the first), under a learner's own seed."""
+    return seed + 7919 * (0 if carryover is None else carryover.n_boundaries)
+
+
 def open_boundary(plan, carryover, increment, *, seed=0):
     """Return the `Boundary` at which `increment` meets `carryover` (None: it is the first increment).
 

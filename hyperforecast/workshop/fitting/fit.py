@@ -3,6 +3,7 @@
 from dataclasses import dataclass
 from importlib import metadata
 
+import joblib
 import numpy as np
 
 from hyperforecast.describing import DESCRIPTORS
@@ -67,36 +68,61 @@ class HeldOut:
         return gained / sum(one.best - one.constant for one in self.figures)
 
 
-def hold_out(dataset, *, seed, threads=2, progress=None):
-    """Return `HeldOut`: leave one source out in turn, fit on the others, forecast its attempts."""
+def hold_out(dataset, *, seed, workers=1, progress=None):
+    """Return `HeldOut`: leave one source out in turn, fit on the others, forecast its attempts.
+
+    The folds run in parallel in `workers` processes of the joblib backend that is active.
+    """
     n = len(dataset.all)
     forecast = {name: np.full(n, np.nan) for name in (*RANGES, "shortfall")}
     divergence, direct = np.full(n, np.nan), np.full((dataset.n_boundaries, dataset.points.shape[1]), np.nan)
     figures = []
-    for source in np.unique(dataset.sources):
-        others = dataset.without(source)
-        models = train_outcomes(dataset, others, seed=seed, threads=threads)
-        rows = np.flatnonzero(~others[dataset.boundary])
-        inputs = dataset.inputs(rows)
-        for name in ("old", "new"):
-            forecast[name][rows] = np.clip(models[name].predict(inputs), 0, 1)
-        forecast["shortfall"][rows] = models["shortfall"].predict(inputs)
-        divergence[rows] = models["diverged"].predict(inputs)
-        b = np.flatnonzero(~others)
-        unset = np.full((len(b), dataset.coordinates.shape[1]), np.nan)
-        settings = train_direct(dataset, others, seed=seed, threads=threads)
-        for d, model in enumerate(settings.values()):
-            direct[b, d] = model.predict(np.hstack([dataset.descriptors[b], unset]))
-        raw, scale_free, kind = fit_constants(dataset, others, seed=seed)
-        constant = constant_outcome(dataset, ~others, raw if kind == "raw" else scale_free)
-        forecast["all"][rows] = _combined(dataset, rows, forecast)
-        figures.append(_figures(dataset, source, rows, forecast["shortfall"], divergence, direct, constant))
+    folds = joblib.Parallel(n_jobs=workers, return_as="generator")(
+        joblib.delayed(_fold)(dataset, source, seed) for source in np.unique(dataset.sources))
+    for fold in folds:
+        for name, values in fold.forecast.items():
+            forecast[name][fold.attempts] = values
+        divergence[fold.attempts] = fold.divergence
+        direct[~dataset.without(fold.source)] = fold.direct
+        figures.append(_figures(dataset, fold, direct))
         if progress:
             progress(figures[-1])
     return HeldOut(forecast, divergence, direct, figures)
 
 
-def fit_forecaster(dataset, *, recipe, seed=0, threads=2, progress=None):
+@dataclass(frozen=True)
+class _Fold:
+    """Forecasts of one source's attempts and boundaries; `constant` is the estimated outcome of the best constant."""
+
+    source: str
+    attempts: np.ndarray
+    forecast: dict
+    divergence: np.ndarray
+    direct: np.ndarray
+    constant: np.ndarray
+
+
+def _fold(dataset, source, seed):
+    others = dataset.without(source)
+    attempts = np.flatnonzero(~others[dataset.boundary])
+    models = train_outcomes(dataset, others, seed=seed)
+    inputs = dataset.inputs(attempts)
+    forecast = {name: np.clip(models[name].predict(inputs, num_threads=1), 0, 1) for name in ("old", "new")}
+    b = dataset.boundary[attempts]
+    n_old, n_new = dataset.column("classes_old")[b], dataset.column("classes_new")[b]
+    forecast["all"] = (n_old * forecast["old"] + n_new * forecast["new"]) / (n_old + n_new)
+    forecast["shortfall"] = models["shortfall"].predict(inputs, num_threads=1)
+    own = np.flatnonzero(~others)
+    unset = np.full((len(own), dataset.coordinates.shape[1]), np.nan)
+    settings = np.hstack([dataset.descriptors[own], unset])
+    direct = np.stack([model.predict(settings, num_threads=1)
+                       for model in train_direct(dataset, others, seed=seed).values()], axis=1)
+    raw, scale_free, kind = fit_constants(dataset, others, seed=seed)
+    constant = constant_outcome(dataset, ~others, raw if kind == "raw" else scale_free)
+    return _Fold(source, attempts, forecast, models["diverged"].predict(inputs, num_threads=1), direct, constant)
+
+
+def fit_forecaster(dataset, *, recipe, seed=0, workers=1, progress=None):
     """Return a `Forecaster` fitted on all boundaries of a dataset.
 
     The way of choosing that does better on held-out sources ranks candidates; their errors calibrate the intervals.
@@ -106,19 +132,19 @@ def fit_forecaster(dataset, *, recipe, seed=0, threads=2, progress=None):
     dataset : Dataset
     recipe : dict
         What else should be told of its making.
-    seed, threads : int
+    seed, workers : int
     progress : callable, optional
         Called with the `SourceFigures` of each held-out source.
     """
-    held = hold_out(dataset, seed=seed, threads=threads, progress=progress)
+    held = hold_out(dataset, seed=seed, workers=workers, progress=progress)
     everything = np.ones(dataset.n_boundaries, bool)
-    boosters = train_outcomes(dataset, everything, seed=seed, threads=threads)
+    boosters = train_outcomes(dataset, everything, seed=seed)
     ranking = "outcome" if held.gap_closed("outcome") >= held.gap_closed("direct") else "direct"
     if ranking == "direct":
-        boosters.update(train_direct(dataset, everything, seed=seed, threads=threads))
+        boosters.update(train_direct(dataset, everything, seed=seed))
     thresholds = {}
     for name in RANGES:
-        boosters[f"spread_{name}"], thresholds[name] = _calibrate(dataset, held, name, seed=seed, threads=threads)
+        boosters[f"spread_{name}"], thresholds[name] = _calibrate(dataset, held, name, seed=seed)
     raw, scale_free, kind = fit_constants(dataset, everything, seed=seed)
     names = tuple(DESCRIPTORS)
     gain = sum(booster.feature_importance("gain") for booster in (boosters["old"], boosters["new"]))
@@ -144,26 +170,21 @@ def fit_forecaster(dataset, *, recipe, seed=0, threads=2, progress=None):
     return with_checksum(forecaster)
 
 
-def _combined(dataset, rows, forecast):
+def _figures(dataset, fold, direct):
+    rows = fold.attempts
     b = dataset.boundary[rows]
-    n_old, n_new = dataset.column("classes_old")[b], dataset.column("classes_new")[b]
-    return (n_old * forecast["old"][rows] + n_new * forecast["new"][rows]) / (n_old + n_new)
-
-
-def _figures(dataset, source, rows, forecast, divergence, direct, constant):
-    b = dataset.boundary[rows]
-    safe = forecast[rows] - (divergence[rows] > MOST_DIVERGENCE)
+    safe = fold.forecast["shortfall"] - (fold.divergence > MOST_DIVERGENCE)
     distance = -np.linalg.norm(dataset.points[rows] - direct[b], axis=1)
 
     def reached(scores):
         order = np.lexsort((-scores, b))
         return dataset.all[rows[order[np.searchsorted(b[order], np.unique(b))]]].mean()
 
-    return SourceFigures(str(source), len(np.unique(b)), float(constant.mean()), float(reached(safe)),
+    return SourceFigures(str(fold.source), len(np.unique(b)), float(fold.constant.mean()), float(reached(safe)),
                          float(reached(distance)), float(reached(dataset.all[rows])))
 
 
-def _calibrate(dataset, held, name, *, seed, threads):
+def _calibrate(dataset, held, name, *, seed):
     """Return (Booster of the logarithm of the error, conformal threshold of error over that) for one outcome.
 
     The threshold comes from errors of spread models that were fitted on the other half of the sources.
@@ -178,7 +199,7 @@ def _calibrate(dataset, held, name, *, seed, threads):
     weights = source_weights(sources)
 
     def spread_of(mask):
-        return train(inputs[mask], target[mask], weights[mask], small=True, seed=seed, threads=threads)
+        return train(inputs[mask], target[mask], weights[mask], small=True, seed=seed)
 
     unique = np.random.default_rng(seed).permutation(np.unique(sources))
     first = np.isin(sources, unique[::2])

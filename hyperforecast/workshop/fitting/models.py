@@ -8,19 +8,22 @@ from hyperforecast.settings import SettingsBox
 # One set for all models; values chosen on folds of the training sources.
 PARAMETERS = {
     "learning_rate": 0.06, "num_leaves": 31, "min_data_in_leaf": 40, "feature_fraction": 0.6, "lambda_l2": 1.0,
-    "max_bin": 127, "deterministic": True, "force_col_wise": True, "verbosity": -1,
+    "max_bin": 127, "deterministic": True, "force_col_wise": True, "num_threads": 1, "verbosity": -1,
 }
-ROUNDS = 260
+ROUNDS = 240
 SMALL = {"num_leaves": 15, "learning_rate": 0.05}
 SMALL_ROUNDS = 100
 # Attempts within about this much of a boundary's best form the ridge, which weighs most in the fit.
 RIDGE = 0.1
 FAR_WEIGHT = 0.1
+# Attempts farther behind the best than this are so many that every THINNED-th of them will do.
+FAR = 0.15
+THINNED = 3
 
 
-def train(inputs, target, weights, *, objective="regression", small=False, seed, threads):
+def train(inputs, target, weights, *, objective="regression", small=False, seed):
     """Return a LightGBM Booster for inputs (n, F), target (n,) and weights (n,)."""
-    parameters = {**PARAMETERS, **(SMALL if small else {}), "objective": objective, "seed": seed, "num_threads": threads}
+    parameters = {**PARAMETERS, **(SMALL if small else {}), "objective": objective, "seed": seed}
     data = lightgbm.Dataset(inputs, target, weight=weights, free_raw_data=True)
     return lightgbm.train(parameters, data, SMALL_ROUNDS if small else ROUNDS)
 
@@ -36,24 +39,33 @@ def attempt_weights(dataset, attempts):
     """Return the weight of each attempt in a fit: high on the ridge, sources evened out."""
     b = dataset.boundary[attempts]
     behind = dataset.best()[b] - dataset.all[attempts]
-    return source_weights(dataset.sources[b]) * (FAR_WEIGHT + np.exp(-behind / RIDGE))
+    stands_for = np.where(behind > FAR, THINNED, 1)
+    return source_weights(dataset.sources[b]) * stands_for * (FAR_WEIGHT + np.exp(-behind / RIDGE))
 
 
-def train_outcomes(dataset, boundaries, *, seed, threads):
+def _taken(dataset):
+    """Mask (N,) of the attempts that are fitted on: all near the ridge, every few far from it."""
+    behind = dataset.best()[dataset.boundary] - dataset.all
+    return (behind <= FAR) | (np.arange(len(behind)) % THINNED == 0)
+
+
+def train_outcomes(dataset, boundaries, *, seed):
     """Return Boosters of outcomes, by the names in `hyperforecast.forecasting`, on the boundaries in a mask (B,)."""
-    attempts = np.flatnonzero(boundaries[dataset.boundary])
+    attempts = np.flatnonzero(boundaries[dataset.boundary] & _taken(dataset))
     inputs, weights = dataset.inputs(attempts), attempt_weights(dataset, attempts)
-    options = {"seed": seed, "threads": threads}
-    models = {name: train(inputs, getattr(dataset, name)[attempts], weights, **options) for name in ("old", "new")}
+    models = {name: train(inputs, getattr(dataset, name)[attempts], weights, seed=seed) for name in ("old", "new")}
     shortfall = (dataset.all - dataset.best()[dataset.boundary])[attempts]
-    models["shortfall"] = train(inputs, shortfall, weights, **options)
+    models["shortfall"] = train(inputs, shortfall, weights, seed=seed)
     even = source_weights(dataset.sources[dataset.boundary[attempts]])
     models["diverged"] = train(inputs, dataset.diverged[attempts].astype(float), even, objective="binary", small=True,
-                               **options)
+                               seed=seed)
     extra = later_extra(dataset)
     followed = attempts[~np.isnan(extra[attempts])]
+    if not len(followed):
+        # Streams of two increments: nothing comes later, whatever the settings.
+        followed, extra = attempts, np.zeros_like(extra)
     models["later"] = train(dataset.inputs(followed), extra[followed],
-                            source_weights(dataset.sources[dataset.boundary[followed]]), small=True, **options)
+                            source_weights(dataset.sources[dataset.boundary[followed]]), small=True, seed=seed)
     return models
 
 
@@ -71,14 +83,14 @@ def later_extra(dataset):
         return gain - (total / count)[dataset.boundary]
 
 
-def train_direct(dataset, boundaries, *, seed, threads):
+def train_direct(dataset, boundaries, *, seed):
     """Return Boosters from descriptors to the best attempt's settings, as unit-cube coordinates, by setting."""
     rows = np.flatnonzero(boundaries)
     best = best_attempts(dataset)[rows]
     unset = np.full((len(rows), dataset.coordinates.shape[1]), np.nan)
     inputs = np.hstack([dataset.descriptors[rows], unset])
     weights = source_weights(dataset.sources[rows])
-    return {name: train(inputs, dataset.points[best, d], weights, small=True, seed=seed, threads=threads)
+    return {name: train(inputs, dataset.points[best, d], weights, small=True, seed=seed)
             for d, name in enumerate(SettingsBox(dataset.method).names)}
 
 
