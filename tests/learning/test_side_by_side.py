@@ -11,6 +11,7 @@ from hyperforecast.learning import (
     HeadTrainer, Job, accuracies, close_boundary, open_boundary, side_by_side, try_settings,
 )
 from hyperforecast.learning.head import HeadLayout
+from hyperforecast.learning.objectives import Objective
 from hyperforecast.learning.side_by_side import Regimen, train_side_by_side
 from hyperforecast.settings import METHODS, Plan, Settings, SettingsBox
 
@@ -134,6 +135,17 @@ def test_each_row_is_seen_once_in_a_pass_and_the_last_minibatch_is_a_mean_over_i
         moved += velocity
     assert trained.steps == 3
     assert layout.parts(trained.flat[None])["output_bias"][0, 0, 0] == pytest.approx(moved, rel=1e-6)
+
+
+def test_rows_outside_its_set_cannot_make_a_head_diverge():
+    layout, rng = HeadLayout(3, 4, 2), np.random.default_rng(9)
+    Z = rng.standard_normal((30, 3)).astype(np.float32)
+    Z[0] = 1e7
+    start = rng.standard_normal(layout.n_flat).astype(np.float32)
+    regimen = Regimen(0.01, 0.0, np.arange(1, 30), start)
+    trained = train_side_by_side(layout, Objective("ewc", n_classes=2, n_old=0, arrived=np.arange(2)), [regimen], Z=Z,
+                                 y=np.arange(30) % 2, targets=None, passes=8, batch_size=8, seed=0)[0]
+    assert not trained.diverged and trained.steps == 32
 
 
 @pytest.mark.parametrize("method", METHODS)
