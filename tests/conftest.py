@@ -43,5 +43,5 @@ def forecasters(datasets):
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(models, "ROUNDS", 20)
         patch.setattr(models, "SMALL_ROUNDS", 10)
-        return {method: fit_forecaster(dataset, recipe={"records": "eight small streams"}, threads=1)
+        return {method: fit_forecaster(dataset, recipe={"records": "eight small streams"})
                 for method, dataset in datasets.items()}
