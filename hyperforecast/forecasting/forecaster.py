@@ -3,16 +3,19 @@
 A forecaster file is a bundle (`hyperforecast.storage`) of kind "forecaster": trees, familiarity data and facts.
 """
 
+import os
 from dataclasses import dataclass
 from importlib import resources
 
 import numpy as np
 
-from hyperforecast.checks import InputError, check_choice
+from hyperforecast.checks import InputError, check_choice, check_number, check_whole
 from hyperforecast.forecasting.familiarity import Familiarity
 from hyperforecast.forecasting.trees import TreeEnsemble
-from hyperforecast.settings import COORDINATES, METHODS, SCALES, Settings, SettingsBox, scale_free
-from hyperforecast.storage import Bundle, bundle_checksum, read_bundle_file, write_bundle_file
+from hyperforecast.settings import (
+    COORDINATES, METHODS, REHEARSAL_METHODS, SCALES, Settings, SettingsBox, scale_free,
+)
+from hyperforecast.storage import Bundle, bundle_checksum, read_bundle_file, stored_array, write_bundle_file
 
 KIND = "forecaster"
 VERSION = 1
@@ -20,8 +23,9 @@ VERSION = 1
 OUTCOMES = ("old", "new")
 RANGES = ("old", "new", "all")
 MODELS = (*OUTCOMES, "shortfall", "diverged", "later", *(f"spread_{name}" for name in RANGES))
-DIRECT_MODELS = ("learning_rate", "regularization", "kept_per_class")
 RANKINGS = ("outcome", "direct")
+CONSTANTS = ("raw", "scale_free")
+SMALLEST = 1e-300
 
 
 @dataclass(frozen=True)
@@ -65,7 +69,7 @@ class Constant:
         if self.kind == "scale_free":
             # A head that has diverged may have no curvature at all.
             with np.errstate(divide="ignore", invalid="ignore"):
-                new, anchor = np.float64([descriptors["curvature_new"], descriptors["anchor_curvature"]])
+                new, anchor = (np.float64(descriptors.get(name, np.nan)) for name in ("curvature_new", "anchor_curvature"))
                 rate, strength = float(rate / new), float(strength * new / anchor)
             if not (np.isfinite(rate) and np.isfinite(strength) and rate > 0 and strength > 0):
                 return None
@@ -86,7 +90,7 @@ class Forecaster:
     descriptor_names : tuple of str
         Descriptors that the models read, in order; the coordinates of `hyperforecast.settings` follow.
     models : dict of str to TreeEnsemble
-        Those of `MODELS`, and of `DIRECT_MODELS` where they advise.
+        Those of `MODELS`, and one by the name of each setting where direct forecasts advise.
     ranking : {"outcome", "direct"}
         What orders candidates: the expected outcome, or nearness to directly forecast settings.
     thresholds : dict of str to float
@@ -201,8 +205,13 @@ class BoundaryForecast:
 
 
 def combined(old, new, descriptors):
-    """Return the accuracy on all classes seen, every class alike, from that on old and on new ones."""
-    n_old, n_new = descriptors["classes_old"], descriptors["classes_new"]
+    """Return the accuracy on all classes seen, every class alike, from that on old and on new ones.
+
+    As many old as new ones are taken for granted where the descriptors do not tell.
+    """
+    n_old, n_new = (descriptors.get(name, np.nan) for name in ("classes_old", "classes_new"))
+    if np.isnan(n_old) or np.isnan(n_new):
+        n_old = n_new = 1
     return (n_old * old + n_new * new) / (n_old + n_new)
 
 
@@ -219,7 +228,8 @@ def _to_bundle(forecaster):
         "method": forecaster.method, "descriptor_names": list(forecaster.descriptor_names),
         "coordinates": list(COORDINATES), "models": sorted(forecaster.models), "ranking": forecaster.ranking,
         # JSON knows no infinity: null says that too few sources were there to bound the error.
-        "thresholds": {name: value if np.isfinite(value) else None for name, value in forecaster.thresholds.items()}, "raw_constant": forecaster.raw_constant.as_dict(),
+        "thresholds": {name: value if np.isfinite(value) else None for name, value in forecaster.thresholds.items()},
+        "raw_constant": forecaster.raw_constant.as_dict(),
         "scale_free_constant": forecaster.scale_free_constant.as_dict(), "constant_kind": forecaster.constant_kind,
         "influential": list(forecaster.influential), "recipe": forecaster.recipe,
     }
@@ -244,6 +254,8 @@ def load_forecaster(source):
     InputError
         If the file is missing, damaged, or of another kind or version.
     """
+    if not isinstance(source, (str, os.PathLike)):
+        raise InputError("forecaster", "must be a method or the path of a forecaster file", repr(source))
     if source in METHODS:
         with resources.as_file(resources.files("hyperforecast.models") / f"{source}.forecaster") as path:
             return _load(path)
@@ -252,26 +264,53 @@ def load_forecaster(source):
 
 def _load(path):
     bundle, checksum = read_bundle_file(path, KIND, newest=VERSION)
-    facts, arrays = bundle.facts, bundle.arrays
     try:
-        if facts["coordinates"] != list(COORDINATES):
-            raise InputError(path, "must use this program's coordinates", ", ".join(facts["coordinates"]),
-                             "fit it again with this version")
-        models = {name: TreeEnsemble.from_arrays(arrays, f"{name}_") for name in facts["models"]}
-        n_features = len(facts["descriptor_names"]) + len(COORDINATES)
-        if any(model.n_features != n_features for model in models.values()) or not set(MODELS) <= set(models):
-            raise InputError(path, f"must hold models of {n_features} features", ", ".join(models))
-        constants = {kind: Constant(**facts[f"{kind}_constant"]) for kind in ("raw", "scale_free")}
-        return Forecaster(
-            method=check_choice(f"{path} (method)", facts["method"], METHODS),
-            descriptor_names=tuple(facts["descriptor_names"]), models=models,
-            ranking=check_choice(f"{path} (ranking)", facts["ranking"], RANKINGS),
-            thresholds={name: np.inf if facts["thresholds"][name] is None else float(facts["thresholds"][name])
-                        for name in RANGES},
-            familiarity=Familiarity.from_arrays(arrays, "familiarity_"),
-            raw_constant=constants["raw"], scale_free_constant=constants["scale_free"],
-            constant_kind=facts["constant_kind"], typical=np.asarray(arrays["typical"], np.float64),
-            influential=tuple(facts["influential"]), recipe=facts["recipe"], checksum=checksum,
-        )
-    except (KeyError, TypeError, AttributeError) as error:
+        return _from_bundle(bundle, checksum)
+    except InputError as error:
+        raise InputError(f"{path} ({error.parameter})", error.rule, error.received, error.remedy) from None
+    except (KeyError, TypeError, ValueError, AttributeError) as error:
         raise InputError(path, "must be a complete forecaster", error, "copy it again from the source") from None
+
+
+def _from_bundle(bundle, checksum):
+    """Return the forecaster in a bundle, every part checked: it may be made by somebody who means harm."""
+    facts, arrays = bundle.facts, bundle.arrays
+    if facts["coordinates"] != list(COORDINATES):
+        raise InputError("coordinates", "must be this program's", facts["coordinates"], "fit it again with this version")
+    method = check_choice("method", facts["method"], METHODS)
+    ranking = check_choice("ranking", facts["ranking"], RANKINGS)
+    names = tuple(facts["descriptor_names"])
+    if not all(isinstance(name, str) for name in names) or not set(facts["influential"]) <= set(names):
+        raise InputError("influential", "must be among the descriptors", facts["influential"])
+    models = {name: TreeEnsemble.from_arrays(arrays, f"{name}_") for name in facts["models"]}
+    needed = {*MODELS, *(SettingsBox(method).names if ranking == "direct" else ())}
+    n_features = len(names) + len(COORDINATES)
+    if not needed <= set(models) or any(model.n_features != n_features for model in models.values()):
+        raise InputError("models", f"must be {', '.join(sorted(needed))}, of {n_features} features", ", ".join(models))
+    familiarity = Familiarity.from_arrays(arrays, "familiarity_")
+    if tuple(familiarity.names.tolist()) != names:
+        raise InputError("familiarity", "must be that of the descriptors", "others")
+    if not isinstance(facts["recipe"], dict):
+        raise InputError("recipe", "must be told by names", facts["recipe"])
+    return Forecaster(
+        method=method, descriptor_names=names, models=models, ranking=ranking,
+        thresholds={name: np.inf if facts["thresholds"][name] is None else
+                    check_number(f"threshold of {name}", facts["thresholds"][name], low=0) for name in RANGES},
+        familiarity=familiarity, raw_constant=_constant(facts, "raw", method),
+        scale_free_constant=_constant(facts, "scale_free", method),
+        constant_kind=check_choice("constant_kind", facts["constant_kind"], CONSTANTS),
+        typical=stored_array(arrays, "typical", kinds="f", shape=(len(names),)),
+        influential=tuple(facts["influential"]), recipe=facts["recipe"], checksum=checksum,
+    )
+
+
+def _constant(facts, kind, method):
+    constant = Constant(**facts[f"{kind}_constant"])
+    check_choice(f"kind of the {kind} constant", constant.kind, (kind,))
+    for name in ("learning_rate", "regularization"):
+        check_number(f"{name} of the {kind} constant", getattr(constant, name), low=SMALLEST)
+    if method in REHEARSAL_METHODS:
+        check_whole(f"kept_per_class of the {kind} constant", constant.kept_per_class, low=1)
+    elif constant.kept_per_class is not None:
+        raise InputError(f"kept_per_class of the {kind} constant", "must be none", constant.kept_per_class)
+    return constant
