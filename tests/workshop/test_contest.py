@@ -69,7 +69,7 @@ def forecasters(folder):
     for definition in load_streams(folder / "trained.toml"):
         for method in ("wa", "ewc"):
             records.store(run_trajectory(definition, method, seed=0, space_filled=16, proposed=0))
-    return {method: fit_forecaster(load_dataset(records, method), recipe={}, threads=1) for method in ("wa", "ewc")}
+    return {method: fit_forecaster(load_dataset(records, method), recipe={}) for method in ("wa", "ewc")}
 
 
 @pytest.fixture(scope="module")
@@ -138,7 +138,8 @@ def test_choices_agree_with_choosing_by_hand(definitions, forecasters, method):
     drawn = box.from_unit(uniform_draws(64, box.n_dimensions, seed=derived_seed(bench.seed, "drawn")))
     searched = run_search(scores, box, strategy="tpe", attempts=64, batch=8, seed=bench.seed).best
     expected = {
-        "constant": forecasters[method].constant_settings(descriptors, box), "tuned-once": searched, "advice": ranked[0],
+        "constant": forecasters[method].constant_settings(descriptors, box), "tuned-once": searched,
+        "advice": ranked[0],
         "advice+4": best(ranked[:4]), "advice+8": best(ranked[:8]), "random-8": best(drawn[:8]),
         "random-64": best(drawn), "search-64": searched,
     }
@@ -378,7 +379,7 @@ def test_a_forecaster_that_saw_the_source_is_refused(tmp_path, definitions, fore
 
     with pytest.raises(InputError, match="without the source of the stream, synthetic_own_covariance"):
         run(boundaries={"synthetic_own_covariance": 1, "synthetic_drifting": 100})
-    with pytest.raises(InputError, match="which sources it was fitted on"):
+    with pytest.raises(InputError, match="what sources it was fitted on"):
         run()
     assert not (tmp_path / "result.json").exists()
 
@@ -470,7 +471,8 @@ def _contest(scores, kind="one_step", method="wa"):
 def test_gap_closed_by_hand():
     # Source a: (advice - constant, search - constant) averages (.1, .4) over its streams; b: (.1, .1).
     table = summarize(_contest({
-        "a": {"p": [{"constant": 0.2, "advice": 0.4, "search-64": 0.8}, {"constant": 0.2, "advice": 0.2, "search-64": 0.6}],
+        "a": {"p": [{"constant": 0.2, "advice": 0.4, "search-64": 0.8},
+                    {"constant": 0.2, "advice": 0.2, "search-64": 0.6}],
               "q": [{"constant": 0.4, "advice": 0.5, "search-64": 0.7}]},
         "b": {"p": [{"constant": 0.5, "advice": 0.6, "search-64": 0.6}]},
     }))["methods"]["wa"]

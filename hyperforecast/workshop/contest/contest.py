@@ -102,7 +102,7 @@ def _check_unseen(forecaster, method, source):
         raise InputError("forecasters", f"must hold a forecaster of {method} under that name", forecaster.method)
     fitted_on = forecaster.recipe.get("boundaries")
     if not isinstance(fitted_on, dict) or not fitted_on:
-        raise InputError("forecasters", f"must tell in the recipe of {method} which sources it was fitted on", "nothing")
+        raise InputError("forecasters", f"must tell in the recipe of {method} what sources it was fitted on", "nothing")
     if source in fitted_on:
         raise InputError("forecasters", f"must be fitted without the source of the stream, {source}",
                          f"{method} fitted on {', '.join(sorted(fitted_on))}", "fit it again without that source")

@@ -56,6 +56,7 @@ class _Rows:
 
     @property
     def counts(self):
+        """How many sources, streams and rows there are, as a dict."""
         return {"n_sources": len(set(self.sources)), "n_streams": len(set(self.streams)), "n": len(self.streams)}
 
     def of(self, source):
@@ -65,6 +66,7 @@ class _Rows:
 
     @property
     def units(self):
+        """What is drawn first and then within it: sources and streams, or streams where there is one source."""
         return (self.sources if len(set(self.sources)) > 1 else self.streams), self.streams
 
     def mean(self, values):
@@ -87,8 +89,9 @@ def _plain(interval):
 
 def _rows(entries):
     """Return `_Rows` of a list of (piece, {name: number})."""
-    return _Rows(np.array([piece["source"] for piece, _ in entries]), np.array([piece["stream"] for piece, _ in entries]),
-                 {name: np.array([numbers[name] for _, numbers in entries], np.float64) for name in entries[0][1]})
+    sources, streams = (np.array([piece[name] for piece, _ in entries]) for name in ("source", "stream"))
+    return _Rows(sources, streams, {name: np.array([numbers[name] for _, numbers in entries], np.float64)
+                                    for name in entries[0][1]})
 
 
 def _step_rows(pieces):
@@ -186,22 +189,23 @@ def as_text(summary):
 
 
 def _one_step_text(method, table):
-    policies = [(name, f"{one['attempts']:.3g}", with_interval(one["accuracy"]), with_interval(one["over_constant"], signed=True),
-                 with_interval(one["gap_closed"], digits=2), f"{one['operations']:.1e}", f"{one['seconds']:.3f}")
+    policies = [(name, f"{one['attempts']:.3g}", ranged(one["accuracy"]), ranged(one["over_constant"], signed=True),
+                 ranged(one["gap_closed"], digits=2), f"{one['operations']:.1e}", f"{one['seconds']:.3f}")
                 for name, one in table["policies"].items()]
-    shown = ("advice", "advice+4")
+    shown, noise = ("advice", "advice+4"), table["noise"]
     sources = [(source, one["n_streams"], *(f"{one['policies'][name]['accuracy']:.3f}"
                                             for name in (FLOOR, *shown, CEILING)),
-                *(with_interval(one["policies"][name]["gap_closed"], digits=2) for name in shown),
+                *(ranged(one["policies"][name]["gap_closed"], digits=2) for name in shown),
                 f"{one['policies']['advice']['worst']:+.3f}") for source, one in table["sources"].items()]
     return "\n".join([
         f"One step, {method}: {_counts(table, 'boundaries')}.",
-        _aligned(("policy", "attempts", "accuracy", "over constant", "gap closed", "operations", "CPU s"), policies), "",
+        _aligned(("policy", "attempts", "accuracy", f"over {FLOOR}", "gap closed", "operations", "CPU s"), policies),
+        "",
         _aligned(("source", "streams", FLOOR, *shown, CEILING, *(f"gap: {name}" for name in shown), "worst"), sources),
         "Worst: advice's least difference from the constant at a boundary.",
-        f"Noise floor: with other seeds the same settings vary by {table['noise']['deviation']:.3f} (standard deviation);"
-        f" {CEILING}'s settings then reach {table['noise']['ceiling_again']:.3f}.",
-        f"Advice's 90% interval held the accuracy reached in {with_interval(table['interval']['coverage'])} of cases;"
+        f"Noise floor: with other seeds the same settings vary by {noise['deviation']:.3f} (standard deviation);"
+        f" {CEILING}'s settings then reach {noise['ceiling_again']:.3f}.",
+        f"Advice's 90% interval held the accuracy reached in {ranged(table['interval']['coverage'])} of cases;"
         f" its median width is {table['interval']['median_width']:.3f}.",
         f"Descriptors and advice take {1000 * table['advising_seconds']:.0f} ms of CPU time at a boundary.",
         *_tests_text(table["tests"]),
@@ -209,14 +213,15 @@ def _one_step_text(method, table):
 
 
 def _whole_stream_text(method, table):
-    policies = [(name, *(with_interval(one[measure], signed=measure == "backward_transfer") for measure in MEASURES))
+    policies = [(name, *(ranged(one[measure], signed=measure == "backward_transfer") for measure in MEASURES))
                 for name, one in table["policies"].items()]
-    against = [(name, with_interval(one["over_constant"], signed=True), with_interval(one["over_search"], signed=True),
-                f"{one['exemplars']:.0f}", f"{one['attempts']:.0f}", f"{one['operations']:.1e}", f"{one['seconds']:.2f}")
+    against = [(name, ranged(one["over_constant"], signed=True), ranged(one["over_search"], signed=True),
+                f"{one['exemplars']:.0f}", f"{one['attempts']:.0f}", f"{one['operations']:.1e}",
+                f"{one['seconds']:.2f}")
                for name, one in table["policies"].items()]
     names = list(table["policies"])
     sources = [(source, one["n_streams"], *(f"{one['policies'][name]['average_incremental']:.3f}" for name in names),
-                with_interval(one["policies"]["advice"]["over_constant"], signed=True))
+                ranged(one["policies"]["advice"]["over_constant"], signed=True))
                for source, one in table["sources"].items()]
     return "\n".join([
         f"Whole stream, {method}: {_counts(table, 'ways')}.",
@@ -244,7 +249,7 @@ def _tests_text(tests):
             + ", ".join(ranks) + "."]
 
 
-def with_interval(estimate, *, digits=3, signed=False):
+def ranged(estimate, *, digits=3, signed=False):
     """Return an estimate as text, such as "0.520 [0.401, 0.612]"; a dash is a number that cannot be had."""
     value, low, high = ("–" if estimate[name] is None else f"{estimate[name]:{'+' if signed else ''}.{digits}f}"
                         for name in ("estimate", "low", "high"))

@@ -3,7 +3,7 @@
 import numpy as np
 
 from hyperforecast.workshop.contest import CEILING, FLOOR, summarize
-from hyperforecast.workshop.contest.tables import MEASURES, with_interval
+from hyperforecast.workshop.contest.tables import MEASURES, ranged
 from hyperforecast.workshop.reporting.charts import expected_and_achieved, interval_chart, line_chart
 from hyperforecast.workshop.reporting.page import Page
 
@@ -38,28 +38,30 @@ def _one_step(page, table, pieces):
     page.charts(*charts, caption="Left of 0 the constant is better, right of 1 advice beats the search. Ringed points "
                                  "lie outside their 90% interval.")
     page.table(("policy", "attempts", "accuracy", "over constant", "gap closed", "operations", "CPU seconds"), [
-        (name, f"{one['attempts']:.3g}", with_interval(one["accuracy"]), with_interval(one["over_constant"], signed=True),
-         with_interval(one["gap_closed"], digits=2), one["operations"], one["seconds"])
+        (name, f"{one['attempts']:.3g}", ranged(one["accuracy"]), ranged(one["over_constant"], signed=True),
+         ranged(one["gap_closed"], digits=2), one["operations"], one["seconds"])
         for name, one in table["policies"].items()], caption="Means at a boundary, every source alike.")
     page.table(("source", "boundaries", FLOOR, *_SHOWN, CEILING, *(f"gap: {name}" for name in _SHOWN), "worst"), [
         (source, one["n"], *(one["policies"][name]["accuracy"] for name in (FLOOR, *_SHOWN, CEILING)),
-         *(with_interval(one["policies"][name]["gap_closed"], digits=2) for name in _SHOWN), one["policies"]["advice"]["worst"])
+         *(ranged(one["policies"][name]["gap_closed"], digits=2) for name in _SHOWN),
+         one["policies"]["advice"]["worst"])
         for source, one in table["sources"].items()],
-        caption="Accuracy and gap closed by source; worst is advice's least difference from the constant at a boundary.")
+        caption="Accuracy and gap closed; worst is advice's least difference from the constant at a boundary.")
     page.facts({
         "spread of the same settings over other seeds": table["noise"]["deviation"],
         f"accuracy of {CEILING}'s settings with other seeds": table["noise"]["ceiling_again"],
-        "share of advice's 90% intervals that held": with_interval(table["interval"]["coverage"]),
+        "share of advice's 90% intervals that held": ranged(table["interval"]["coverage"]),
         "median width of those intervals": table["interval"]["median_width"],
         "CPU seconds of descriptors and advice": table["advising_seconds"],
     })
 
 
 def _whole_stream(page, table, pieces):
-    page.charts(_by_source(f"incremental accuracy over {FLOOR}", table, "over_constant", (*_SHOWN, CEILING), marks=(0.0,)),
-                *_ways(pieces), caption="Accuracy on all classes seen; lines are means over a source's streams.")
+    gained = _by_source(f"incremental accuracy over {FLOOR}", table, "over_constant", (*_SHOWN, CEILING), marks=(0.0,))
+    page.charts(gained, *_ways(pieces),
+                caption="Accuracy on all classes seen; lines are means over a source's streams.")
     page.table(("policy", *(measure.replace("_", " ") for measure in MEASURES), f"over {FLOOR}", f"over {CEILING}"), [
-        (name, *(with_interval(one[measure]) for measure in (*MEASURES, "over_constant", "over_search")))
+        (name, *(ranged(one[measure]) for measure in (*MEASURES, "over_constant", "over_search")))
         for name, one in table["policies"].items()], caption="Means over streams, every source alike.")
     page.table(("policy", "exemplars", "attempts", "operations", "CPU seconds"), [
         (name, round(one["exemplars"]), round(one["attempts"]), one["operations"], one["seconds"])
