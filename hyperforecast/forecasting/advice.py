@@ -5,6 +5,7 @@ from functools import cached_property
 
 import numpy as np
 
+from hyperforecast.checks import check_number
 from hyperforecast.forecasting.familiarity import FamiliarityVerdict
 from hyperforecast.forecasting.forecaster import Forecaster
 from hyperforecast.settings import KEPT_PER_CLASS, Settings, SettingsBox
@@ -132,6 +133,7 @@ def advise_settings(forecaster, descriptors, box, *, now_weight=1 / 3):
     now_weight : float in [0, 1]
         Weight of the outcome at this boundary; the rest is that of the two boundaries that follow.
     """
+    check_number("now_weight", now_weight, low=0, high=1)
     forecast = forecaster.at(descriptors)
     settings, scores = _weigh(forecast, box, now_weight)
     best = _fewest_kept(forecast, settings[int(np.argmax(scores))], box, now_weight)
@@ -164,12 +166,12 @@ def explain(forecaster, descriptors, box, *, now_weight=1 / 3, count=3):
         value = descriptors.get(name, np.nan)
         if np.isnan(value) or np.isnan(typical[name]):
             continue
-        other = choice({**descriptors, name: typical[name]})
-        change = here - other
+        advised, instead = box.from_unit(np.stack([here, choice({**descriptors, name: typical[name]})]))
+        # Of settings, not of points: several points stand for one number of exemplars.
+        change = np.subtract(*box.to_unit([advised, instead]))
         if not change.any():
             continue
         most = int(np.argmax(np.abs(change)))
-        advised, instead = (box.from_unit(point[None])[0] for point in (here, other))
         setting = box.names[most]
         factor = getattr(advised, setting) / getattr(instead, setting)
         reasons.append(Reason(name, setting, float(value), float(typical[name]), float(factor),

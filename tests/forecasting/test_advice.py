@@ -1,0 +1,310 @@
+"""Advice: inside the box, the same every time, and what the models say - checked on models made by hand."""
+
+import json
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from hyperforecast.checks import InputError
+from hyperforecast.describing import DESCRIPTORS
+from hyperforecast.forecasting import Reason, TreeEnsemble, advice, advise_settings, explain, load_forecaster, save_forecaster
+from hyperforecast.settings import COORDINATES, Settings, SettingsBox
+
+INPUTS = [*DESCRIPTORS, *COORDINATES]
+LOW, HIGH = -3.0, -1.0  # decimal logarithms of learning rates
+
+
+def leaf(value):
+    return [(None, value)]
+
+
+def split(name, threshold, left, right):
+    """Nodes in preorder of a tree that goes left where the input `name` is at most `threshold`."""
+    return [((INPUTS.index(name), threshold), None), *left, *right]
+
+
+def ensemble(*trees):
+    nodes = [node for tree in trees for node in tree]
+    splits = sorted({one for one, _ in nodes if one})
+    feature, threshold = np.array(splits).reshape(-1, 2).T
+    return TreeEnsemble(len(INPUTS), feature, threshold, np.full(len(splits), 2), np.ones(len(splits), bool),
+                        np.array([splits.index(one) if one else -1 for one, _ in nodes]),
+                        np.array([value for one, value in nodes if not one], float))
+
+
+def band(name, low, high):
+    """Tree that is 0 where the input is in (low, high], else -1."""
+    return split(name, low, leaf(-1.0), split(name, high, leaf(0.0), leaf(-1.0)))
+
+
+@pytest.fixture
+def made(forecasters):
+    """Function that returns a forecaster with some models made by hand and nothing to choose by in the others."""
+    def make(method="wa", **models):
+        flat = {name: ensemble(leaf(-5.0 if name == "diverged" else 0.0)) for name in forecasters[method].models}
+        return replace(forecasters[method], ranking="outcome", models={**flat, **models})
+
+    return make
+
+
+@pytest.fixture
+def here(datasets):
+    return dict(zip(DESCRIPTORS, datasets["wa"].descriptors[2]))
+
+
+@pytest.fixture
+def direct(made):
+    """A forecaster that names settings directly: 0.3, 0.6 and 0.9 of the way along each axis."""
+    return replace(made(learning_rate=ensemble(leaf(0.3)), regularization=ensemble(leaf(0.6)),
+                        kept_per_class=ensemble(leaf(0.9))), ranking="direct")
+
+
+# Whatever the forecaster, the boundary and the memory.
+
+
+@pytest.mark.parametrize("most_kept", [1, 2, 5, 80])
+@pytest.mark.parametrize("method", ["wa", "ewc"])
+def test_advice_stays_in_the_box_and_its_alternatives_apart(method, most_kept, forecasters, datasets):
+    box, dataset = SettingsBox(method, most_kept), datasets[method]
+    for row in dataset.descriptors[::4]:
+        found = advise_settings(forecasters[method], dict(zip(DESCRIPTORS, row)), box)
+        assert found.ranked == [found.settings, *found.alternatives] and 1 <= len(found.alternatives) <= 8
+        for one in (*found.ranked, found.constant):
+            assert one.checked(method) == one
+            assert one.kept_per_class is None or one.kept_per_class <= most_kept
+        points = box.to_unit(found.ranked)
+        apart = np.linalg.norm(points[:, None] - points, axis=2) + 9 * np.eye(len(points))
+        assert apart.min() >= 0.08
+        for expected in (found.expected_old, found.expected_new, found.expected_all):
+            assert 0 <= expected.low <= expected.value <= expected.high <= 1
+        assert 0 <= found.divergence <= 1 and 0 <= found.familiarity.score <= 1
+        document = json.loads(json.dumps(found.as_dict(), allow_nan=False))
+        assert document["settings"] == found.settings.as_dict() and document["method"] == method
+        assert len(document["alternatives"]) == len(found.alternatives)
+        assert document["forecaster"] == forecasters[method].checksum
+        assert [one["text"] for one in document["reasons"]] == [str(one) for one in found.reasons]
+
+
+def test_the_same_boundary_gets_the_same_advice(forecasters, here, tmp_path):
+    save_forecaster(tmp_path / "a.forecaster", forecasters["wa"])
+    first, again, loaded = (advise_settings(one, dict(here), SettingsBox("wa", 20)).as_dict() for one in (
+        forecasters["wa"], forecasters["wa"], load_forecaster(tmp_path / "a.forecaster")))
+    assert first == again == loaded
+
+
+def test_advice_copes_with_missing_descriptors(forecasters, here, direct):
+    rng = np.random.default_rng(0)
+    for forecaster in (forecasters["wa"], direct):
+        for descriptors in ({}, dict.fromkeys(DESCRIPTORS, np.nan),
+                            *({**here, **dict.fromkeys(rng.permutation(list(DESCRIPTORS))[:n], np.nan)} for n in (1, 20, 50))):
+            found = advise_settings(forecaster, descriptors, SettingsBox("wa", 20))
+            assert found.settings.checked("wa") and found.constant.checked("wa")
+            json.dumps(found.as_dict(), allow_nan=False)
+
+
+def test_advice_tells_what_the_forecaster_says_of_its_settings(forecasters, here):
+    forecaster, box = forecasters["wa"], SettingsBox("wa", 20)
+    found, at = advise_settings(forecaster, here, box), forecasters["wa"].at(here)
+    expected = at.expected([found.settings])
+    assert (found.expected_old, found.expected_new, found.expected_all) == tuple(
+        expected[name].at(0) for name in ("old", "new", "all"))
+    assert found.divergence == at.divergence([found.settings])[0]
+    assert found.familiarity == forecaster.familiarity.assess(forecaster.vector(here))
+    assert found.constant == forecaster.constant_settings(here, box)
+
+
+@pytest.mark.parametrize("weight", [-0.1, 1.1, np.nan, "1", None])
+def test_the_weight_of_now_is_a_share(weight, forecasters, here):
+    with pytest.raises(InputError, match="^now_weight: must be a number from 0 to 1; received "):
+        advise_settings(forecasters["wa"], here, SettingsBox("wa"), now_weight=weight)
+
+
+# Models made by hand.
+
+
+def test_the_advice_lies_where_the_model_says_and_not_at_the_edge(made, here):
+    """The good region is a decade of learning rates; all else being equal, its middle is the safer place."""
+    found = advise_settings(made(shortfall=ensemble(band("log_learning_rate", LOW, LOW + 1))), here, SettingsBox("wa", 40))
+    logs = np.log10([one.learning_rate for one in found.ranked])
+    assert LOW + 0.1 < logs[0] < LOW + 0.9
+    assert ((LOW < logs) & (logs <= LOW + 1)).sum() >= 4 and (np.abs(logs - LOW - 0.5) < 1.6).all()
+
+
+def test_settings_that_may_well_diverge_are_left_out(made, here):
+    """Higher learning rates promise more, and diverge beyond a hundredth with probability 0.95."""
+    greedy = ensemble(*(split("log_learning_rate", t, leaf(-0.1), leaf(0.0)) for t in np.arange(-5, 0, 0.25)))
+    diverges = ensemble(split("log_learning_rate", -2.0, leaf(-3.0), leaf(3.0)))
+    box = SettingsBox("wa", 40)
+    assert advise_settings(made(shortfall=greedy), here, box).settings.learning_rate > 0.1
+    found = advise_settings(made(shortfall=greedy, diverged=diverges), here, box)
+    assert 1e-3 < found.settings.learning_rate <= 1e-2
+    assert found.divergence == pytest.approx(1 / (1 + np.exp(3)), rel=1e-12)
+    # Where everything diverges there is advice still, with that said.
+    found = advise_settings(made(shortfall=greedy, diverged=ensemble(leaf(3.0))), here, box)
+    assert found.settings.learning_rate > 0.1 and found.divergence > 0.9
+
+
+def test_later_boundaries_weigh_as_much_as_is_told(made, here):
+    """Now a low learning rate is better by 0.3, later a high one by 0.3."""
+    now = ensemble(split("log_learning_rate", -2.5, leaf(0.0), leaf(-0.3)))
+    later = ensemble(split("log_learning_rate", -2.5, leaf(0.0), leaf(0.3)))
+    forecaster, box = made(shortfall=now, later=later), SettingsBox("wa", 40)
+    assert advise_settings(forecaster, here, box, now_weight=1).settings.learning_rate < 10**-2.5
+    again = made(shortfall=ensemble(split("log_learning_rate", -2.5, leaf(0.0), leaf(-0.1))), later=later)
+    assert advise_settings(again, here, box, now_weight=0).settings.learning_rate > 10**-2.5
+    assert advise_settings(again, here, box).settings.learning_rate > 10**-2.5
+    assert advise_settings(again, here, box, now_weight=0.9).settings.learning_rate < 10**-2.5
+
+
+@pytest.mark.parametrize("gain, expected", [(0.004, 1), (0.006, 11)])
+def test_exemplars_are_spent_only_where_they_bring_more_than_half_a_point(gain, expected, made, here):
+    """More than ten exemplars of a class bring `gain`; 11 is the first of 24 even steps up to 40 beyond ten."""
+    box = SettingsBox("wa", 40)
+    steps = np.unique(np.round(np.geomspace(1, 40, 24)))
+    assert steps[steps > 10][0] == 11
+    found = advise_settings(made(shortfall=ensemble(split("log_kept_per_class", 1.0, leaf(-gain), leaf(0.0)))), here, box)
+    assert found.settings.kept_per_class == expected
+
+
+def test_alternatives_are_ranked_by_the_models(made, here, monkeypatch):
+    """Without smoothing the score of a candidate is its own, and can be looked up."""
+    monkeypatch.setattr(advice, "NEIGHBOURHOOD", 1e-3)
+    monkeypatch.setattr(advice, "KEPT_TOLERANCE", 0.0)
+    rng = np.random.default_rng(0)
+    rough = ensemble(*(split(name, t, leaf(-rng.random() / 50), leaf(-rng.random() / 50))
+                       for name, low, high in (("log_learning_rate", -5, 0), ("log_regularization", -3, 3),
+                                               ("log_kept_per_class", 0, 1.6))
+                       for t in rng.uniform(low, high, 12)))
+    found = advise_settings(made(shortfall=rough), here, SettingsBox("wa", 40))
+    values = found.forecaster.at(here).shortfall(found.ranked)
+    assert len(set(values)) > 3
+    assert (np.diff(values) <= 1e-9).all()
+    box = SettingsBox("wa", 40)
+    every = found.forecaster.at(here).shortfall(box.from_unit(advice.lattice(256, 3)))
+    assert values[0] >= every.max() - 1e-12
+
+
+def test_direct_forecasts_are_followed_to_the_next_candidate(direct, here):
+    box = SettingsBox("wa", 40)
+    found = advise_settings(direct, here, box)
+    point, = box.to_unit([found.settings])
+    np.testing.assert_allclose(point[:2], [0.3, 0.6], atol=0.07)
+    # The rest of the settings being as good, the fewest exemplars are kept.
+    assert found.settings.kept_per_class == 1
+    distances = np.linalg.norm(box.to_unit(found.alternatives) - [0.3, 0.6, 0.9], axis=1)
+    assert distances[0] < 0.15 and np.mean(np.diff(distances) > 0) > 0.6
+
+
+# Reasons.
+
+
+@pytest.fixture
+def torn(made):
+    """Few rows call for low learning rates, many for high ones; a typical increment has many."""
+    trees = split("rows", 50.0, split("log_learning_rate", LOW, leaf(0.0), leaf(-1.0)),
+                  split("log_learning_rate", HIGH, leaf(-1.0), leaf(0.0)))
+    forecaster = made(shortfall=ensemble(trees))
+    typical = np.where(np.array(forecaster.descriptor_names) == "rows", 200.0, forecaster.typical)
+    return replace(forecaster, typical=typical, influential=("features", "rows", "classes_new"))
+
+
+def test_a_reason_names_the_descriptor_that_moved_the_advice(torn, here):
+    found = advise_settings(torn, {**here, "rows": 10.0}, SettingsBox("wa", 40))
+    assert found.settings.learning_rate <= 10**LOW
+    reason, = found.reasons
+    assert (reason.descriptor, reason.setting, reason.value, reason.typical) == ("rows", "learning_rate", 10.0, 200.0)
+    assert reason.factor <= 10 ** (LOW - HIGH) and 0.4 < reason.moved < 1.8
+    assert str(reason) == (f"learning_rate {1 / reason.factor:.2g} times lower than with a typical rows: "
+                           "10 here, 200 in the records")
+    # Put to its typical value, that descriptor indeed changes the advice, and nothing is left to say.
+    other = advise_settings(torn, {**here, "rows": 200.0}, SettingsBox("wa", 40))
+    assert other.settings.learning_rate > 10**HIGH and other.reasons == []
+
+
+def test_what_is_unknown_or_without_influence_is_no_reason(torn, here):
+    few, box = {**here, "rows": 10.0}, SettingsBox("wa", 40)
+    assert explain(torn, {**few, "rows": np.nan}, box) == []
+    assert explain(replace(torn, influential=("features", "classes_new")), few, box) == []
+    unknown = replace(torn, typical=np.full(len(torn.typical), np.nan))
+    assert explain(unknown, few, box) == []
+
+
+def test_a_number_of_exemplars_that_stays_the_same_is_no_reason(made, here):
+    """With room for one exemplar a class, points far apart along that axis all keep one."""
+    box, points = SettingsBox("wa", 1), advice.lattice(256, 3)
+    offsets = np.abs(points[:, None] - points)
+    few, many = points[list(np.unravel_index((offsets[..., 2] - 4 * offsets[..., :2].max(axis=2)).argmax(), (256, 256)))]
+
+    def only(point):
+        rate, strength = (np.log10([getattr(one, name) for one in box.from_unit(point + [[-1e-3], [1e-3]])])
+                          for name in ("learning_rate", "regularization"))
+        return split("log_learning_rate", rate[0], leaf(-1.0), split("log_learning_rate", rate[1], band(
+            "log_regularization", *strength), leaf(-1.0)))
+
+    forecaster = made(shortfall=ensemble(split("rows", 50.0, only(few), only(many))))
+    typical = np.where(np.array(forecaster.descriptor_names) == "rows", 200.0, forecaster.typical)
+    reason, = explain(replace(forecaster, typical=typical, influential=("rows",)), {**here, "rows": 10.0}, box)
+    assert reason.setting != "kept_per_class" and reason.factor != 1
+
+
+def test_reasons_agree_with_advice_taken_anew(forecasters, datasets):
+    """The definition by plain loops: best of 256 candidates, scores averaged over their neighbours, with and without."""
+    forecaster, dataset = replace(forecasters["wa"], ranking="outcome"), datasets["wa"]
+    box = SettingsBox("wa", 20)
+    points = advice.lattice(256, 3)
+    candidates = box.from_unit(points)
+    apart = np.linalg.norm(points[:, None] - points, axis=2)
+    weights = np.exp(-0.5 * (apart / 0.05) ** 2)
+
+    def best(descriptors):
+        at = forecaster.at(descriptors)
+        scores = at.shortfall(candidates) + 2 / 3 * at.later(candidates) - (at.divergence(candidates) > 0.1)
+        return candidates[int(np.argmax((weights * scores).sum(axis=1) / weights.sum(axis=1)))]
+
+    typical, told = dict(zip(DESCRIPTORS, forecaster.typical)), 0
+    for row in dataset.descriptors[::5]:
+        here = dict(zip(DESCRIPTORS, row))
+        reasons = {one.descriptor: one for one in explain(forecaster, here, box, count=99)}
+        told += len(reasons)
+        for name in forecaster.influential[:10]:
+            if np.isnan(here[name]) or np.isnan(typical[name]):
+                assert name not in reasons
+                continue
+            advised, instead = best(here), best({**here, name: typical[name]})
+            assert (name in reasons) == (advised != instead)
+            if name in reasons:
+                one = reasons[name]
+                assert one.factor == pytest.approx(getattr(advised, one.setting) / getattr(instead, one.setting))
+                assert one.moved == pytest.approx(np.linalg.norm(np.subtract(*box.to_unit([advised, instead]))))
+        first = explain(forecaster, here, box)
+        assert len(first) <= 3 and [one.moved for one in first] == sorted((one.moved for one in reasons.values()))[::-1][:3]
+    assert told > 0
+
+
+def test_reasons_read_as_sentences():
+    assert str(Reason("curvature_new", "learning_rate", 2.0, 1.0, 0.25, 0.3)) == (
+        "learning_rate 4 times lower than with a typical curvature_new: 2 here, 1 in the records")
+    assert str(Reason("rows", "kept_per_class", 12345.678, 0.001, 3.0, 0.3)) == (
+        "kept_per_class 3 times higher than with a typical rows: 1.23e+04 here, 0.001 in the records")
+
+
+@pytest.mark.parametrize("n_dimensions", [2, 3])
+def test_candidates_fill_the_cube_evenly(n_dimensions):
+    """The recurrence with the powers of 1/g, g the root of g^(D+1) = g + 1: 1.3247 for two axes, 1.2207 for three.
+
+    Roberts 2018, "The Unreasonable Effectiveness of Quasirandom Sequences", from memory.
+    """
+    points = advice.lattice(256, n_dimensions)
+    g = {2: 1.32471795724474602596, 3: 1.22074408460575947536}[n_dimensions]
+    steps = g ** -np.arange(1, n_dimensions + 1)
+    np.testing.assert_allclose(np.diff(points, axis=0) % 1, np.tile(steps, (255, 1)), atol=1e-9)
+    # Every axis alone is met without large gaps, and so is the cube: each of its eighths or quarters has its share.
+    assert np.diff(np.sort(points, axis=0), axis=0).max() < 0.02
+    cells = np.unique((points * 2).astype(int), axis=0, return_counts=True)[1]
+    assert len(cells) == 2**n_dimensions and abs(cells / cells.mean() - 1).max() < 0.2
+
+
+def test_settings_type_of_advice_is_plain(forecasters, here):
+    found = advise_settings(forecasters["ewc"], here, SettingsBox("ewc"))
+    assert isinstance(found.settings, Settings) and found.settings.kept_per_class is None
