@@ -99,8 +99,10 @@ class GrowingClassifier:
         if classes is not None and not np.isin(increment.y, np.asarray(classes)).all():
             raise InputError("classes", "must hold every label of y", np.setdiff1d(increment.y, classes))
         seed = self._seed()
-        boundary, advice = self._advised(increment, seed)
-        settings = self._chosen(boundary, advice)
+        boundary, given, advice = self._boundary(increment, seed), self._given_settings(), None
+        if given is None and boundary.carryover is not None:
+            advice = self._advice_at(boundary, seed)
+        settings = given or (opening_settings(boundary.plan) if advice is None else advice.settings)
         trainer = HeadTrainer()
         attempt = try_settings(trainer, boundary, [settings], seed=boundary_seed(seed, boundary.carryover))[0]
         carryover = close_boundary(trainer, boundary, attempt, seed=boundary_seed(seed, boundary.carryover))
@@ -206,13 +208,6 @@ class GrowingClassifier:
                              "features as input")
         return features
 
-    def _advised(self, increment, seed):
-        """Return the boundary and the advice, or None where none is due."""
-        boundary = self._boundary(increment, seed)
-        if isinstance(self.settings, Settings) or boundary.carryover is None:
-            return boundary, None
-        return boundary, self._advice_at(boundary, seed)
-
     def _boundary(self, increment, seed):
         carryover = getattr(self, "carryover_", None)
         return open_boundary(self._plan(), carryover, increment, seed=boundary_seed(seed, carryover))
@@ -226,12 +221,13 @@ class GrowingClassifier:
         descriptors = describe(HeadTrainer(), boundary, seed=boundary_seed(seed, boundary.carryover))
         return advise_settings(forecaster, descriptors, SettingsBox(self.method, boundary.most_kept))
 
-    def _chosen(self, boundary, advice):
+    def _given_settings(self):
+        """Return the user's own `Settings`, checked; None where they are to be advised."""
         if isinstance(self.settings, Settings):
             return self.settings.checked(self.method)
-        if self.settings != ADVISED:
+        if not isinstance(self.settings, str) or self.settings != ADVISED:
             raise InputError("settings", f'must be "{ADVISED}" or a Settings', repr(self.settings))
-        return opening_settings(boundary.plan) if advice is None else advice.settings
+        return None
 
     def _fitted(self):
         if not hasattr(self, "carryover_"):
