@@ -188,11 +188,10 @@ class GrowingClassifier:
         if y is None:
             raise InputError("y", "must be one label for each row", "None",
                              f"{type(self).__name__} requires y to be passed, but the target y is None")
-        labels = y if isinstance(y, np.ndarray) else np.asarray(y)
-        if labels.ndim == 2 and labels.shape[1] == 1:
+        if getattr(y, "ndim", 1) == 2 and y.shape[1] == 1:
             _warn_of_column()
-            labels = labels[:, 0]
-        return Increment(features, check_labels(labels, len(features)))
+            y = np.asarray(y)[:, 0]
+        return Increment(features, check_labels(y, len(features)))
 
     def _features(self, X):
         """Return checked features (n, d); their number and names must be those of the first increment."""

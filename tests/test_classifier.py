@@ -174,6 +174,8 @@ def bad_inputs():
     yield {}, (X[:, :5], y), "X: must have 6 features as before"
     yield {}, (X[:0], y[:0]), "X: must hold at least one row"
     yield {}, (X, None), "y: must be one label for each row; received None"
+    yield {}, (X, [[label] * (1 + (label == y[0])) for label in y]), "y: must be one label for each row; received ragged"
+    yield {}, (X, np.ma.array([2, 3] * 20, mask=[0, 1] * 20)), "y: must hold no masked values"
     yield {}, (X, parts([2, 3], text=False)[1]), "y: must hold text as before; received whole numbers"
     yield {}, (X, [f" {'' if label else ''}" for label in y]), "y: must name a class in every row"
     yield {}, (X, y, NAMES[:3]), "classes: must hold every label of y"
@@ -418,9 +420,10 @@ def test_data_frames_bring_their_column_names():
 
 def test_labels_in_a_column_are_taken_with_a_warning():
     X, y = parts([0, 1])
-    with pytest.warns(DataConversionWarning, match="A column-vector y was passed when a 1d array was expected"):
-        clf = classifier().partial_fit(X, y[:, None])
-    assert state(clf) == state(classifier().partial_fit(X, y))
+    for column in (y[:, None], pd.DataFrame({"part": y})):
+        with pytest.warns(DataConversionWarning, match="A column-vector y was passed when a 1d array was expected") as told:
+            clf = classifier().partial_fit(X, column)
+        assert state(clf) == state(classifier().partial_fit(X, y)) and told[0].filename == __file__
 
 
 def test_classes_told_beforehand_change_nothing():
