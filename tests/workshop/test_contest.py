@@ -12,45 +12,26 @@ from hyperforecast.metrics import balanced_accuracy
 from hyperforecast.settings import Plan, SettingsBox
 from hyperforecast.storage import dump_json
 from hyperforecast.workshop.contest import (
-    CONTESTS, POLICIES, Contest, as_text, load_contest, run_contest, summarize,
+    CONTESTS, POLICIES, Contest, Policy, as_text, load_contest, run_contest, summarize,
 )
 from hyperforecast.workshop.contest.course import Course
 from hyperforecast.workshop.contest.one_step import ENTRANTS, NOISE_SEEDS, run_one_step
 from hyperforecast.workshop.contest.policies import choose
 from hyperforecast.workshop.contest.whole_stream import run_whole_stream
-from hyperforecast.workshop.fitting import fit_forecaster, load_dataset
-from hyperforecast.workshop.gathering import RecordsFile, derived_seed, run_trajectory
+from hyperforecast.workshop.gathering import derived_seed
 from hyperforecast.workshop.reporting.contest_report import contest_page
 from hyperforecast.workshop.searching import run_search, uniform_draws
 from hyperforecast.workshop.streams import Collection, Stream, load_streams
 
-TRAINED = """
-[[stream]]
-name = "clouds"
-source = "synthetic_gaussian"
-seeds = [0, 1]
-increments = 3
-classes = 6
-raw_dimension = 6
-rows_per_class = 20
-
-[[stream]]
-name = "drift"
-source = "synthetic_drifting"
-seeds = [0, 1]
-increments = 4
-classes = 8
-raw_dimension = 8
-rows_per_class = 20
-"""
+# Of a source that the shared forecasters were not fitted on.
 ENTERED = """
 [[stream]]
 name = "lenses"
 source = "synthetic_own_covariance"
 seeds = [0, 1]
-increments = 4
-classes = 8
-raw_dimension = 8
+increments = 3
+classes = 6
+raw_dimension = 6
 rows_per_class = 20
 recurring = 0.0
 """
@@ -60,16 +41,6 @@ PLAN = Plan(hidden_units=8, passes=3, batch_size=16, memory_limit=80)
 @pytest.fixture(scope="module")
 def folder(tmp_path_factory):
     return tmp_path_factory.mktemp("contest")
-
-
-@pytest.fixture(scope="module")
-def forecasters(folder):
-    (folder / "trained.toml").write_text(TRAINED)
-    records = RecordsFile(folder / "records.sqlite", create=True)
-    for definition in load_streams(folder / "trained.toml"):
-        for method in ("wa", "ewc"):
-            records.store(run_trajectory(definition, method, seed=0, space_filled=16, proposed=0))
-    return {method: fit_forecaster(load_dataset(records, method), recipe={}) for method in ("wa", "ewc")}
 
 
 @pytest.fixture(scope="module")
@@ -152,10 +123,16 @@ def test_on_carryover_the_choice_rests_on_rows_the_device_holds(definitions, for
     check = bench.boundary.check_set()
     trained_on = {row.tobytes() for row in (*bench.boundary.Z, *bench.boundary.old_exemplars.Z)}
     assert len(check) and not trained_on & {row.tobytes() for row in check.Z}
-    tried = bench.try_out(bench.advised.settings[:4])
+    tried = bench.try_out(bench.drawn.settings)
     by_hand = [balanced_accuracy(check.y, predict_codes(HeadTrainer(), one.attempt.head, check.Z)) for one in tried]
-    choice = choose(POLICIES["advice+4 on carryover"], bench)
-    assert choice.attempt is tried[int(np.argmax(by_hand))].attempt
+    assert [bench.judge(one, "check") for one in tried] == pytest.approx(by_hand)
+    # Candidates in order of their accuracy on selection rows, which would take the first.
+    policy = Policy("drawn on carryover", "drawn", 8, judged_on="check")
+    bench.drawn.settings[:] = [one.attempt.settings for one in sorted(tried, key=lambda one: -one.outcome.all)][8:]
+    by_hand = {one.attempt.settings: score for one, score in zip(tried, by_hand)}
+    chosen, on_selection = (choose(one, bench).attempt.settings for one in (policy, POLICIES["random-8"]))
+    assert by_hand[chosen] == max(by_hand[one] for one in bench.drawn.settings[:8])
+    assert chosen != on_selection
 
 
 def test_the_same_settings_are_trained_once_and_give_the_same_head(definitions, forecasters):
@@ -267,6 +244,19 @@ def test_scoring_rows_are_opened_last_and_change_no_choice(run, definitions, for
     assert scores[0] != scores[1]
 
 
+@pytest.mark.parametrize("run, now_weight", [(run_one_step, 1.0), (run_whole_stream, 1 / 3)])
+def test_advice_looks_as_far_as_it_is_judged(monkeypatch, definitions, forecasters, run, now_weight):
+    weights = []
+
+    def advise(*arguments, now_weight):
+        weights.append(now_weight)
+        return advise_settings(*arguments, now_weight=now_weight)
+
+    monkeypatch.setattr("hyperforecast.workshop.contest.bench.advise_settings", advise)
+    run(_course(definitions[0], forecasters, "ewc"))
+    assert set(weights) == {now_weight}
+
+
 # Whole stream
 
 @pytest.mark.parametrize("method, name", [("ewc", "constant"), ("wa", "advice")])
@@ -303,11 +293,11 @@ def test_rows_of_the_matrix_weigh_up_to_balanced_accuracy(results):
 def test_attempts_and_exemplars_of_ways(results):
     for piece in results["whole_stream"].pieces:
         attempts = {name: [one["attempts"] for one in way["boundaries"]] for name, way in piece["outcome"].items()}
-        assert attempts == {"constant": [0] * 3, "tuned-once": [64, 0, 0], "advice": [0] * 3, "advice+4": [4] * 3,
-                            "random-8": [8] * 3, "search-64": [64] * 3}
+        assert attempts == {"constant": [0, 0], "tuned-once": [64, 0], "advice": [0, 0], "advice+4": [4, 4],
+                            "random-8": [8, 8], "search-64": [64, 64]}
         tuned, searched = (piece["outcome"][name]["boundaries"] for name in ("tuned-once", "search-64"))
         assert tuned[0]["scoring"] == searched[0]["scoring"]
-        assert tuned[0]["settings"] == tuned[1]["settings"] == tuned[2]["settings"]
+        assert tuned[0]["settings"] == tuned[1]["settings"]
         most = max(one["exemplars"] for way in piece["outcome"].values() for one in way["boundaries"])
         assert most <= PLAN.memory_limit if piece["method"] == "wa" else most == 0
 
