@@ -95,6 +95,7 @@ def _parser():
     fit.add_argument("--method", required=True, choices=METHODS)
     fit.add_argument("--forecaster", required=True, metavar="FILE", help="forecaster to write")
     fit.add_argument("--without", nargs="+", default=[], metavar="SOURCE", help="sources to leave out")
+    fit.add_argument("--folds", type=int, metavar="N", help="groups of sources held out together (each alone)")
     fit.add_argument("--seed", type=int, default=0, help="(%(default)s)")
     _add_workers(fit)
 
@@ -385,7 +386,7 @@ def _fit(options):
     records = RecordsFile(options.records)
     dataset = load_dataset(records, options.method, without=options.without)
     forecaster = fit_forecaster(
-        dataset, recipe={"without": sorted(options.without)}, seed=_seed(options), workers=_workers(options),
+        dataset, recipe={"without": sorted(options.without)}, folds=options.folds, seed=_seed(options), workers=_workers(options),
         progress=lambda one: _progress(f"held out {one.source}: {one.boundaries} boundaries"))
     save_forecaster(options.forecaster, forecaster)
     recipe = forecaster.recipe

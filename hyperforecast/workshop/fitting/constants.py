@@ -5,7 +5,7 @@ import numpy as np
 from hyperforecast.forecasting import Constant
 from hyperforecast.settings import LEARNING_RATES, REGULARIZATIONS
 
-CANDIDATES = 768
+CANDIDATES = 256
 # Attempts near a candidate tell its outcome: widths, in natural logarithms, of learning rate, strength, exemplars.
 WIDTHS = np.array([0.5, 1.0, 0.5])
 

@@ -6,6 +6,7 @@ from importlib import metadata
 import joblib
 import numpy as np
 
+from hyperforecast.checks import check_whole
 from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.forecasting import (
     Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
@@ -54,12 +55,15 @@ class HeldOut:
         "old", "new", "all" and "shortfall".
     divergence : ndarray of shape (N,)
     direct : ndarray of shape (B, D)
+    constant : ndarray of shape (B,)
+        Estimated accuracy of the best constant.
     figures : list of SourceFigures
     """
 
     forecast: dict
     divergence: np.ndarray
     direct: np.ndarray
+    constant: np.ndarray
     figures: list
 
     def gap_closed(self, way):
@@ -68,61 +72,66 @@ class HeldOut:
         return gained / sum(one.best - one.constant for one in self.figures)
 
 
-def hold_out(dataset, *, seed, workers=1, progress=None):
-    """Return `HeldOut`: leave one source out in turn, fit on the others, forecast its attempts.
+def hold_out(dataset, *, folds=None, seed, workers=1, progress=None):
+    """Return `HeldOut`: leave sources out in turn, fit on the others, forecast their attempts.
 
-    The folds run in parallel in `workers` processes of the joblib backend that is active.
+    Parameters
+    ----------
+    dataset : Dataset
+    folds : int, optional
+        Groups of sources that are left out together; by default every source is left out alone.
+    seed : int
+    workers : int
+        Processes of the joblib backend that is active, for folds in parallel.
+    progress : callable, optional
+        Called with the `SourceFigures` of each source that was left out.
     """
+    sources = np.unique(dataset.sources)
+    folds = min(len(sources) if folds is None else check_whole("folds", folds, low=2), len(sources))
     n = len(dataset.all)
     forecast = {name: np.full(n, np.nan) for name in (*RANGES, "shortfall")}
     divergence, direct = np.full(n, np.nan), np.full((dataset.n_boundaries, dataset.points.shape[1]), np.nan)
-    figures = []
-    folds = joblib.Parallel(n_jobs=workers, return_as="generator")(
-        joblib.delayed(_fold)(dataset, source, seed) for source in np.unique(dataset.sources))
-    for fold in folds:
-        for name, values in fold.forecast.items():
-            forecast[name][fold.attempts] = values
-        divergence[fold.attempts] = fold.divergence
-        direct[~dataset.without(fold.source)] = fold.direct
-        figures.append(_figures(dataset, fold, direct))
-        if progress:
-            progress(figures[-1])
-    return HeldOut(forecast, divergence, direct, figures)
+    constant, figures = np.full(dataset.n_boundaries, np.nan), []
+    held = HeldOut(forecast, divergence, direct, constant, figures)
+    results = joblib.Parallel(n_jobs=workers, return_as="generator")(
+        joblib.delayed(_forecast_without)(dataset, sources[k::folds], seed) for k in range(folds))
+    for k, (told, diverges, settings, outcome) in enumerate(results):
+        own = np.isin(dataset.sources, sources[k::folds])
+        attempts = own[dataset.boundary]
+        for name, values in told.items():
+            forecast[name][attempts] = values
+        divergence[attempts], direct[own], constant[own] = diverges, settings, outcome
+        for source in sources[k::folds]:
+            figures.append(_figures(dataset, source, held))
+            if progress:
+                progress(figures[-1])
+    figures.sort(key=lambda one: one.source)
+    return held
 
 
-@dataclass(frozen=True)
-class _Fold:
-    """Forecasts of one source's attempts and boundaries; `constant` is the estimated outcome of the best constant."""
-
-    source: str
-    attempts: np.ndarray
-    forecast: dict
-    divergence: np.ndarray
-    direct: np.ndarray
-    constant: np.ndarray
-
-
-def _fold(dataset, source, seed):
-    others = dataset.without(source)
-    attempts = np.flatnonzero(~others[dataset.boundary])
-    models = train_outcomes(dataset, others, seed=seed)
+def _forecast_without(dataset, sources, seed):
+    """Return forecasts by name and divergence of the attempts of some sources, direct settings and constant of their
+    boundaries, by models fitted without them.
+    """
+    own = np.isin(dataset.sources, sources)
+    attempts = np.flatnonzero(own[dataset.boundary])
+    models = train_outcomes(dataset, ~own, seed=seed)
     inputs = dataset.inputs(attempts)
     forecast = {name: np.clip(models[name].predict(inputs, num_threads=1), 0, 1) for name in ("old", "new")}
     b = dataset.boundary[attempts]
     n_old, n_new = dataset.column("classes_old")[b], dataset.column("classes_new")[b]
     forecast["all"] = (n_old * forecast["old"] + n_new * forecast["new"]) / (n_old + n_new)
     forecast["shortfall"] = models["shortfall"].predict(inputs, num_threads=1)
-    own = np.flatnonzero(~others)
-    unset = np.full((len(own), dataset.coordinates.shape[1]), np.nan)
-    settings = np.hstack([dataset.descriptors[own], unset])
-    direct = np.stack([model.predict(settings, num_threads=1)
-                       for model in train_direct(dataset, others, seed=seed).values()], axis=1)
-    raw, scale_free, kind = fit_constants(dataset, others, seed=seed)
-    constant = constant_outcome(dataset, ~others, raw if kind == "raw" else scale_free)
-    return _Fold(source, attempts, forecast, models["diverged"].predict(inputs, num_threads=1), direct, constant)
+    described = dataset.descriptors[own]
+    inputs_direct = np.hstack([described, np.full((len(described), dataset.coordinates.shape[1]), np.nan)])
+    direct = np.stack([model.predict(inputs_direct, num_threads=1)
+                       for model in train_direct(dataset, ~own, seed=seed).values()], axis=1)
+    raw, scale_free, kind = fit_constants(dataset, ~own, seed=seed)
+    constant = constant_outcome(dataset, own, raw if kind == "raw" else scale_free)
+    return forecast, models["diverged"].predict(inputs, num_threads=1), direct, constant
 
 
-def fit_forecaster(dataset, *, recipe, seed=0, workers=1, progress=None):
+def fit_forecaster(dataset, *, recipe, folds=None, seed=0, workers=1, progress=None):
     """Return a `Forecaster` fitted on all boundaries of a dataset.
 
     The way of choosing that does better on held-out sources ranks candidates; their errors calibrate the intervals.
@@ -132,11 +141,13 @@ def fit_forecaster(dataset, *, recipe, seed=0, workers=1, progress=None):
     dataset : Dataset
     recipe : dict
         What else should be told of its making.
+    folds : int, optional
+        Groups of sources that are left out together to judge and calibrate; by default every source alone.
     seed, workers : int
     progress : callable, optional
         Called with the `SourceFigures` of each held-out source.
     """
-    held = hold_out(dataset, seed=seed, workers=workers, progress=progress)
+    held = hold_out(dataset, folds=folds, seed=seed, workers=workers, progress=progress)
     everything = np.ones(dataset.n_boundaries, bool)
     boosters = train_outcomes(dataset, everything, seed=seed)
     ranking = "outcome" if held.gap_closed("outcome") >= held.gap_closed("direct") else "direct"
@@ -161,7 +172,7 @@ def fit_forecaster(dataset, *, recipe, seed=0, workers=1, progress=None):
         raw_constant=raw, scale_free_constant=scale_free, constant_kind=kind, typical=typical,
         influential=tuple(names[place] for place in order[:20]),
         recipe={
-            **recipe, "seed": seed, "boundaries": {str(s): int(n) for s, n in zip(sources, counts)},
+            **recipe, "seed": seed, "folds": folds, "boundaries": {str(s): int(n) for s, n in zip(sources, counts)},
             "attempts": len(dataset.all), "held_out": [one.as_dict() for one in held.figures],
             "gap_closed": {way: round(held.gap_closed(way), 4) for way in ("outcome", "direct")},
             "versions": {package: metadata.version(package) for package in ("hyperforecast", "numpy", "lightgbm")},
@@ -170,18 +181,19 @@ def fit_forecaster(dataset, *, recipe, seed=0, workers=1, progress=None):
     return with_checksum(forecaster)
 
 
-def _figures(dataset, fold, direct):
-    rows = fold.attempts
+def _figures(dataset, source, held):
+    own = dataset.sources == source
+    rows = np.flatnonzero(own[dataset.boundary])
     b = dataset.boundary[rows]
-    safe = fold.forecast["shortfall"] - (fold.divergence > MOST_DIVERGENCE)
-    distance = -np.linalg.norm(dataset.points[rows] - direct[b], axis=1)
+    safe = held.forecast["shortfall"][rows] - (held.divergence[rows] > MOST_DIVERGENCE)
+    distance = -np.linalg.norm(dataset.points[rows] - held.direct[b], axis=1)
 
     def reached(scores):
         order = np.lexsort((-scores, b))
-        return dataset.all[rows[order[np.searchsorted(b[order], np.unique(b))]]].mean()
+        return float(dataset.all[rows[order[np.searchsorted(b[order], np.unique(b))]]].mean())
 
-    return SourceFigures(str(fold.source), len(np.unique(b)), float(fold.constant.mean()), float(reached(safe)),
-                         float(reached(distance)), float(reached(dataset.all[rows])))
+    return SourceFigures(str(source), int(own.sum()), float(held.constant[own].mean()), reached(safe),
+                         reached(distance), reached(dataset.all[rows]))
 
 
 def _calibrate(dataset, held, name, *, seed):

@@ -7,12 +7,12 @@ from hyperforecast.settings import SettingsBox
 
 # One set for all models; values chosen on folds of the training sources.
 PARAMETERS = {
-    "learning_rate": 0.06, "num_leaves": 31, "min_data_in_leaf": 40, "feature_fraction": 0.6, "lambda_l2": 1.0,
-    "max_bin": 127, "deterministic": True, "force_col_wise": True, "num_threads": 1, "verbosity": -1,
+    "learning_rate": 0.08, "num_leaves": 31, "min_data_in_leaf": 40, "feature_fraction": 0.5, "lambda_l2": 1.0,
+    "max_bin": 63, "deterministic": True, "force_col_wise": True, "num_threads": 1, "verbosity": -1,
 }
-ROUNDS = 240
-SMALL = {"num_leaves": 15, "learning_rate": 0.05}
-SMALL_ROUNDS = 100
+ROUNDS = 180
+SMALL = {"num_leaves": 15}
+SMALL_ROUNDS = 80
 # Attempts within about this much of a boundary's best form the ridge, which weighs most in the fit.
 RIDGE = 0.1
 FAR_WEIGHT = 0.1
