@@ -100,9 +100,9 @@ class _Minibatches:
             self.weight[s, :full] = 1 / batch_size
             self.weight[s, full:len(rows)] = 1 / max(len(rows) - full, 1)
 
-    def shuffle(self, step):
-        """Start a new pass for the sets whose pass ends before `step`."""
-        for s in np.flatnonzero(step % self.steps_per_pass == 0):
+    def shuffle(self, step, sets):
+        """Start a new pass for those of `sets` whose pass ends before `step`."""
+        for s in sets[step % self.steps_per_pass[sets] == 0]:
             rows = self.row_sets[s]
             # Sets of equal length see equal shuffles: attempts differ by their settings alone.
             keys = np.random.default_rng([self.seed, step // self.steps_per_pass[s]]).random(len(rows))
@@ -169,7 +169,7 @@ class _Block:
         self.gradient_parts = layout.parts(self.gradient)
         self.ones = np.ones((1, n_rows), np.float32)
         self.logits = np.empty((n_heads, n_rows, layout.n_classes), np.float32)
-        self.shares_rows = len(np.unique(self.set_of)) == 1
+        self.sets = np.unique(self.set_of)
         if layout.hidden_units:
             self.hidden = np.empty((n_heads, n_rows, layout.hidden_units), np.float32)
             self.inner = np.empty_like(self.hidden)
@@ -180,11 +180,11 @@ class _Block:
     def _advance(self, step):
         """Take one step with every head; now and then return their largest absolute logits, else None."""
         batches = self.batches
-        batches.shuffle(step)
+        batches.shuffle(step, self.sets)
         first = batches.window(step)
         n_rows = batches.batch_size
-        if self.shares_rows:
-            s = self.set_of[0]
+        if len(self.sets) == 1:
+            s = self.sets[0]
             window = slice(first[s], first[s] + n_rows)
             places, weight = batches.order[s, window], batches.weight[s, window, None]
         else:

@@ -2,18 +2,17 @@
 
 from dataclasses import dataclass
 
-from hyperforecast.forecasting import Advice
+from hyperforecast.forecasting import Advice, advise_settings
 from hyperforecast.learning import Boundary, Job, close_boundary
 from hyperforecast.workshop.contest.policies import CEILING, POLICIES, choose
 from hyperforecast.workshop.gathering import derived_seed
 
 KIND = "one_step"
 ENTRANTS = tuple(POLICIES)
-# The policy whose result the walk goes on from.
-WALKS_ON = "advice"
 # Other seeds that the ceiling's settings are trained with.
 NOISE_SEEDS = 3
-# Only the present boundary is judged, so that advice looks no further.
+# Only the present boundary is judged, so that advice looks no further; the walk goes on from advice that does, as a
+# device would.
 NOW_WEIGHT = 1.0
 
 
@@ -47,7 +46,8 @@ def _walk(course):
         job = Job(bench.boundary, settings[CEILING])
         noise = [course.trainer.learn([job], seed=derived_seed(bench.seed, "noise", k))[0] for k in range(NOISE_SEEDS)]
         steps.append(_Step(bench.boundary, choices, noise, *bench.advice))
-        carryover = bench.close(choices[WALKS_ON].attempt)
+        device = advise_settings(course.forecaster, bench.described[0], bench.box).settings
+        carryover = bench.close(bench.try_out([device])[0].attempt)
     return steps
 
 
