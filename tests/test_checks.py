@@ -27,7 +27,8 @@ def test_an_error_says_parameter_rule_value_and_remedy_in_one_line():
     assert isinstance(error, ValueError)
 
 
-@pytest.mark.parametrize("hostile", ["two\nlines", "\x1b[31mred\x1b[0m", "\r\x85\u2028\x0b\x00", "\ud800", "\u202eback"])
+@pytest.mark.parametrize("hostile", ["two\nlines", "\x1b[31mred\x1b[0m",
+                                     "\r\x85\u2028\x0b\x00", "\ud800", "\u202eback"])
 def test_an_error_stays_one_printable_line_whatever_it_tells(hostile):
     line = str(InputError(hostile, f"must not be {hostile}", hostile, hostile))
     assert line.isprintable() and len(line.splitlines()) == 1

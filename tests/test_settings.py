@@ -23,7 +23,8 @@ def test_the_ends_of_the_ranges_are_settings_and_beyond_them_none(method):
             assert settings.checked(method) == settings
     for name, (low, high) in (("learning_rate", LEARNING_RATES), ("regularization", REGULARIZATIONS[method])):
         for value in (np.nextafter(low, 0), np.nextafter(high, np.inf), 0, -1, np.nan, np.inf, None, "0.1", True):
-            with pytest.raises(InputError, match=re.escape(f"{name}: must be a number from {low:g} to {high:g}; received ")):
+            rule = f"{name}: must be a number from {low:g} to {high:g}; received "
+            with pytest.raises(InputError, match=re.escape(rule)):
                 Settings(**{"learning_rate": 0.1, "regularization": 1.0, **kept, name: value}).checked(method)
 
 
@@ -56,7 +57,8 @@ def test_settings_are_plain_json_whatever_numbers_they_were_made_of():
     ("passes", 0, "must be a whole number from 1 to 10000"), ("passes", "10", "must be a whole number"),
     ("batch_size", 0, "must be a whole number from 1 to 65536"), ("batch_size", np.nan, "must be a whole number"),
     ("memory_limit", 0, "must be a whole number of at least 1"), ("memory_limit", 2.5, "must be a whole number"),
-    ("memory_limit", None, "must be a whole number"), ("memory_limit", "much", "must be a number of exemplars, or of bytes"),
+    ("memory_limit", None, "must be a whole number"),
+    ("memory_limit", "much", "must be a number of exemplars, or of bytes"),
 ])
 def test_a_plan_that_breaks_a_rule_is_refused(name, value, rule):
     assert Plan().checked() == Plan()
@@ -74,8 +76,9 @@ def test_bytes_are_read_with_their_unit(text, n_bytes):
     assert parse_bytes("memory_limit", text) == n_bytes
 
 
-@pytest.mark.parametrize("text", ["", " ", "2", "MB", "2 M", "2 TB", "-2 MB", "+2 MB", "0 MB", "0.4 B", "1e3 kB", "2,5 MB",
-                                  "2 MB 3", "2..5 MB", ".5 MB", "nan MB", "inf MB", "9" * 400 + " MB", "٢ MB", "2\x00MB"])
+@pytest.mark.parametrize("text", [
+    "", " ", "2", "MB", "2 M", "2 TB", "-2 MB", "+2 MB", "0 MB", "0.4 B", "1e3 kB", "2,5 MB", "2 MB 3", "2..5 MB",
+    ".5 MB", "nan MB", "inf MB", "9" * 400 + " MB", "٢ MB", "2\x00MB"])
 def test_bytes_without_sense_are_refused(text):
     with pytest.raises(InputError, match="^memory_limit: must be a number of exemplars, or of bytes such as"):
         parse_bytes("memory_limit", text)
@@ -178,8 +181,8 @@ def test_scale_free_coordinates_by_hand():
 
 
 def test_scale_free_coordinates_that_need_what_is_missing_are_missing():
-    scales = {"curvature_new": np.nan, "curvature_exemplars": 0.0, "anchor_curvature": 4.0, "rows": 60, "classes_old": 10,
-              "passes": 5, "batch_size": 32}
+    scales = {"curvature_new": np.nan, "curvature_exemplars": 0.0, "anchor_curvature": 4.0, "rows": 60,
+              "classes_old": 10, "passes": 5, "batch_size": 32}
     row = dict(zip(COORDINATES, scale_free([Settings(0.1, 3.0)], scales)[0]))
     assert {name for name, value in row.items() if np.isnan(value)} == {
         "log_kept_per_class", "step_on_new", "step_on_exemplars", "travel_on_new", "anchor_balance", "stability"}

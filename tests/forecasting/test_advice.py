@@ -8,7 +8,9 @@ import pytest
 
 from hyperforecast.checks import InputError
 from hyperforecast.describing import DESCRIPTORS
-from hyperforecast.forecasting import Reason, TreeEnsemble, advice, advise_settings, explain, load_forecaster, save_forecaster
+from hyperforecast.forecasting import (
+    Reason, TreeEnsemble, advice, advise_settings, explain, load_forecaster, save_forecaster,
+)
 from hyperforecast.settings import COORDINATES, Settings, SettingsBox
 
 INPUTS = [*DESCRIPTORS, *COORDINATES]
@@ -94,10 +96,10 @@ def test_the_same_boundary_gets_the_same_advice(forecasters, here, tmp_path):
 
 
 def test_advice_copes_with_missing_descriptors(forecasters, here, direct):
-    rng = np.random.default_rng(0)
+    shuffled = np.random.default_rng(0).permutation(list(DESCRIPTORS)).tolist()
+    some_missing = [{**here, **dict.fromkeys(shuffled[:n], np.nan)} for n in (1, 20, 50)]
     for forecaster in (forecasters["wa"], direct):
-        for descriptors in ({}, dict.fromkeys(DESCRIPTORS, np.nan),
-                            *({**here, **dict.fromkeys(rng.permutation(list(DESCRIPTORS))[:n], np.nan)} for n in (1, 20, 50))):
+        for descriptors in ({}, dict.fromkeys(DESCRIPTORS, np.nan), *some_missing):
             found = advise_settings(forecaster, descriptors, SettingsBox("wa", 20))
             assert found.settings.checked("wa") and found.constant.checked("wa")
             json.dumps(found.as_dict(), allow_nan=False)
@@ -125,7 +127,8 @@ def test_the_weight_of_now_is_a_share(weight, forecasters, here):
 
 def test_the_advice_lies_where_the_model_says_and_not_at_the_edge(made, here):
     """The good region is a decade of learning rates; all else being equal, its middle is the safer place."""
-    found = advise_settings(made(shortfall=ensemble(band("log_learning_rate", LOW, LOW + 1))), here, SettingsBox("wa", 40))
+    forecaster = made(shortfall=ensemble(band("log_learning_rate", LOW, LOW + 1)))
+    found = advise_settings(forecaster, here, SettingsBox("wa", 40))
     logs = np.log10([one.learning_rate for one in found.ranked])
     assert LOW + 0.1 < logs[0] < LOW + 0.9
     assert ((LOW < logs) & (logs <= LOW + 1)).sum() >= 4 and (np.abs(logs - LOW - 0.5) < 1.6).all()
@@ -163,7 +166,8 @@ def test_exemplars_are_spent_only_where_they_bring_more_than_half_a_point(gain, 
     box = SettingsBox("wa", 40)
     steps = np.unique(np.round(np.geomspace(1, 40, 24)))
     assert steps[steps > 10][0] == 11
-    found = advise_settings(made(shortfall=ensemble(split("log_kept_per_class", 1.0, leaf(-gain), leaf(0.0)))), here, box)
+    forecaster = made(shortfall=ensemble(split("log_kept_per_class", 1.0, leaf(-gain), leaf(0.0))))
+    found = advise_settings(forecaster, here, box)
     assert found.settings.kept_per_class == expected
 
 
@@ -234,7 +238,8 @@ def test_a_number_of_exemplars_that_stays_the_same_is_no_reason(made, here):
     """With room for one exemplar a class, points far apart along that axis all keep one."""
     box, points = SettingsBox("wa", 1), advice.lattice(256, 3)
     offsets = np.abs(points[:, None] - points)
-    few, many = points[list(np.unravel_index((offsets[..., 2] - 4 * offsets[..., :2].max(axis=2)).argmax(), (256, 256)))]
+    along = offsets[..., 2] - 4 * offsets[..., :2].max(axis=2)
+    few, many = points[list(np.unravel_index(along.argmax(), along.shape))]
 
     def only(point):
         rate, strength = (np.log10([getattr(one, name) for one in box.from_unit(point + [[-1e-3], [1e-3]])])
@@ -249,7 +254,7 @@ def test_a_number_of_exemplars_that_stays_the_same_is_no_reason(made, here):
 
 
 def test_reasons_agree_with_advice_taken_anew(forecasters, datasets):
-    """The definition by plain loops: best of 256 candidates, scores averaged over their neighbours, with and without."""
+    """By the definition: the best of 256 candidates, scores averaged over neighbours, with and without."""
     forecaster, dataset = replace(forecasters["wa"], ranking="outcome"), datasets["wa"]
     box = SettingsBox("wa", 20)
     points = advice.lattice(256, 3)
@@ -278,7 +283,7 @@ def test_reasons_agree_with_advice_taken_anew(forecasters, datasets):
                 assert one.factor == pytest.approx(getattr(advised, one.setting) / getattr(instead, one.setting))
                 assert one.moved == pytest.approx(np.linalg.norm(np.subtract(*box.to_unit([advised, instead]))))
         first = explain(forecaster, here, box)
-        assert len(first) <= 3 and [one.moved for one in first] == sorted((one.moved for one in reasons.values()))[::-1][:3]
+        assert [one.moved for one in first] == sorted((one.moved for one in reasons.values()), reverse=True)[:3]
     assert told > 0
 
 

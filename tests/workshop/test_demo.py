@@ -65,12 +65,12 @@ def test_the_page_tells_of_every_family_and_delivery(page, deliveries):
 
 def test_the_page_needs_nothing_from_elsewhere(page):
     references, tags = [], []
+    pointing = ("src", "href", "xlink:href", "action", "data", "srcset", "poster", "background")
 
     class Reader(HTMLParser):
         def handle_starttag(self, tag, attributes):
             tags.append(tag)
-            references.extend(value for name, value in attributes if name in ("src", "href", "xlink:href", "action", "data",
-                                                                               "srcset", "poster", "background"))
+            references.extend(value for name, value in attributes if name in pointing)
 
     Reader().feed(page)
     assert references and all(one.startswith(("data:image/", "#")) for one in references)

@@ -24,6 +24,7 @@ from hyperforecast.workshop.gathering import (
 
 DEMO_SMALL = pathlib.Path(__file__).parents[2] / "bench_streams" / "demo_small.toml"
 SPACE_FILLED, PROPOSED = 6, 3
+FEW = {"space_filled": SPACE_FILLED, "proposed": PROPOSED}
 
 
 def content(path):
@@ -35,10 +36,11 @@ def content(path):
 def gathered(demo_small, tmp_path_factory):
     path = tmp_path_factory.mktemp("gathering") / "a.sqlite"
     seen = []
-    n_run = gather(demo_small, path, methods=METHODS, space_filled=SPACE_FILLED, proposed=PROPOSED, progress=seen.append)
+    n_run = gather(demo_small, path, methods=METHODS, **FEW, progress=seen.append)
     assert n_run == len(seen) == 2 * len(METHODS)
     assert [one.stored for one in seen] == list(range(1, 9)) and seen[-1].seconds_left == 0
-    assert re.fullmatch(r"8 of 8 trajectories, about 0 min left; last: small \w+ \w+, [23] boundaries in .* s", str(seen[-1]))
+    line = r"8 of 8 trajectories, about 0 min left; last: small \w+ \w+, [23] boundaries in .* s"
+    assert re.fullmatch(line, str(seen[-1]))
     return path
 
 
@@ -77,19 +79,21 @@ def test_later_outcomes_are_known_where_an_attempt_was_followed_and_the_stream_g
             assert sum(one_later) == expected
             assert two_later == (one_later if boundary.number < last - 1 else [False] * len(two_later))
             if expected:
-                total = np.array([boundary.classes_old * attempt.accuracy_old + boundary.classes_new * attempt.accuracy_new
+                n_old, n_new = boundary.classes_old, boundary.classes_new
+                total = np.array([n_old * attempt.accuracy_old + n_new * attempt.accuracy_new
                                   for attempt in boundary.attempts])
                 assert total[one_later].min() >= np.delete(total, np.flatnonzero(one_later)).max() - 1e-9
-                assert all(0 <= attempt.after_one <= 1 for attempt in boundary.attempts if attempt.after_one is not None)
+                later = [attempt.after_one for attempt, known in zip(boundary.attempts, one_later) if known]
+                assert all(0 <= accuracy <= 1 for accuracy in later)
 
 
 def test_records_do_not_depend_on_the_number_of_workers(gathered, demo_small, tmp_path):
-    gather(demo_small, tmp_path / "b.sqlite", methods=METHODS[::-1], workers=2, space_filled=SPACE_FILLED, proposed=PROPOSED)
+    gather(demo_small, tmp_path / "b.sqlite", methods=METHODS[::-1], workers=2, **FEW)
     assert content(tmp_path / "b.sqlite") == content(gathered)
 
 
 def test_a_seed_changes_the_records_and_names_other_trajectories(gathered, demo_small, tmp_path):
-    gather(demo_small[:1], tmp_path / "b.sqlite", methods=["ewc"], seed=1, space_filled=SPACE_FILLED, proposed=PROPOSED)
+    gather(demo_small[:1], tmp_path / "b.sqlite", methods=["ewc"], seed=1, **FEW)
     other, = RecordsFile(tmp_path / "b.sqlite").trajectories()
     same, = (one for one in RecordsFile(gathered).trajectories() if (one.stream, one.method) == ("small clouds", "ewc"))
     assert other.key != same.key and other.boundaries != same.boundaries
@@ -102,25 +106,34 @@ def test_what_is_stored_is_not_run_again(gathered, demo_small):
 
 
 GATHER = """
-import sys
-from hyperforecast.workshop.gathering import gather
+import json, sys, time, types
+from hyperforecast.workshop.gathering import gather, records
 from hyperforecast.workshop.streams import load_streams
-gather(load_streams(sys.argv[1]), sys.argv[2], methods={methods}, space_filled={space_filled}, proposed={proposed},
-       progress=lambda progress: print(progress, flush=True))
-""".format(methods=METHODS, space_filled=SPACE_FILLED, proposed=PROPOSED)
+
+written = []
+
+def dumps(*arguments, **options):
+    written.append(arguments)
+    if len(written) == 6:  # the plan and each boundary of a trajectory are one document: the second is half stored
+        print("in the middle of a transaction", flush=True)
+        time.sleep(600)
+    return json.dumps(*arguments, **options)
+
+records.json = types.SimpleNamespace(dumps=dumps)
+gather(load_streams(sys.argv[1]), sys.argv[2], methods={methods}, space_filled={space_filled}, proposed={proposed})
+""".format(methods=METHODS, **FEW)
 
 
 def test_a_gathering_that_is_killed_goes_on_where_it_was(gathered, demo_small, tmp_path):
     path = tmp_path / "b.sqlite"
-    process = subprocess.Popen([sys.executable, "-c", GATHER, str(DEMO_SMALL), str(path)], stdout=subprocess.PIPE, text=True)
+    command = [sys.executable, "-c", GATHER, str(DEMO_SMALL), str(path)]
+    process = subprocess.Popen(command, stdout=subprocess.PIPE, text=True)
     with process:
-        process.stdout.readline()
+        assert process.stdout.readline() == "in the middle of a transaction\n"
         process.send_signal(signal.SIGKILL)
     assert process.returncode == -signal.SIGKILL
-    stored = RecordsFile(path).stored()
-    assert 1 <= len(stored) < 8
-    n_run = gather(demo_small, path, methods=METHODS, space_filled=SPACE_FILLED, proposed=PROPOSED)
-    assert n_run == 8 - len(stored)
+    assert len(RecordsFile(path).stored()) == len(content(path)) == 1
+    assert gather(demo_small, path, methods=METHODS, **FEW) == 7
     assert content(path) == content(gathered)
 
 
@@ -174,7 +187,7 @@ def test_a_trajectory_is_stored_once_and_whole_or_not_at_all(tmp_path):
     records.store(some_trajectory(stream="another"))
     assert [one.stream for one in records.trajectories()] == ["s"]
     boundary = some_trajectory().boundaries[0]
-    with pytest.raises(InputError, match="a.sqlite: must be a readable, undamaged records file; received UNIQUE constraint"):
+    with pytest.raises(InputError, match="must be a readable, undamaged records file; received UNIQUE constraint"):
         records.store(some_trajectory(key="b", boundaries=[boundary, boundary]))
     assert records.stored() == {"a"}
 
@@ -249,7 +262,7 @@ def truncated(path):
     (foreign_sqlite, "must be a records file; received another SQLite database"),
     (lambda path: path.write_bytes(b""), "must be a records file; received another SQLite database"),
     (lambda path: path.write_text("method,source\nwa,digits\n" * 99), "must be a readable, undamaged records file"),
-    (lambda path: path.write_bytes(b"SQLite format 3\0" + b"\xff" * 5000), "must be a readable, undamaged records file"),
+    (lambda path: path.write_bytes(b"SQLite format 3\0" + b"\xff" * 5000), "must be a readable, undamaged records"),
     (lambda path: path.mkdir(), "must be a readable, undamaged records file"), (truncated, "undamaged records file"),
     (other_version, "must be of version 1; received version 2; use the program's version that wrote it"),
 ], ids=["missing", "foreign", "empty", "text", "header only", "folder", "truncated", "version"])
