@@ -99,7 +99,7 @@ def largest_fisher_ratio(view):
 
 @descriptor("data")
 def nearest_mean_accuracy(view):
-    """Share of rows nearer to the mean of their class's other rows than to any other mean of the increment. Unit: share.
+    """Share of rows nearer to the mean of their class's other rows than to any other of the increment. Unit: share.
 
     Leave-one-out accuracy of the nearest-class-mean classifier. Common practice.
     """

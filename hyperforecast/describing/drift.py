@@ -26,7 +26,7 @@ def frechet_distance(view):
 
 @descriptor("drift")
 def nearest_old_class(view):
-    """Mean over the increment's classes of the squared distance to the nearest old class mean, over the variance within.
+    """Mean over the increment's classes of the squared distance to the nearest old mean, over the variance within.
 
     Old classes that came again do not count. Unit: ratio (Mahalanobis distance with one common variance). Common
     practice.

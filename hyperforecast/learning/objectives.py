@@ -108,7 +108,7 @@ class Objective:
         return logits
 
     def loss_curvature(self, logits):
-        """Return a function: output changes (N, C) -> Hessian of each row's unanchored loss at the logits, times them."""
+        """Return a function: output changes (N, C) -> Hessian of each row's unanchored loss there, times them."""
         if self.method == "icarl":
             p = logistic(logits)
             weight = p * (1 - p)

@@ -259,7 +259,7 @@ def _facts(head, objective, boundary, rng):
     old = softmax(logits[:, :n_old])
     facts = {
         "confidence_new": old.max(axis=1).mean(),
-        "entropy_new": -(old * np.log(old + 1e-12)).sum(axis=1).mean() / max(np.log(n_old), 1e-12) if n_old > 1 else 0.0,
+        "entropy_new": -(old * np.log(old + 1e-12)).sum(axis=1).mean() / np.log(n_old) if n_old > 1 else 0.0,
         "largest_logit_new": logits[:, :n_old].max(axis=1).mean(),
         "curvature_new": top_curvature(head, Z, objective.loss_curvature(logits), rng=rng),
         "output_weight_norm": np.sqrt((head["output_weights"][:, :n_old] ** 2).sum(axis=0)).mean(),
