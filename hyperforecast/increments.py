@@ -77,8 +77,9 @@ def check_features(X, *, name="X", n_features=None):
         raise InputError(name, "must have two dimensions, rows and features", f"{X.ndim}, shape {X.shape}",
                          "Reshape your data")
     if 0 in X.shape:
-        raise InputError(name, "must hold at least one row and one feature",
-                         f"{len(X)} row(s), {X.shape[1]} feature(s) (shape={X.shape}) while a minimum of 1 is required.")
+        raise InputError(
+            name, "must hold at least one row and one feature",
+            f"{len(X)} row(s), {X.shape[1]} feature(s) (shape={X.shape}) while a minimum of 1 is required.")
     if n_features is not None and X.shape[1] != n_features:
         raise InputError(name, f"must have {n_features} features as before", f"{X.shape[1]}")
     for start in range(0, len(X), CHUNK_ROWS):

@@ -157,7 +157,8 @@ def parse_array(name, data):
     shape, _, dtype = read_array_header(name, stream)
     expected = math.prod(shape) * dtype.itemsize
     if expected != len(data) - stream.tell():
-        raise InputError(name, "must hold as many bytes as its header says", f"{len(data) - stream.tell()}, not {expected}")
+        raise InputError(name, "must hold as many bytes as its header says",
+                         f"{len(data) - stream.tell()}, not {expected}")
     stream.seek(0)
     return np.lib.format.read_array(stream, allow_pickle=False)
 
@@ -208,7 +209,8 @@ def opened_zip(path, source, *, what):
 
 def _manifest(bundle, encoded):
     listed = {
-        name: {"sha256": checksum(data), "dtype": bundle.arrays[name].dtype.str, "shape": list(bundle.arrays[name].shape)}
+        name: {"sha256": checksum(data), "dtype": bundle.arrays[name].dtype.str,
+               "shape": list(bundle.arrays[name].shape)}
         for name, data in encoded.items()
     }
     body = {"kind": bundle.kind, "version": bundle.version, "facts": bundle.facts, "arrays": listed}

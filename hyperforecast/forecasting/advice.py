@@ -140,11 +140,12 @@ def advise_settings(forecaster, descriptors, box, *, now_weight=1 / 3):
     alternatives = _apart(box, best, settings, scores)
     expected = forecast.expected([best])
     return Advice(
-        settings=best, alternatives=alternatives, expected_old=expected["old"].at(0), expected_new=expected["new"].at(0),
-        expected_all=expected["all"].at(0), divergence=float(forecast.divergence([best])[0]),
+        settings=best, alternatives=alternatives, expected_old=expected["old"].at(0),
+        expected_new=expected["new"].at(0), expected_all=expected["all"].at(0),
+        divergence=float(forecast.divergence([best])[0]),
         familiarity=forecaster.familiarity.assess(forecaster.vector(descriptors)),
-        constant=forecaster.constant_settings(descriptors, box), descriptors=descriptors, forecaster=forecaster, box=box,
-        now_weight=now_weight,
+        constant=forecaster.constant_settings(descriptors, box), descriptors=descriptors, forecaster=forecaster,
+        box=box, now_weight=now_weight,
     )
 
 

@@ -69,7 +69,8 @@ class Constant:
         if self.kind == "scale_free":
             # A head that has diverged may have no curvature at all.
             with np.errstate(divide="ignore", invalid="ignore"):
-                new, anchor = (np.float64(descriptors.get(name, np.nan)) for name in ("curvature_new", "anchor_curvature"))
+                new, anchor = (np.float64(descriptors.get(name, np.nan))
+                               for name in ("curvature_new", "anchor_curvature"))
                 rate, strength = float(rate / new), float(strength * new / anchor)
             if not (np.isfinite(rate) and np.isfinite(strength) and rate > 0 and strength > 0):
                 return None
@@ -276,7 +277,8 @@ def _from_bundle(bundle, checksum):
     """Return the forecaster in a bundle, every part checked: it may be made by somebody who means harm."""
     facts, arrays = bundle.facts, bundle.arrays
     if facts["coordinates"] != list(COORDINATES):
-        raise InputError("coordinates", "must be this program's", facts["coordinates"], "fit it again with this version")
+        raise InputError("coordinates", "must be this program's", facts["coordinates"],
+                         "fit it again with this version")
     method = check_choice("method", facts["method"], METHODS)
     ranking = check_choice("ranking", facts["ranking"], RANKINGS)
     names = tuple(facts["descriptor_names"])

@@ -74,9 +74,15 @@ def test_sources_can_be_left_out_but_two_must_remain(records):
 # Held-out sources.
 
 
-def test_the_outcomes_of_a_source_do_not_reach_its_own_forecasts(dataset):
-    """A spy: poisoned outcomes of one source change nothing that was forecast for it, and much for the others."""
-    own = dataset.sources == "synthetic_gaussian"
+@pytest.mark.parametrize("folds, poisoned_source, together", [
+    (None, "synthetic_gaussian", ["synthetic_gaussian"]),
+    (2, "synthetic_drifting", ["synthetic_drifting", "synthetic_rectified"])])
+def test_the_outcomes_of_a_source_do_not_reach_its_own_forecasts(folds, poisoned_source, together, dataset):
+    """A spy: poisoned outcomes of one source change nothing that was forecast for it, and much for the others.
+
+    Nor for those that are held out together with it.
+    """
+    own = dataset.sources == poisoned_source
     rows = own[dataset.boundary]
     rng = np.random.default_rng(0)
 
@@ -85,7 +91,9 @@ def test_the_outcomes_of_a_source_do_not_reach_its_own_forecasts(dataset):
 
     poison = replace(dataset, old=poisoned("old"), new=poisoned("new"), all=poisoned("all"), after=poisoned("after"),
                      diverged=np.where(rows, ~dataset.diverged, dataset.diverged))
-    held, spied = (hold_out(one, seed=0) for one in (dataset, poison))
+    held, spied = (hold_out(one, folds=folds, seed=0) for one in (dataset, poison))
+    own = np.isin(dataset.sources, together)
+    rows = own[dataset.boundary]
     assert held.forecast.keys() >= {"old", "new", "all"}
     for name in held.forecast:
         np.testing.assert_array_equal(held.forecast[name][rows], spied.forecast[name][rows])
@@ -95,6 +103,14 @@ def test_the_outcomes_of_a_source_do_not_reach_its_own_forecasts(dataset):
     assert not np.array_equal(held.direct[~own], spied.direct[~own])
     assert fit_constants(dataset, ~own, seed=0) == fit_constants(poison, ~own, seed=0)
     assert fit_constants(dataset, own, seed=0) != fit_constants(poison, own, seed=0)
+
+
+def test_folds_are_two_at_least_and_no_more_than_the_sources(datasets):
+    for folds in (1, 0, 2.0, "2"):
+        with pytest.raises(InputError, match="^folds: must be a whole number of at least 2; received "):
+            hold_out(datasets["ewc"], folds=folds, seed=0)
+    alone, many = (hold_out(datasets["ewc"], folds=folds, seed=0) for folds in (None, 99))
+    assert alone.figures == many.figures
 
 
 def test_every_attempt_is_forecast_and_figures_are_of_recorded_attempts(dataset):
