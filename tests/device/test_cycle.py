@@ -39,7 +39,7 @@ def forecasters(tmp_path_factory):
                                       raw_dimension=6, rows_per_class=20)
         for method in METHODS:
             records.store(run_trajectory(definition, method, seed=0, space_filled=16, proposed=0))
-    return {method: fit_forecaster(load_dataset(records, method), recipe={}, threads=1) for method in METHODS}
+    return {method: fit_forecaster(load_dataset(records, method), recipe={}) for method in METHODS}
 
 
 def clouds(labels, *, seed=0, rows=40, features=6, apart=4.0):
