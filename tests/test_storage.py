@@ -112,21 +112,18 @@ def damaged(data, rng):
         yield f"byte {place} xor {change}", data[:place] + bytes([data[place] ^ change]) + data[place + 1:]
 
 
-def assert_detected(read, path, file, data, what):
-    """A cut must be refused. A changed byte must, too, unless no reader looks at it (a date in the zip directory)."""
-    file.write_bytes(data)
-    try:
-        back, sha = read(path)
-    except InputError as error:
-        assert len(str(error).splitlines()) == 1
-        return 1
-    assert not what.startswith("cut") and same_bundle(back, some_bundle()) and sha == bundle_checksum(back), what
-    return 0
-
-
-def test_damage_to_a_file_is_found(written_file):
-    cases = list(damaged(written_file.read_bytes(), np.random.default_rng(1)))
-    found = sum(assert_detected(read_file, written_file, written_file, data, what) for what, data in cases)
+def test_damage_to_a_file_is_found_or_harmless(written_file):
+    """A cut is refused. A changed byte is, too, unless no reader looks at it, as at a date in the zip directory."""
+    found, cases = 0, list(damaged(written_file.read_bytes(), np.random.default_rng(1)))
+    for what, data in cases:
+        written_file.write_bytes(data)
+        try:
+            back, sha = read_file(written_file)
+        except InputError as error:
+            assert str(error).isprintable()
+            found += 1
+        else:
+            assert not what.startswith("cut") and same_bundle(back, some_bundle()) and sha == bundle_checksum(back), what
     assert found > 0.7 * len(cases)
 
 
@@ -135,12 +132,10 @@ def test_damage_to_any_file_of_a_folder_is_found(written_folder):
     for file in sorted(written_folder.iterdir()):
         whole = file.read_bytes()
         for what, data in damaged(whole, rng):
-            if file.name != "manifest.json":
-                file.write_bytes(data)
-                with pytest.raises(InputError, match="must match its checksums|must hold at most"):
-                    read_folder(written_folder)
-            elif data.split() != whole.split():  # space between the parts of a JSON document says nothing
-                assert assert_detected(read_folder, written_folder, file, data, what), what
+            file.write_bytes(data)
+            with pytest.raises(InputError) as caught:
+                read_folder(written_folder)
+            assert_one_line(caught)
         file.write_bytes(whole)
     assert same_bundle(read_folder(written_folder)[0], some_bundle())
 
