@@ -12,9 +12,7 @@ from hyperforecast.forecasting import (
     Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
 )
 from hyperforecast.workshop.fitting.constants import constant_outcome, fit_constants
-from hyperforecast.workshop.fitting.models import (
-    best_attempts, source_weights, train, train_direct, train_outcomes,
-)
+from hyperforecast.workshop.fitting.models import SMALL, source_weights, train, train_direct, train_outcomes
 
 RANGES = ("old", "new", "all")
 MISS_RATE = 0.1
@@ -199,7 +197,8 @@ def _figures(dataset, source, held):
 def _calibrate(dataset, held, name, *, seed):
     """Return (Booster of the logarithm of the error, conformal threshold of error over that) for one outcome.
 
-    The threshold comes from errors of spread models that were fitted on the other half of the sources.
+    The threshold comes from errors of spread models that were fitted on the other half of the sources. It holds
+    1 - MISS_RATE of the weight of all m sources, which guarantees a new source m / (m + 1) of that.
     """
     forecast = held.forecast["shortfall"] - (held.divergence > MOST_DIVERGENCE)
     order = np.lexsort((-forecast, dataset.boundary))
@@ -211,11 +210,12 @@ def _calibrate(dataset, held, name, *, seed):
     weights = source_weights(sources)
 
     def spread_of(mask):
-        return train(inputs[mask], target[mask], weights[mask], small=True, seed=seed)
+        return train(inputs[mask], target[mask], weights[mask], size=SMALL, seed=seed)
 
     unique = np.random.default_rng(seed).permutation(np.unique(sources))
     first = np.isin(sources, unique[::2])
     scores = np.empty(len(rows))
     for half in (first, ~first):
         scores[half] = error[half] / np.exp(spread_of(~half).predict(inputs[half]))
-    return spread_of(np.ones(len(rows), bool)), grouped_conformal_threshold(scores, sources, MISS_RATE)
+    alpha = 1 - (1 - MISS_RATE) * len(unique) / (len(unique) + 1)
+    return spread_of(np.ones(len(rows), bool)), grouped_conformal_threshold(scores, sources, alpha)

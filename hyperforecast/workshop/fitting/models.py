@@ -5,13 +5,15 @@ import numpy as np
 
 from hyperforecast.settings import SettingsBox
 
-# One set for all models; values chosen on folds of the training sources.
+# Values chosen on folds of the training sources.
 PARAMETERS = {
     "learning_rate": 0.08, "num_leaves": 31, "min_data_in_leaf": 40, "feature_fraction": 0.5, "lambda_l2": 1.0,
     "max_bin": 63, "deterministic": True, "force_col_wise": True, "num_threads": 1, "verbosity": -1,
 }
 ROUNDS = 180
 SMALL = {"num_leaves": 15}
+# What orders settings is a finer matter than what level to expect.
+LARGE = {"num_leaves": 127, "min_data_in_leaf": 200}
 SMALL_ROUNDS = 80
 # Attempts within about this much of a boundary's best form the ridge, which weighs most in the fit.
 RIDGE = 0.1
@@ -21,11 +23,11 @@ FAR = 0.15
 THINNED = 3
 
 
-def train(inputs, target, weights, *, objective="regression", small=False, seed):
-    """Return a LightGBM Booster for inputs (n, F), target (n,) and weights (n,)."""
-    parameters = {**PARAMETERS, **(SMALL if small else {}), "objective": objective, "seed": seed}
+def train(inputs, target, weights, *, objective="regression", size=None, seed):
+    """Return a LightGBM Booster for inputs (n, F), target (n,) and weights (n,); `size` is None, SMALL or LARGE."""
+    parameters = {**PARAMETERS, **(size or {}), "objective": objective, "seed": seed}
     data = lightgbm.Dataset(inputs, target, weight=weights, free_raw_data=True)
-    return lightgbm.train(parameters, data, SMALL_ROUNDS if small else ROUNDS)
+    return lightgbm.train(parameters, data, SMALL_ROUNDS if size is SMALL else ROUNDS)
 
 
 def source_weights(sources):
@@ -55,9 +57,9 @@ def train_outcomes(dataset, boundaries, *, seed):
     inputs, weights = dataset.inputs(attempts), attempt_weights(dataset, attempts)
     models = {name: train(inputs, getattr(dataset, name)[attempts], weights, seed=seed) for name in ("old", "new")}
     shortfall = (dataset.all - dataset.best()[dataset.boundary])[attempts]
-    models["shortfall"] = train(inputs, shortfall, weights, seed=seed)
+    models["shortfall"] = train(inputs, shortfall, weights, size=LARGE, seed=seed)
     even = source_weights(dataset.sources[dataset.boundary[attempts]])
-    models["diverged"] = train(inputs, dataset.diverged[attempts].astype(float), even, objective="binary", small=True,
+    models["diverged"] = train(inputs, dataset.diverged[attempts].astype(float), even, objective="binary", size=SMALL,
                                seed=seed)
     extra = later_extra(dataset)
     followed = attempts[~np.isnan(extra[attempts])]
@@ -65,7 +67,7 @@ def train_outcomes(dataset, boundaries, *, seed):
         # Streams of two increments: nothing comes later, whatever the settings.
         followed, extra = attempts, np.zeros_like(extra)
     models["later"] = train(dataset.inputs(followed), extra[followed],
-                            source_weights(dataset.sources[dataset.boundary[followed]]), small=True, seed=seed)
+                            source_weights(dataset.sources[dataset.boundary[followed]]), size=SMALL, seed=seed)
     return models
 
 
@@ -90,7 +92,7 @@ def train_direct(dataset, boundaries, *, seed):
     unset = np.full((len(rows), dataset.coordinates.shape[1]), np.nan)
     inputs = np.hstack([dataset.descriptors[rows], unset])
     weights = source_weights(dataset.sources[rows])
-    return {name: train(inputs, dataset.points[best, d], weights, small=True, seed=seed)
+    return {name: train(inputs, dataset.points[best, d], weights, size=SMALL, seed=seed)
             for d, name in enumerate(SettingsBox(dataset.method).names)}
 
 
