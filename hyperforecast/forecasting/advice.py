@@ -224,7 +224,8 @@ def _smooth(points, scores):
     lengths = (points**2).sum(axis=1)
     squares = lengths[:, None] + lengths - 2 * points @ points.T
     weights = np.exp(squares * (-0.5 / NEIGHBOURHOOD**2))
-    return weights @ scores / weights.sum(axis=1)
+    # Rounded, so that ties are ties, and the first of them wins.
+    return np.round(weights @ scores / weights.sum(axis=1), 9)
 
 
 def _fewest_kept(forecast, best, box, now_weight):

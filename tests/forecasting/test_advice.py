@@ -265,7 +265,7 @@ def test_reasons_agree_with_advice_taken_anew(forecasters, datasets):
     def best(descriptors):
         at = forecaster.at(descriptors)
         scores = at.shortfall(candidates) + 2 / 3 * at.later(candidates) - (at.divergence(candidates) > 0.1)
-        return candidates[int(np.argmax((weights * scores).sum(axis=1) / weights.sum(axis=1)))]
+        return candidates[int(np.argmax(np.round((weights * scores).sum(axis=1) / weights.sum(axis=1), 9)))]
 
     typical, told = dict(zip(DESCRIPTORS, forecaster.typical)), 0
     for row in dataset.descriptors[::5]:
