@@ -347,6 +347,7 @@ def _contest(options):
 
 
 def _report(options):
+    document, lines = {"html": options.html}, []
     if options.device:
         from hyperforecast.device import DeviceFolder
         from hyperforecast.workshop.reporting.device_report import device_page
@@ -358,12 +359,14 @@ def _report(options):
 
         page = records_page(RecordsFile(options.records))
     else:
-        from hyperforecast.workshop.contest import load_contest
+        from hyperforecast.workshop.contest import as_text, load_contest, summarize
         from hyperforecast.workshop.reporting.contest_report import contest_page
 
-        page = contest_page(load_contest(options.result))
+        contest = load_contest(options.result)
+        page, document["summary"] = contest_page(contest), summarize(contest)
+        lines.append(as_text(document["summary"]))
     page.write(options.html)
-    _say(options, {"html": options.html}, [f"Report: {options.html}"])
+    _say(options, document, [*lines, f"Report: {options.html}"])
 
 
 def _gather(options):
