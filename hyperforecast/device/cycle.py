@@ -87,7 +87,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
     plan : Plan, optional
         Needed at the first update, and fixed by it.
     forecaster : Forecaster, optional
-        By default the one that ships for the plan's method.
+        By default the one that ships for the plan's method, which knows the built-in trainer alone.
     trainer : Trainer, optional
         The built-in one by default.
     settings : Settings, optional
@@ -183,7 +183,7 @@ def _check_head(folder, trainer, carryover):
     expected, received = (1, len(carryover.classes)), "one that it cannot score with"
     try:
         received = np.shape(trainer.class_scores(carryover.head, np.zeros((1, carryover.n_features), np.float32)))
-    except (KeyError, IndexError, TypeError, ValueError):
+    except Exception:  # Whatever a trainer makes of arrays that are not its own.
         pass
     if received != expected:
         raise InputError(folder.path, f"must hold a head that {type(trainer).__name__} scores a row with, {expected}",
@@ -192,6 +192,9 @@ def _check_head(folder, trainer, carryover):
 
 def _advise(trainer, boundary, forecaster, seed):
     method = boundary.plan.method
+    if forecaster is None and not isinstance(trainer, HeadTrainer):
+        raise InputError("forecaster", "must be given with a trainer of one's own", "none",
+                         "gather records with that trainer and fit a forecaster on them")
     forecaster = load_forecaster(method) if forecaster is None else forecaster
     if forecaster.method != method:
         raise InputError("forecaster", f"must be one for {method}, the method of the plan", forecaster.method)

@@ -213,7 +213,7 @@ def _scores(forecast, settings, box, now_weight):
 
 def _objective(forecast, settings, now_weight):
     """Return the expected outcome (n,), now and later, from the best; candidates that may well diverge come last."""
-    value = forecast.shortfall(settings)
+    value = now_weight * forecast.shortfall(settings)
     if now_weight < 1:
         value = value + (1 - now_weight) * forecast.later(settings)
     return value - (forecast.divergence(settings) > MOST_DIVERGENCE)

@@ -193,9 +193,9 @@ class BoundaryForecast:
         return 1 / (1 + np.exp(-self._raw("diverged", self.coordinates(settings))))
 
     def later(self, settings):
-        """Return how much more accuracy (n,) each settings leaves one and two boundaries later than it shows now.
+        """Return the expected advantage (n,) of each settings for the accuracy one and two boundaries later.
 
-        The mean of both, relative to other good settings at this boundary.
+        The mean of both, relative to good settings at this boundary.
         """
         return self._raw("later", self.coordinates(settings))
 

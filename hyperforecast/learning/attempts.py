@@ -45,13 +45,12 @@ def close_boundary(trainer, boundary, attempt, *, seed):
     job = Job(boundary, attempt.settings)
     exemplars = Exemplars.none(boundary.n_features)
     if job.kept:
-        old = boundary.old_exemplars.cut(job.kept)
-        held = np.bincount(old.y, minlength=boundary.n_classes)
+        held = np.bincount(job.exemplars.y, minlength=boundary.n_classes)
         features = np.nan_to_num(trainer.features(attempt.head, boundary.Z))
         chosen = choose_exemplars(boundary.Z, boundary.y, features, job.kept)
         chosen = replace(chosen, rank=chosen.rank + held[chosen.y])
         fits = chosen.rank < job.kept
-        exemplars = old.joined(Exemplars(chosen.Z[fits], chosen.y[fits], chosen.rank[fits]))
+        exemplars = job.exemplars.joined(Exemplars(chosen.Z[fits], chosen.y[fits], chosen.rank[fits]))
     check_rows = boundary.check_set()
     head = trainer.consolidated(boundary, attempt, seed=seed)
     now = accuracies(trainer, head, check_rows.Z, check_rows.y, boundary.n_classes)

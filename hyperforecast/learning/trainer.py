@@ -1,9 +1,9 @@
 """The door for trainers: what gathering, searching, contests and the update cycle ask of a learner.
 
-`HeadTrainer` is the built-in one. Any object with the methods of `Trainer` serves in its place; its model must be
-expressible as a dict of plain numeric arrays, which is what a device folder stores.
+`HeadTrainer` is the built-in one. Any other object with the methods of `Trainer` serves in its place.
 """
 
+from abc import abstractmethod
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -36,6 +36,11 @@ class Job:
             return 0
         return min(self.settings.kept_per_class, self.boundary.most_kept)
 
+    @property
+    def exemplars(self):
+        """Exemplars of old classes to train on, those that stay when every class is cut to `kept`."""
+        return self.boundary.old_exemplars.cut(self.kept)
+
 
 @dataclass(frozen=True)
 class Attempt:
@@ -58,29 +63,89 @@ class Attempt:
 
 
 class Trainer(Protocol):
-    """What a learner offers. Rows Z are standardized float32 features (n, d); codes y count from 0."""
+    """What a learner offers. A class derived from this one needs `learn` and `class_scores`; the rest has a default.
 
+    Rows Z are standardized float32 features (n, d). Codes y count from 0 in order of arrival, so that old classes keep
+    theirs: `boundary.n_old` of `boundary.n_classes` were seen before. A *head* is the model as a dict of plain arrays,
+    numeric, boolean or text, their names of letters, digits and underscores; a device folder stores nothing else of
+    it. The trainer itself holds no state: each call is told all that it needs, in any order.
+
+    The plan and the settings mean what the trainer makes of them, within the ranges in `hyperforecast.settings`. Of
+    `plan.method` one thing is fixed: with "wa" and "icarl" exemplars are kept and trained on (`plan.rehearses`), with
+    "ewc" and "lwf" there are none, and `settings.kept_per_class` is None.
+
+    Examples
+    --------
+    A trainer that keeps a mean of each class, moved by the learning rate at every pass:
+
+    >>> import numpy as np
+    >>> class Means(Trainer):
+    ...     def learn(self, jobs, *, seed):
+    ...         return [self._attempt(job) for job in jobs]
+    ...
+    ...     def _attempt(self, job):
+    ...         boundary, plan = job.boundary, job.boundary.plan
+    ...         means = np.zeros((boundary.n_classes, boundary.n_features), np.float32)
+    ...         if boundary.carryover is not None:
+    ...             means[:boundary.n_old] = boundary.carryover.head["means"]
+    ...         Z = np.concatenate([boundary.Z, job.exemplars.Z])
+    ...         y = np.concatenate([boundary.y, job.exemplars.y])
+    ...         for _ in range(plan.passes):
+    ...             for code in np.unique(y):
+    ...                 means[code] += job.settings.learning_rate * (Z[y == code].mean(axis=0) - means[code])
+    ...         return Attempt(job.settings, {"means": means}, diverged=False, operations=3.0 * plan.passes * Z.size)
+    ...
+    ...     def class_scores(self, head, Z):
+    ...         return 2 * Z @ head["means"].T - (head["means"] ** 2).sum(axis=1)
+
+    Learned by hand, one increment (everything else in the package asks in this way):
+
+    >>> from hyperforecast.increments import check_increment
+    >>> from hyperforecast.learning import close_boundary, open_boundary, predict_codes, try_settings
+    >>> from hyperforecast.settings import Plan, Settings
+    >>> X = np.repeat([[0.0, 1.0], [4.0, 5.0]], 10, axis=0)
+    >>> boundary = open_boundary(Plan("wa"), None, check_increment(X, np.repeat(["nut", "rod"], 10)))
+    >>> attempt, = try_settings(Means(), boundary, [Settings(0.1, 1.0, 3)], seed=0)
+    >>> carryover = close_boundary(Means(), boundary, attempt, seed=0)
+    >>> carryover.classes[predict_codes(Means(), carryover.head, carryover.standardized(X[[0, 19]]))].tolist()
+    ['nut', 'rod']
+    >>> len(carryover.exemplars)
+    6
+    """
+
+    @abstractmethod
     def learn(self, jobs, *, seed):
         """Return one `Attempt` per `Job`; all jobs share plan and new rows, and differ in settings or carryover.
 
-        At the first increment `boundary.carryover` is None: start a fresh model. `job.kept` exemplars of each old
-        class are in `boundary.old_exemplars.cut(job.kept)`.
+        Start from `boundary.carryover.head`, or afresh at the first increment, where `boundary.carryover` is None.
+        Train on the rows `boundary.Z` of classes `boundary.y` and on `job.exemplars`. An attempt must come out the
+        same whatever jobs are beside it. Report numbers that run away as `diverged`, rather than raise.
         """
 
+    @abstractmethod
     def class_scores(self, head, Z):
         """Return scores (n, C) in code order; the highest wins, their softmax is the class probabilities."""
 
     def features(self, head, Z):
-        """Return what exemplars are chosen by, (n, h)."""
+        """Return what exemplars are chosen by, (n, h); by default the rows themselves."""
+        return Z
 
     def consolidated(self, boundary, attempt, *, seed):
-        """Return the arrays of the attempt that is kept, with whatever the next boundary needs of this one's rows."""
+        """Return the head to carry after the attempt that is kept, with all that the next boundary needs of this one.
+
+        By default the attempt's own. Asked once a boundary, so that what is costly belongs here, not in `learn`.
+        """
+        return attempt.head
 
     def facts(self, boundary, *, seed):
-        """Return numbers about the model at a boundary before training, by descriptor name; any may be left out."""
+        """Return numbers about the model at a boundary before training, a dict by descriptor name; by default none.
+
+        The names are those in `hyperforecast.describing.model`. What is left out is a missing descriptor.
+        """
+        return {}
 
 
-class HeadTrainer:
+class HeadTrainer(Trainer):
     """The built-in trainer: EWC, LwF, iCaRL and WA on a linear head or one hidden layer.
 
     References (from memory): Kirkpatrick et al. 2017 (EWC), Schwarz et al. 2018 (one recentred penalty), Li & Hoiem
@@ -191,8 +256,8 @@ class _Pool:
         boundary = job.boundary
         if id(boundary) not in self.starts:
             self.starts[id(boundary)] = self._add(boundary)
-        first, flat, importance, exemplars = self.starts[id(boundary)]
-        length = len(boundary.y) + (len(exemplars.cut(job.kept)) if job.kept else 0)
+        first, flat, importance = self.starts[id(boundary)]
+        length = len(boundary.y) + len(job.exemplars)
         rows = self.rows.setdefault((first, length), np.arange(first, first + length))
         return Regimen(job.settings.learning_rate, job.settings.regularization, rows, flat, importance)
 
@@ -213,7 +278,7 @@ class _Pool:
                 self.targets.append(self.objective.targets(head_logits(arrays, Z)))
         self.size += len(Z)
         importance = self.layout.flatten(arrays, "importance_")[0] if boundary.plan.method == "ewc" else None
-        return first, self.layout.flatten(arrays)[0], importance, exemplars
+        return first, self.layout.flatten(arrays)[0], importance
 
     def gathered(self):
         targets = np.concatenate(self.targets) if self.targets else None
@@ -232,13 +297,12 @@ def _add_class_means(jobs, attempts):
         new = np.stack([np.nan_to_num(unit_rows(hidden_features(one.head, boundary.Z))) for one in attempts])
         means = np.zeros((len(jobs), boundary.n_classes, new.shape[2]), np.float32)
         for k, (job, attempt) in enumerate(zip(jobs, attempts)):
-            exemplars = job.boundary.old_exemplars.cut(job.kept)
-            if len(exemplars):
-                features = np.nan_to_num(unit_rows(hidden_features(attempt.head, exemplars.Z)))
-                np.add.at(means[k], exemplars.y, features)
+            if len(job.exemplars):
+                features = np.nan_to_num(unit_rows(hidden_features(attempt.head, job.exemplars.Z)))
+                np.add.at(means[k], job.exemplars.y, features)
         held = np.zeros((len(jobs), boundary.n_classes), np.int64)
         for k, job in enumerate(jobs):
-            held[k] = np.bincount(job.boundary.old_exemplars.cut(job.kept).y, minlength=boundary.n_classes)
+            held[k] = np.bincount(job.exemplars.y, minlength=boundary.n_classes)
         for code in boundary.arrived:
             rows = np.flatnonzero(boundary.y == code)
             room = np.minimum(np.maximum(kept - held[:, code], 0), len(rows))

@@ -167,7 +167,7 @@ def test_exemplars_are_spent_only_where_they_bring_more_than_half_a_point(gain, 
     steps = np.unique(np.round(np.geomspace(1, 40, 24)))
     assert steps[steps > 10][0] == 11
     forecaster = made(shortfall=ensemble(split("log_kept_per_class", 1.0, leaf(-gain), leaf(0.0))))
-    found = advise_settings(forecaster, here, box)
+    found = advise_settings(forecaster, here, box, now_weight=1)
     assert found.settings.kept_per_class == expected
 
 
@@ -264,7 +264,7 @@ def test_reasons_agree_with_advice_taken_anew(forecasters, datasets):
 
     def best(descriptors):
         at = forecaster.at(descriptors)
-        scores = at.shortfall(candidates) + 2 / 3 * at.later(candidates) - (at.divergence(candidates) > 0.1)
+        scores = at.shortfall(candidates) / 3 + 2 / 3 * at.later(candidates) - (at.divergence(candidates) > 0.1)
         return candidates[int(np.argmax(np.round((weights * scores).sum(axis=1) / weights.sum(axis=1), 9)))]
 
     typical, told = dict(zip(DESCRIPTORS, forecaster.typical)), 0

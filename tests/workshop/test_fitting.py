@@ -219,7 +219,8 @@ def test_the_estimate_at_an_attempt_that_stands_alone_is_its_outcome():
 def test_the_forecaster_forecasts_what_lightgbm_does(dataset):
     """At a boundary the trees are cut to its descriptors; LightGBM itself reads whole rows."""
     everything = np.ones(dataset.n_boundaries, bool)
-    boosters = models.train_outcomes(dataset, everything, seed=3)
+    boosters = {**models.train_outcomes(dataset, everything, seed=3),
+                "later": models.train_later(dataset, everything, seed=3)}
     forecaster = fit_forecaster(dataset, recipe={}, seed=3)
     inputs = dataset.inputs()
     for b in range(0, dataset.n_boundaries, 3):
@@ -272,4 +273,19 @@ def test_streams_too_short_for_later_outcomes_still_make_a_forecaster(without_la
     later = here.later([Settings(0.01, 1.0), Settings(0.1, 10.0)])
     assert np.isfinite(later).all()
     if without_later == "all":
-        np.testing.assert_array_equal(later, 0)
+        # Nothing comes later: the present stands for it.
+        np.testing.assert_array_equal(np.minimum(later, 0), here.shortfall([Settings(0.01, 1.0), Settings(0.1, 10.0)]))
+
+
+def test_later_advantages_are_followed_or_the_share_of_the_present_that_lasts(dataset):
+    """By hand at each boundary: the deviation from the followed attempts' mean, or the pooled slope times the present's."""
+    known = ~np.isnan(dataset.after)
+    now, later = np.full((2, len(dataset.all)), np.nan)
+    for b in range(dataset.n_boundaries):
+        rows = dataset.boundary == b
+        if (rows & known).any():
+            now[rows] = dataset.all[rows] - dataset.all[rows & known].mean()
+            later[rows] = dataset.after[rows] - dataset.after[rows & known].mean()
+    slope = (now[known] @ later[known]) / (now[known] @ now[known])
+    np.testing.assert_allclose(models.later_advantage(dataset), np.where(known, later, slope * now), rtol=1e-9)
+    assert np.isnan(models.later_advantage(dataset)).any()

@@ -12,7 +12,9 @@ from hyperforecast.forecasting import (
     Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
 )
 from hyperforecast.workshop.fitting.constants import constant_outcome, fit_constants
-from hyperforecast.workshop.fitting.models import SMALL, source_weights, train, train_direct, train_outcomes
+from hyperforecast.workshop.fitting.models import (
+    SMALL, source_weights, train, train_direct, train_later, train_outcomes,
+)
 
 RANGES = ("old", "new", "all")
 MISS_RATE = 0.1
@@ -148,6 +150,9 @@ def fit_forecaster(dataset, *, recipe, folds=None, seed=0, workers=1, progress=N
     held = hold_out(dataset, folds=folds, seed=seed, workers=workers, progress=progress)
     everything = np.ones(dataset.n_boundaries, bool)
     boosters = train_outcomes(dataset, everything, seed=seed)
+    later = train_later(dataset, everything, seed=seed)
+    # Where nothing comes later the present stands for it.
+    boosters["later"] = boosters["shortfall"] if later is None else later
     ranking = "outcome" if held.gap_closed("outcome") >= held.gap_closed("direct") else "direct"
     if ranking == "direct":
         boosters.update(train_direct(dataset, everything, seed=seed))

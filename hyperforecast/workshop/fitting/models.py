@@ -21,6 +21,8 @@ FAR_WEIGHT = 0.1
 # Attempts farther behind the best than this are so many that every THINNED-th of them will do.
 FAR = 0.15
 THINNED = 3
+# Attempts whose later outcome is not known but imputed count for this much.
+IMPUTED_WEIGHT = 0.2
 
 
 def train(inputs, target, weights, *, objective="regression", size=None, seed):
@@ -61,28 +63,40 @@ def train_outcomes(dataset, boundaries, *, seed):
     even = source_weights(dataset.sources[dataset.boundary[attempts]])
     models["diverged"] = train(inputs, dataset.diverged[attempts].astype(float), even, objective="binary", size=SMALL,
                                seed=seed)
-    extra = later_extra(dataset)
-    followed = attempts[~np.isnan(extra[attempts])]
-    if not len(followed):
-        # Streams of two increments: nothing comes later, whatever the settings.
-        followed, extra = attempts, np.zeros_like(extra)
-    models["later"] = train(dataset.inputs(followed), extra[followed],
-                            source_weights(dataset.sources[dataset.boundary[followed]]), size=SMALL, seed=seed)
     return models
 
 
-def later_extra(dataset):
-    """Return how much more accuracy each attempt left later than it showed at once, (N,).
+def train_later(dataset, boundaries, *, seed):
+    """Return a Booster of what each settings brings later (see `later_advantage`), on the boundaries in a mask (B,).
 
-    Relative to the other followed attempts of its boundary, so that what the future brings cancels; NaN where an
-    attempt was not followed.
+    None if nothing was followed there, as in streams of two increments.
     """
-    gain = dataset.after - dataset.all
-    known = ~np.isnan(gain)
-    count = np.bincount(dataset.boundary[known], minlength=dataset.n_boundaries)
-    total = np.bincount(dataset.boundary[known], gain[known], minlength=dataset.n_boundaries)
+    advantage = later_advantage(dataset)
+    attempts = np.flatnonzero(boundaries[dataset.boundary] & _taken(dataset) & ~np.isnan(advantage))
+    if not len(attempts):
+        return None
+    known = np.where(np.isnan(dataset.after[attempts]), IMPUTED_WEIGHT, 1.0)
+    return train(dataset.inputs(attempts), advantage[attempts], known * attempt_weights(dataset, attempts), size=LARGE,
+                 seed=seed)
+
+
+def later_advantage(dataset):
+    """Return the advantage of each attempt for the accuracy one and two boundaries later, (N,).
+
+    Relative to the mean of the followed attempts of its boundary, so that what the future brings cancels; NaN where
+    the boundary has none. An attempt that was not followed gets the share of its present advantage that usually lasts:
+    the slope of the later advantage on the present one over all followed attempts.
+    """
+    known = ~np.isnan(dataset.after)
+    b = dataset.boundary[known]
     with np.errstate(invalid="ignore"):
-        return gain - (total / count)[dataset.boundary]
+        now, later = (
+            outcome - (np.bincount(b, outcome[known], minlength=dataset.n_boundaries)
+                       / np.bincount(b, minlength=dataset.n_boundaries))[dataset.boundary]
+            for outcome in (dataset.all, dataset.after))
+    spread = (now[known] ** 2).sum()
+    slope = (now[known] * later[known]).sum() / spread if spread > 0 else 1.0
+    return np.where(known, later, slope * now)
 
 
 def train_direct(dataset, boundaries, *, seed):
