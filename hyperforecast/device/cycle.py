@@ -233,8 +233,8 @@ class _Check:
         if self.advice is not None:
             forecast = self.advice.forecaster.at(self.advice.descriptors).expected([attempt.settings])
             expected = {name: one.at(0).as_dict() for name, one in forecast.items()}
-        return {"settings": attempt.settings.as_dict(), "expected": expected, "diverged": bool(attempt.diverged),
-                "achieved": achieved, "operations": float(attempt.operations),
+        return {"settings": attempt.settings.as_dict(), "expected": expected, "diverged": attempt.diverged,
+                "achieved": achieved, "operations": attempt.operations,
                 "reasons": list(self._reasons(attempt, after, achieved, expected))}
 
     def _accuracies(self, head):

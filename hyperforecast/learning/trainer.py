@@ -61,6 +61,11 @@ class Attempt:
     diverged: bool
     operations: float
 
+    def __post_init__(self):
+        # Numpy's own numbers would not go into JSON.
+        object.__setattr__(self, "diverged", bool(self.diverged))
+        object.__setattr__(self, "operations", float(self.operations))
+
 
 class Trainer(Protocol):
     """What a learner offers. A class derived from this one needs `learn` and `class_scores`; the rest has a default.
@@ -169,7 +174,7 @@ class HeadTrainer(Trainer):
             if plan.method == "wa" and boundary.n_old and not trained.diverged:
                 head = align_weights(head, boundary.n_old)
             operations = trained.steps * plan.batch_size * layout.operations_per_row
-            attempts.append(Attempt(job.settings, head, trained.diverged, float(operations)))
+            attempts.append(Attempt(job.settings, head, trained.diverged, operations))
         if plan.method == "icarl":
             _add_class_means(jobs, attempts)
         return attempts

@@ -1,6 +1,7 @@
 """Trainers that are not ours, through every door: gathering, fitting, searching, a contest and the update cycle."""
 
 import doctest
+import json
 
 import numpy as np
 import pytest
@@ -54,7 +55,7 @@ def definitions(tmp_path_factory):
 def gathered(foreign, definitions, tmp_path_factory):
     """A `RecordsFile` of two sources, gathered with the trainer."""
     path = tmp_path_factory.mktemp("foreign") / "records.sqlite"
-    gather(definitions[:2], path, methods=("wa",), space_filled=32, proposed=16, trainer=foreign)
+    gather(definitions[:2], path, methods=("wa",), space_filled=16, proposed=8, trainer=foreign)
     return RecordsFile(path)
 
 
@@ -106,6 +107,11 @@ def check_advice(advice, box):
 def test_the_example_in_the_docstring_runs():
     outcome = doctest.testmod(trainer)
     assert outcome.attempted and not outcome.failed
+
+
+def test_what_a_trainer_reports_goes_into_json():
+    attempt = trainer.Attempt(Settings(0.1, 1.0), {}, np.isnan(np.float32(0)), np.int64(7))
+    assert json.dumps([attempt.diverged, attempt.operations]) == "[false, 7.0]"
 
 
 def test_a_class_of_one_or_two_first_and_old_classes_again(foreign):
@@ -160,7 +166,7 @@ def test_what_the_trainer_does_not_supply_is_missing_from_the_records(name, gath
     assert [len(one.boundaries) for one in trajectories] == [2, 2]
     of_the_model = {one.name for one in DESCRIPTORS.values() if one.group == "model"}
     for boundary in (one for trajectory in trajectories for one in trajectory.boundaries):
-        assert len(boundary.attempts) == 48
+        assert len(boundary.attempts) == 24
         known = {descriptor for descriptor, value in boundary.descriptors.items() if np.isfinite(value)}
         assert known & of_the_model == SUPPLIED[name] and len(known - of_the_model) > 20
         assert len({(attempt.accuracy_old, attempt.accuracy_new) for attempt in boundary.attempts}) > 5
