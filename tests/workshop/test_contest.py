@@ -168,7 +168,8 @@ def test_tuned_once_keeps_to_its_first_choice(definitions, forecasters):
 # One step
 
 def test_one_step_agrees_with_walking_by_hand(results, definitions, forecasters):
-    # Along the stated trajectory, advice with all weight on the present, with nothing but learning and forecasting.
+    # Along the stated trajectory, with nothing but learning and forecasting: policies are advised with all weight on the
+    # present, the walk goes on from advice as a device gets it.
     definition, forecaster, trainer = definitions[0], forecasters["wa"], HeadTrainer()
     outcome = next(one["outcome"] for one in results["one_step"].pieces if one["method"] == "wa")
     plan, stream = Plan(**{**PLAN.as_dict(), "method": "wa"}), definition.build()
@@ -179,15 +180,18 @@ def test_one_step_agrees_with_walking_by_hand(results, definitions, forecasters)
     for t in range(1, stream.n_boundaries):
         boundary = open_boundary(plan, carryover, stream.training(t), seed=seeds[t])
         box = SettingsBox("wa", boundary.most_kept)
-        advice = advise_settings(forecaster, describe(trainer, boundary, seed=seeds[t]), box, now_weight=1.0)
-        constant, advised = try_settings(trainer, boundary, [advice.constant, advice.settings], seed=seeds[t])
+        descriptors = describe(trainer, boundary, seed=seeds[t])
+        advice = advise_settings(forecaster, descriptors, box, now_weight=1.0)
+        device = advise_settings(forecaster, descriptors, box)
+        constant, advised, followed = try_settings(
+            trainer, boundary, [advice.constant, advice.settings, device.settings], seed=seeds[t])
         stored = outcome[t - 1]["policies"]
         for name, attempt in {"constant": constant, "advice": advised}.items():
             assert stored[name]["settings"] == attempt.settings.as_dict()
             assert stored[name]["scoring"]["all"] == pytest.approx(_accuracy(boundary, attempt.head, stream.scoring(t)))
             assert stored[name]["selection"] == pytest.approx(_accuracy(boundary, attempt.head, stream.selection(t)))
         assert outcome[t - 1]["expected"]["all"] == advice.expected_all.as_dict()
-        carryover = close_boundary(trainer, boundary, advised, seed=seeds[t])
+        carryover = close_boundary(trainer, boundary, followed, seed=seeds[t])
     assert [one["boundary"] for one in outcome] == list(range(1, stream.n_boundaries))
 
 
