@@ -1,6 +1,7 @@
 """Commands as a user runs them: results on standard output, one line and exit code 2 for bad input."""
 
 import json
+import pathlib
 
 import numpy as np
 import pytest
@@ -138,7 +139,7 @@ def test_reports_are_self_contained(capsys, device, tmp_path, subject):
 def test_bad_input_is_one_line_and_changes_nothing(capsys, device, deliveries, tmp_path):
     before = run(capsys, "history", "--device", device)
     damaged = tmp_path / "damaged.npz"
-    damaged.write_bytes(open(deliveries[2], "rb").read()[:200])
+    damaged.write_bytes(pathlib.Path(deliveries[2]).read_bytes()[:200])
     wide = tmp_path / "wide.npz"
     np.savez(wide, X=np.ones((4, 9)), y=np.arange(4))
     for increment in ("missing.npz", str(damaged), str(wide), str(tmp_path / "cell")):

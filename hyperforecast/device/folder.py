@@ -190,8 +190,9 @@ class DeviceFolder:
         """
         if not create and not self.numbers():
             raise self._nothing()
+        made = not self.path.exists()
         try:
-            if not self.path.exists():
+            if made:
                 self.path.mkdir(exist_ok=True)
                 sync_folder(self.path.absolute().parent)
             handle = os.open(self.path / LOCK, os.O_RDWR | os.O_CREAT, 0o666)
@@ -208,7 +209,12 @@ class DeviceFolder:
             for name in os.listdir(self.path):
                 if PARTIAL.fullmatch(name):
                     shutil.rmtree(self.path / name, ignore_errors=True)
-            yield
+            try:
+                yield
+            finally:
+                if made and not self.numbers():
+                    # Nothing came of it: leave nothing behind.
+                    shutil.rmtree(self.path, ignore_errors=True)
         finally:
             os.close(handle)
 
