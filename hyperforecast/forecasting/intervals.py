@@ -1,62 +1,16 @@
-"""Prediction intervals with guaranteed coverage: split conformal and conformalized quantiles.
+"""Prediction intervals with a known coverage: split conformal thresholds of errors that come from several sources.
 
-Score records that were not used for fitting (`interval_scores`), take a threshold from the scores
-(`conformal_threshold`, or `grouped_conformal_threshold` where they come from several sources), and
-widen a forecast by it (`interval`).
-
-Romano, Patterson & Candes 2019, "Conformalized Quantile Regression".
+Vovk, Gammerman & Shafer 2005, "Algorithmic Learning in a Random World", from memory; with errors divided by a forecast
+spread as in Lei et al. 2018, "Distribution-Free Predictive Inference for Regression", section 5.2, from memory.
 """
 
 import itertools
 import math
-from dataclasses import dataclass
 from fractions import Fraction
 
 import numpy as np
 
 from hyperforecast.checks import InputError, check_number
-
-
-@dataclass(frozen=True)
-class Interval:
-    """Where accuracies are expected to lie.
-
-    Attributes
-    ----------
-    low, high : ndarray, or float
-        Ends, 0 <= low <= high <= 1.
-    """
-
-    low: np.ndarray
-    high: np.ndarray
-
-
-def interval_scores(low, high, truth):
-    """Return how far each truth lies outside its forecast [low, high]; negative inside (arrays of one shape).
-
-    With low = high = a point forecast the score is the absolute error, which gives split conformal intervals.
-    """
-    low, high, truth = (np.asarray(values, np.float64) for values in (low, high, truth))
-    return np.maximum(low - truth, truth - high)
-
-
-def conformal_threshold(scores, alpha):
-    """Return the threshold that a new score exceeds with probability at most alpha.
-
-    It is the k-th smallest score with k = ceil((n + 1)(1 - alpha)), infinite if k > n. Assumes that the
-    calibration scores and the new one are exchangeable; without ties the coverage is at most
-    1 - alpha + 1/(n + 1).
-
-    Parameters
-    ----------
-    scores : array-like of shape (n,)
-        Finite calibration scores; may be empty.
-    alpha : float in [1e-9, 1 - 1e-9]
-        Probability of a miss. Read as the simplest fraction within its rounding, so that 0.18 is 18/100.
-    """
-    scores = _checked_scores(scores)
-    rank = math.ceil((len(scores) + 1) * (1 - _checked_alpha(alpha)))
-    return float(np.sort(scores)[rank - 1]) if rank <= len(scores) else math.inf
 
 
 def grouped_conformal_threshold(scores, groups, alpha):
@@ -68,8 +22,8 @@ def grouped_conformal_threshold(scores, groups, alpha):
 
     Assumes that the groups (sources, say), the new one among them, are exchangeable, and that the scores
     (boundaries) within each group are; scores of one group may depend on each other. With one score per
-    group it equals `conformal_threshold`. Lee, Barber & Willett 2023, "Distribution-free inference with
-    hierarchical data".
+    group it is the split conformal threshold, the ceil((n + 1)(1 - alpha))-th smallest of n. Lee, Barber &
+    Willett 2023, "Distribution-free inference with hierarchical data", from memory.
 
     Parameters
     ----------
@@ -78,7 +32,7 @@ def grouped_conformal_threshold(scores, groups, alpha):
     groups : array-like of shape (n,)
         The group of each score: numbers or text.
     alpha : float in [1e-9, 1 - 1e-9]
-        As in `conformal_threshold`.
+        Probability of a miss. Read as the simplest fraction within its rounding, so that 0.18 is 18/100.
     """
     scores, groups = _checked_scores(scores), np.asarray(groups)
     if groups.shape != scores.shape:
@@ -93,26 +47,6 @@ def grouped_conformal_threshold(scores, groups, alpha):
         if weight >= needed:
             return float(scores[place])
     return math.inf
-
-
-def interval(low, high, threshold):
-    """Return the forecast [low, high] widened by the threshold on both sides and clipped to [0, 1].
-
-    A negative threshold narrows; ends that would cross meet halfway.
-
-    Parameters
-    ----------
-    low, high : array-like of one shape
-        Ends of the forecast, e.g. two quantiles of an accuracy.
-    threshold : float
-        Of `conformal_threshold` or `grouped_conformal_threshold`; infinity gives [0, 1].
-    """
-    if math.isnan(threshold) or threshold == -math.inf:
-        raise InputError("threshold", "must be a number or infinity", threshold)
-    low, high = np.asarray(low, np.float64), np.asarray(high, np.float64)
-    middle = (low + high) / 2
-    return Interval(np.clip(np.minimum(low - threshold, middle), 0.0, 1.0)[()],
-                    np.clip(np.maximum(high + threshold, middle), 0.0, 1.0)[()])
 
 
 def _checked_scores(scores):

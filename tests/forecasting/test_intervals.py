@@ -4,13 +4,12 @@ import numpy as np
 import pytest
 
 from hyperforecast.checks import InputError
-from hyperforecast.forecasting.intervals import (conformal_threshold, grouped_conformal_threshold, interval,
-                                                 interval_scores)
+from hyperforecast.forecasting.intervals import grouped_conformal_threshold
 
 
-def test_scores_are_signed_distances_to_the_nearer_end():
-    assert interval_scores([.2, .2, .2], [.5, .5, .5], [.1, .3, .9]) == pytest.approx([.1, -.1, .4])
-    assert interval_scores(.4, .4, .7) == pytest.approx(.3)
+def conformal_threshold(scores, alpha):
+    """Split conformal: every score is a group of its own."""
+    return grouped_conformal_threshold(scores, np.arange(len(scores)), alpha)
 
 
 def test_threshold_does_not_depend_on_the_order():
@@ -31,12 +30,14 @@ def test_too_few_scores_give_an_infinite_threshold():
     assert grouped_conformal_threshold([.1] * 80, np.arange(80) % 8, .1) == math.inf
 
 
-def test_one_score_per_group_equals_the_ungrouped_threshold():
+def test_one_score_per_group_gives_the_smallest_of_the_rank():
     rng = np.random.default_rng(0)
     for n in (5, 19, 20, 99, 149):
         scores = rng.normal(size=n)
-        for alpha in (.05, .1, .18, 1 / 3, .5):
-            assert grouped_conformal_threshold(scores, np.arange(n), alpha) == conformal_threshold(scores, alpha)
+        for percent in (5, 10, 18, 50):
+            rank = -(-(n + 1) * (100 - percent) // 100)
+            expected = np.sort(scores)[rank - 1] if rank <= n else math.inf
+            assert conformal_threshold(scores, percent / 100) == expected
 
 
 def test_copying_every_score_of_a_group_changes_nothing():
@@ -63,16 +64,6 @@ def test_weights_that_no_float_sum_gets_right():
         assert grouped_conformal_threshold(scores, groups, 1 - kept / 10) == 7 * kept - 1
 
 
-def test_interval_widens_narrows_and_clips():
-    widened = interval(np.array([.2, .9]), np.array([.5, .95]), .1)
-    assert (widened.low == pytest.approx([.1, .8])) and (widened.high == pytest.approx([.6, 1.]))
-    assert (interval(.2, .5, math.inf).low, interval(.2, .5, math.inf).high) == (0, 1)
-    crossing = interval(.2, .5, -.4)
-    assert crossing.low == crossing.high == pytest.approx(.35)
-    outside = interval(1.2, 1.3, .05)
-    assert (outside.low, outside.high) == (1, 1)
-
-
 @pytest.mark.parametrize("call, parameter", [
     (lambda: conformal_threshold([.1, np.nan], .1), "scores"),
     (lambda: conformal_threshold([[.1]], .1), "scores"),
@@ -80,7 +71,6 @@ def test_interval_widens_narrows_and_clips():
     (lambda: conformal_threshold([.1], 1.0), "alpha"),
     (lambda: grouped_conformal_threshold([.1], ["a"], "10%"), "alpha"),
     (lambda: grouped_conformal_threshold([.1, .2], ["a"], .1), "groups"),
-    (lambda: interval(.1, .2, math.nan), "threshold"),
 ])
 def test_bad_input_is_refused(call, parameter):
     with pytest.raises(InputError) as caught:

@@ -12,11 +12,15 @@ from fractions import Fraction
 import numpy as np
 import pytest
 
-from hyperforecast.forecasting.intervals import (conformal_threshold, grouped_conformal_threshold, interval,
-                                                 interval_scores)
+from hyperforecast.forecasting.intervals import grouped_conformal_threshold
 
 stats = pytest.importorskip("scipy.stats")
 linear_model = pytest.importorskip("sklearn.linear_model")
+
+
+def conformal_threshold(scores, alpha):
+    """Split conformal: every score is a group of its own."""
+    return grouped_conformal_threshold(scores, np.arange(len(scores)), alpha)
 
 
 def test_rank_is_exact_for_every_n_and_percent():
@@ -52,11 +56,10 @@ def test_conformalized_quantiles_cover_where_the_quantiles_do_not():
     x = rng.random((1000, 50))
     truth = .5 + .1 * x * rng.normal(size=x.shape)
     low, high = .5 - .02 * x, .5 + .02 * x
-    scores = interval_scores(low, high, truth)
+    scores = np.maximum(low - truth, truth - high)
     covered = raw = 0
     for i in range(len(x)):
-        found = interval(low[i, -1], high[i, -1], conformal_threshold(scores[i, :-1], .2))
-        covered += found.low <= truth[i, -1] <= found.high
+        covered += scores[i, -1] <= conformal_threshold(scores[i, :-1], .2)
         raw += low[i, -1] <= truth[i, -1] <= high[i, -1]
     # k = 40 of 49: the coverage is 40/50 exactly; four standard errors are .05.
     assert covered / 1000 == pytest.approx(.8, abs=.05)
@@ -69,13 +72,11 @@ def test_absolute_errors_give_split_conformal_intervals():
     y = .2 + X @ [.2, .1, .1] + .05 * rng.normal(size=400)
     model = linear_model.LinearRegression().fit(X[:100], y[:100])
     forecast = model.predict(X[100:])
-    scores = interval_scores(forecast[:199], forecast[:199], y[100:299])
-    assert scores == pytest.approx(np.abs(forecast[:199] - y[100:299]))
+    scores = np.abs(forecast[:199] - y[100:299])
     threshold = conformal_threshold(scores, .1)
     assert (scores <= threshold).sum() == 180
-    found = interval(forecast[199:], forecast[199:], threshold)
     # 101 new rows; coverage has mean .9 and standard deviation below .04 (calibration and test together).
-    assert np.mean((found.low <= y[299:]) & (y[299:] <= found.high)) == pytest.approx(.9, abs=.16)
+    assert np.mean(np.abs(forecast[199:] - y[299:]) <= threshold) == pytest.approx(.9, abs=.16)
 
 
 def simulated_sources(rng, n_sources):
