@@ -1,9 +1,10 @@
-"""What learning and advice cost, as ratios of CPU seconds measured in one run.
+"""What learning and advice cost, mostly as ratios of CPU seconds measured in one run.
 
     OPENBLAS_NUM_THREADS=1 python bench_streams/bench_learning.py [--json]
 
-One boundary throughout: 16 old classes and 10 new ones, 450 new rows of 64 features, a hidden layer of 64, 10 passes in
-minibatches of 32, WA with exemplars. Each figure compares things that ran in turns; the best of the turns counts.
+One boundary, where nothing else is said: 16 old classes and 10 new ones, 450 new rows of 64 features, a hidden layer of
+64, 10 passes in minibatches of 32, WA with exemplars. Each ratio compares things that ran in turns; the best of the
+turns counts. Two workers are timed by the wall clock and need two processors to themselves.
 Prints a table (--json: JSON) with a limit beside each figure; exits with 1 if one is missed.
 """
 
@@ -15,8 +16,11 @@ import subprocess
 import sys
 import time
 import warnings
-from dataclasses import dataclass
+from concurrent.futures import ProcessPoolExecutor
+from dataclasses import asdict, dataclass
+from multiprocessing import get_context
 
+import joblib
 import numpy as np
 from sklearn.exceptions import ConvergenceWarning
 from sklearn.neural_network import MLPClassifier
@@ -29,50 +33,71 @@ from hyperforecast.learning import HeadTrainer, close_boundary, open_boundary, t
 from hyperforecast.settings import Plan, Settings, SettingsBox
 
 OLD, NEW, FEATURES, HIDDEN, PASSES, BATCH, ATTEMPTS = 16, 10, 64, 64, 10, 32, 64
-# 45 training rows of each class, 8 held back.
-ROWS_PER_CLASS = 53
+ROWS_PER_CLASS = 45
 TURNS = 7
 
 
 @dataclass(frozen=True)
+class Point:
+    """A size on a curve of growth: CPU seconds in all, for each attempt's row and pass, and these over linear growth."""
+
+    size: int
+    seconds: float
+    each: float
+    over_linear: float
+
+
+@dataclass(frozen=True)
 class Figure:
-    """A measured ratio, and the limit it must keep: from above, or from below where `at_least`."""
+    """What was measured, and the limit it must keep: from above, or from below where `at_least`."""
 
     name: str
     value: float
     limit: float
     detail: str
     at_least: bool = False
+    curve: tuple[Point, ...] = ()
 
     @property
     def passed(self):
         return self.value >= self.limit if self.at_least else self.value <= self.limit
 
 
-def in_turns(jobs, turns=TURNS):
-    """Return {name: CPU seconds} of callables that run in turns, the best turn of each."""
+def in_turns(jobs, turns=TURNS, clock=time.process_time):
+    """Return {name: seconds} of callables that run in turns, the best turn of each; CPU seconds by default."""
     best = dict.fromkeys(jobs, np.inf)
     for _ in range(turns):
         for name, job in jobs.items():
-            started = time.process_time()
+            started = clock()
             job()
-            best[name] = min(best[name], time.process_time() - started)
+            best[name] = min(best[name], clock() - started)
     return best
 
 
-def second_boundary(rows_per_class=ROWS_PER_CLASS):
-    """The boundary that everything is measured at."""
+def second_boundary(rows_per_class=ROWS_PER_CLASS, *, features=FEATURES, passes=PASSES):
+    """The boundary that learning is measured at, with `rows_per_class` rows of each new class to train on."""
     rng = np.random.default_rng(0)
-    centers = rng.standard_normal((OLD + NEW, FEATURES))
-    plan, trainer = Plan("wa", HIDDEN, PASSES, BATCH, 2000), HeadTrainer()
+    centers = rng.standard_normal((OLD + NEW, features), dtype=np.float32)
+    plan, trainer = Plan("wa", HIDDEN, passes, BATCH, 2000), HeadTrainer()
 
-    def increment(classes):
-        y = np.repeat(classes, rows_per_class)
-        return Increment((centers[y] + rng.standard_normal((len(y), FEATURES))).astype(np.float32), y)
+    def increment(classes, rows):
+        # A fifth of each class is held back, at most 8 rows.
+        y = np.repeat(classes, rows + min(rows // 4, 8))
+        X = rng.standard_normal((len(y), features), dtype=np.float32)
+        X += centers[y]
+        return Increment(X, y)
 
-    opening = open_boundary(plan, None, increment(np.arange(OLD)))
-    attempt = try_settings(trainer, opening, [Settings(0.02, 1.0, 60)], seed=0)[0]
-    return open_boundary(plan, close_boundary(trainer, opening, attempt, seed=0), increment(np.arange(OLD, OLD + NEW)))
+    opening = open_boundary(plan, None, increment(np.arange(OLD), ROWS_PER_CLASS))
+    attempt = learned(opening, [Settings(0.002, 1.0, 68)])[0]
+    carryover = close_boundary(trainer, opening, attempt, seed=0)
+    return open_boundary(plan, carryover, increment(np.arange(OLD, OLD + NEW), rows_per_class))
+
+
+def learned(boundary, settings):
+    """Return the attempts; all of them must have gone to the end."""
+    attempts = try_settings(HeadTrainer(), boundary, settings, seed=0)
+    assert not any(one.diverged for one in attempts)
+    return attempts
 
 
 def drawn_settings(boundary, count):
@@ -88,18 +113,12 @@ def training_rows(boundary, settings):
 def share_of_sgemm(boundary):
     """Operations per second of 64 attempts, over those of the product of two large matrices."""
     settings = drawn_settings(boundary, ATTEMPTS)
-    n, attempts = 1024, None
+    n = 1024
     A, B = np.random.default_rng(2).random((2, n, n), dtype=np.float32)
-
-    def learn():
-        nonlocal attempts
-        attempts = try_settings(HeadTrainer(), boundary, settings, seed=0)
-
-    seconds = in_turns({"sgemm": lambda: A @ B, "learning": learn})
+    seconds = in_turns({"sgemm": lambda: A @ B, "learning": lambda: learned(boundary, settings)})
     # Forward and backward products of each row; the first layer needs no gradient at its input.
     per_row = 2 * (2 * FEATURES * HIDDEN + 3 * HIDDEN * (OLD + NEW))
     operations = PASSES * per_row * sum(training_rows(boundary, one) for one in settings)
-    assert not any(one.diverged for one in attempts)
     rate, sgemm = operations / seconds["learning"], 2 * n**3 / seconds["sgemm"]
     return Figure("share of sgemm", rate / sgemm, 0.3, f"{rate / 1e9:.0f} of {sgemm / 1e9:.0f} billion operations a "
                   f"second, {ATTEMPTS / seconds['learning']:.0f} attempts a second", at_least=True)
@@ -221,19 +240,58 @@ def against_torch(boundary):
                   f"{1e3 * seconds['alone']:.0f} ms")
 
 
-def growth(boundary):
-    """Seconds per attempt and row, with twice the rows and with four times the attempts."""
-    larger = second_boundary(2 * ROWS_PER_CLASS)
-    settings = [Settings(0.02, 0.1, 20)]
-    seconds = in_turns({
-        "here": lambda: try_settings(HeadTrainer(), boundary, settings * 16, seed=0),
-        "rows": lambda: try_settings(HeadTrainer(), larger, settings * 16, seed=0),
-        "attempts": lambda: try_settings(HeadTrainer(), boundary, settings * 64, seed=0)}, turns=5)
-    more = training_rows(larger, settings[0]) / training_rows(boundary, settings[0])
-    yield Figure("growth with rows", seconds["rows"] / seconds["here"] / more, 1.2,
-                 f"{more:.2f} times the rows, {seconds['rows'] / seconds['here']:.2f} times the seconds")
-    yield Figure("growth with attempts", seconds["attempts"] / seconds["here"] / 4, 1.2,
-                 f"4 times the attempts, {seconds['attempts'] / seconds['here']:.2f} times the seconds")
+def growth(name, cases, linear_from):
+    """How seconds grow over `cases`, {size: (boundary, attempts)}, against linear growth from one of the sizes on."""
+    settings = Settings(0.002, 0.1, 1)
+    seconds = in_turns({size: lambda boundary=boundary, attempts=attempts: learned(boundary, [settings] * attempts)
+                        for size, (boundary, attempts) in cases.items()}, turns=3)
+    each = {size: seconds[size] / (attempts * training_rows(boundary, settings) * boundary.plan.passes)
+            for size, (boundary, attempts) in cases.items()}
+    curve = tuple(Point(size, seconds[size], each[size], each[size] / each[linear_from]) for size in cases)
+    return Figure(f"growth with {name}", curve[-1].over_linear, 1.2,
+                  f"{1e6 * curve[-1].each:.3f} us for each attempt's row and pass at {curve[-1].size:,} {name}, "
+                  f"{1e6 * each[linear_from]:.3f} us at {linear_from:,}", curve=curve)
+
+
+def growth_with_rows(rows=(100, 300, 1_000, 3_000, 10_000, 30_000, 100_000)):
+    """16 attempts on more and more new rows, in fewer passes from 10,000 rows on."""
+    return growth("rows", {n: (second_boundary(n // NEW, passes=max(1, min(PASSES, 100_000 // n))), 16) for n in rows},
+                  linear_from=1_000)
+
+
+def growth_with_attempts(boundary, attempts=(16, 64, 256, 1_024)):
+    return growth("attempts", {n: (boundary, n) for n in attempts}, linear_from=16)
+
+
+def peak_of_training(rows, features):
+    """Bytes that this process held at most, after one pass of 64 attempts that share no set of rows."""
+    boundary = second_boundary(rows // NEW, features=features, passes=1)
+    learned(boundary, [Settings(0.0001, 0.1, 1 + k) for k in range(ATTEMPTS)])
+    # In KiB on Linux.
+    return 1024 * resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+
+
+def memory(rows=20_000, features=784):
+    """Peak of a fresh process, rows and libraries included. Measured first: a child counts its parent's peak as well."""
+    with ProcessPoolExecutor(1, mp_context=get_context("spawn")) as child:
+        peak = child.submit(peak_of_training, rows, features).result()
+    return Figure("peak memory of training, GB", peak / 1e9, 1.5,
+                  f"{ATTEMPTS} attempts on {rows:,} rows of {features} features, which take "
+                  f"{4e-9 * rows * features:.2f} GB")
+
+
+def two_workers(boundary, n_pieces=8, attempts=32):
+    """Pieces of work handed out one by one; the first turn also starts the workers, and the best turn counts."""
+    pieces = np.array_split(drawn_settings(boundary, n_pieces * attempts), n_pieces)
+
+    def shared(workers):
+        joblib.Parallel(n_jobs=workers, batch_size=1)(
+            joblib.delayed(try_settings)(HeadTrainer(), boundary, list(piece), seed=0) for piece in pieces)
+
+    seconds = in_turns({"one": lambda: shared(1), "two": lambda: shared(2)}, turns=5, clock=time.perf_counter)
+    return Figure("two workers over one, in speed", seconds["one"] / seconds["two"], 1.8,
+                  f"{n_pieces} pieces of {attempts} attempts: {seconds['two']:.2f} s and {seconds['one']:.2f} s",
+                  at_least=True)
 
 
 def main():
@@ -243,18 +301,24 @@ def main():
     if os.environ.get("OPENBLAS_NUM_THREADS") != "1":
         parser.error("set OPENBLAS_NUM_THREADS=1: everything that is compared runs on one thread")
     warnings.simplefilter("ignore", ConvergenceWarning)
+    peak = memory()
     boundary = second_boundary()
     torch = against_torch(boundary)
     figures = [share_of_sgemm(boundary), side_by_side(boundary), advice(boundary), imports(),
-               against_scikit_learn(boundary), *([torch] if torch else []), *growth(boundary)]
+               against_scikit_learn(boundary), *([torch] if torch else []), growth_with_rows(),
+               growth_with_attempts(boundary), two_workers(boundary), peak]
     if as_json:
         print(json.dumps([{"name": one.name, "value": round(one.value, 4), "limit": one.limit,
-                           "at_least": one.at_least, "passed": bool(one.passed), "detail": one.detail}
+                           "at_least": one.at_least, "passed": bool(one.passed), "detail": one.detail,
+                           **({"curve": [asdict(point) for point in one.curve]} if one.curve else {})}
                           for one in figures], indent=2))
     else:
         for one in figures:
             print(f"{'pass' if one.passed else 'MISSED':<7}{one.name:<40}{one.value:>7.3f}  "
                   f"{'>=' if one.at_least else '<='} {one.limit:<6g}{one.detail}")
+            for point in one.curve:
+                print(f"{point.size:>20,}{point.seconds:>12.4f} s{1e6 * point.each:>10.3f} us each"
+                      f"{point.over_linear:>12.3f} of linear")
         if not torch:
             print("PyTorch is not installed here: not compared.")
     return 0 if all(one.passed for one in figures) else 1
