@@ -39,7 +39,7 @@ TURNS = 7
 
 @dataclass(frozen=True)
 class Point:
-    """A size on a curve of growth: CPU seconds in all, for each attempt's row and pass, and these over linear growth."""
+    """A size on a curve of growth: CPU seconds in all, for each attempt's row and pass, and over linear growth."""
 
     size: int
     seconds: float
@@ -88,7 +88,7 @@ def second_boundary(rows_per_class=ROWS_PER_CLASS, *, features=FEATURES, passes=
         return Increment(X, y)
 
     opening = open_boundary(plan, None, increment(np.arange(OLD), ROWS_PER_CLASS))
-    attempt = learned(opening, [Settings(0.002, 1.0, 68)])[0]
+    attempt = learned(opening, [Settings(0.02, 1.0, 60)])[0]
     carryover = close_boundary(trainer, opening, attempt, seed=0)
     return open_boundary(plan, carryover, increment(np.arange(OLD, OLD + NEW), rows_per_class))
 
@@ -242,7 +242,7 @@ def against_torch(boundary):
 
 def growth(name, cases, linear_from):
     """How seconds grow over `cases`, {size: (boundary, attempts)}, against linear growth from one of the sizes on."""
-    settings = Settings(0.002, 0.1, 1)
+    settings = Settings(0.02, 0.1, 1)
     seconds = in_turns({size: lambda boundary=boundary, attempts=attempts: learned(boundary, [settings] * attempts)
                         for size, (boundary, attempts) in cases.items()}, turns=3)
     each = {size: seconds[size] / (attempts * training_rows(boundary, settings) * boundary.plan.passes)
@@ -264,15 +264,15 @@ def growth_with_attempts(boundary, attempts=(16, 64, 256, 1_024)):
 
 
 def peak_of_training(rows, features):
-    """Bytes that this process held at most, after one pass of 64 attempts that share no set of rows."""
+    """Bytes that this process held at most, after one pass of 64 attempts on 45 different sets of rows."""
     boundary = second_boundary(rows // NEW, features=features, passes=1)
-    learned(boundary, [Settings(0.0001, 0.1, 1 + k) for k in range(ATTEMPTS)])
+    learned(boundary, [Settings(0.001, 0.1, 1 + k % ROWS_PER_CLASS) for k in range(ATTEMPTS)])
     # In KiB on Linux.
     return 1024 * resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
 
 
 def memory(rows=20_000, features=784):
-    """Peak of a fresh process, rows and libraries included. Measured first: a child counts its parent's peak as well."""
+    """Peak of a fresh process, rows and libraries included; measured first, as a child counts its parent's peak too."""
     with ProcessPoolExecutor(1, mp_context=get_context("spawn")) as child:
         peak = child.submit(peak_of_training, rows, features).result()
     return Figure("peak memory of training, GB", peak / 1e9, 1.5,
@@ -282,11 +282,12 @@ def memory(rows=20_000, features=784):
 
 def two_workers(boundary, n_pieces=8, attempts=32):
     """Pieces of work handed out one by one; the first turn also starts the workers, and the best turn counts."""
-    pieces = np.array_split(drawn_settings(boundary, n_pieces * attempts), n_pieces)
+    settings = drawn_settings(boundary, n_pieces * attempts)
+    pieces = [settings[k::n_pieces] for k in range(n_pieces)]
 
     def shared(workers):
         joblib.Parallel(n_jobs=workers, batch_size=1)(
-            joblib.delayed(try_settings)(HeadTrainer(), boundary, list(piece), seed=0) for piece in pieces)
+            joblib.delayed(try_settings)(HeadTrainer(), boundary, piece, seed=0) for piece in pieces)
 
     seconds = in_turns({"one": lambda: shared(1), "two": lambda: shared(2)}, turns=5, clock=time.perf_counter)
     return Figure("two workers over one, in speed", seconds["one"] / seconds["two"], 1.8,
