@@ -148,7 +148,7 @@ def advice(boundary):
             advise_settings(forecaster, described, box)
 
     seconds = in_turns({"advice": advise, "attempt": lambda: try_settings(HeadTrainer(), boundary, settings, seed=0)})
-    return Figure("advice over one attempt", seconds["advice"] / seconds["attempt"], 1.0,
+    return Figure("advice over one attempt", seconds["advice"] / seconds["attempt"], 2.0,
                   f"{detail}: {1e3 * seconds['advice']:.0f} ms, attempt {1e3 * seconds['attempt']:.0f} ms")
 
 
