@@ -188,7 +188,7 @@ def against_scikit_learn(boundary):
         "plain": plain, "alone": lambda: try_settings(HeadTrainer(), boundary, [settings], seed=0),
         "together": lambda: try_settings(HeadTrainer(), boundary, [settings] * ATTEMPTS, seed=0)}, turns=4)
     each = seconds["together"] / ATTEMPTS
-    return Figure("attempt over MLPClassifier", each / seconds["plain"], 0.15,
+    return Figure("attempt over MLPClassifier", each / seconds["plain"], 0.1,
                   f"{1e3 * each:.1f} ms and {1e3 * seconds['plain']:.0f} ms; an attempt alone "
                   f"{1e3 * seconds['alone']:.0f} ms")
 
@@ -235,7 +235,7 @@ def against_torch(boundary):
         "plain": plain, "alone": lambda: try_settings(HeadTrainer(), boundary, [settings], seed=0),
         "together": lambda: try_settings(HeadTrainer(), boundary, [settings] * ATTEMPTS, seed=0)}, turns=4)
     each = seconds["together"] / ATTEMPTS
-    return Figure("attempt over PyTorch", each / seconds["plain"], 0.1,
+    return Figure("attempt over PyTorch", each / seconds["plain"], 1 / 15,
                   f"{1e3 * each:.1f} ms and {1e3 * seconds['plain']:.0f} ms; an attempt alone "
                   f"{1e3 * seconds['alone']:.0f} ms")
 

@@ -290,6 +290,72 @@ def test_noise_floor_of_stochastic_descent(momentum, batch_size, set_momentum):
     assert biases.var() == pytest.approx(expected, rel=0.06)
 
 
+@pytest.mark.parametrize("drift, best", [(0.0, 2.0), (0.01, 1.0)])
+def test_the_more_an_optimum_drifts_the_less_regularization_is_best(drift, best):
+    """8000 tasks of one weight: estimates of variance a = s^2 / n_B (new) and b = drift + s^2 / n_A (old).
+
+    Own derivation: the mean squared error of (new + l old) / (1 + l) is (a + l^2 b) / (1 + l)^2, least at l = a / b.
+    """
+    rng = np.random.default_rng(8)
+    a, b = 1 / 50, drift + 1 / 100
+    new, old = (np.sqrt(variance) * rng.standard_normal((1, 8000)) for variance in (a, b))
+    X = rows_of_curvature(1.0, 4)
+    errors = {}
+    for strength in (0.25, 0.5, 1.0, 2.0, 4.0, 8.0):
+        weights, diverged = descend(WithoutAnchor(), X, X @ new, rate=0.1, strength=strength, start=old,
+                                    importance=np.ones((1, 8000)))
+        assert not diverged
+        errors[strength] = (weights**2).mean()
+        assert errors[strength] == pytest.approx((a + strength**2 * b) / (1 + strength) ** 2, rel=0.06)
+    assert min(errors, key=errors.get) == best
+
+
+@pytest.mark.parametrize("order", [(0, 1, 2), (2, 0, 1)])
+def test_accumulated_curvatures_give_the_joint_least_squares_solution_in_any_order(order):
+    """Features that are orthogonal within each task: X'X is diagonal, so that the penalties lose nothing."""
+    rng = np.random.default_rng(9)
+    signs = np.array([[1, 1, 1], [1, -1, -1], [-1, 1, -1], [-1, -1, 1]], float)
+    tasks = [(np.tile(signs, (n // 4, 1)) * rng.uniform(0.5, 1.5, 3), rng.standard_normal((3, 2))) for n in (8, 24, 16)]
+    joint = np.linalg.lstsq(np.concatenate([X for X, _ in tasks]), np.concatenate([X @ W for X, W in tasks]),
+                            rcond=None)[0]
+    learned, total = None, np.zeros((3, 1))
+    for place in order:
+        X, W = tasks[place]
+        # The penalty is set against a mean over this task's rows.
+        importance = None if learned is None else np.repeat(total / len(X), 2, axis=1)
+        learned, _ = descend(WithoutAnchor(), X, X @ W, rate=0.02, strength=1.0, start=learned, importance=importance,
+                             passes=1500)
+        total = total + (X**2).sum(axis=0)[:, None]
+    np.testing.assert_allclose(learned, joint, atol=1e-5)
+
+
+@pytest.mark.parametrize("share", [0.7, 1.3])
+def test_single_row_descent_is_mean_square_stable_below_its_limit(share, set_momentum):
+    """Least mean squares on white Gaussian rows of d features, whose mean-square limit is 2 / (d + 2).
+
+    Widrow & Stearns 1985, "Adaptive Signal Processing", from memory. With the head's bias, whose feature is always 1,
+    the second moments k of each weight and m of the bias follow (own derivation)
+    k' = (1 - 2 a + a^2 (d + 2)) k + a^2 m and m' = a^2 d k + (1 - 2 a + a^2) m.
+    """
+    set_momentum(0.0)
+    n_features, steps, replicas = 4, 6, 6000
+    rate = share * 2 / (n_features + 3)
+    rng = np.random.default_rng(10)
+    Z = rng.standard_normal((replicas * steps, n_features), dtype=np.float32)
+    layout = HeadLayout(n_features, 0, 1)
+    start = layout.flatten({"output_weights": np.ones((n_features, 1)), "output_bias": np.zeros((1, 1))})[0]
+    regimens = [Regimen(rate, 0.0, np.arange(k * steps, (k + 1) * steps), start) for k in range(replicas)]
+    trained = train_side_by_side(layout, WithoutAnchor(), regimens, Z=Z, y=np.zeros(len(Z), np.int64),
+                                 targets=np.zeros((len(Z), 2), np.float32), passes=1, batch_size=1, seed=0)
+    parts = layout.parts(np.stack([head.flat for head in trained]))
+    reached = (parts["output_weights"] ** 2).sum(axis=1).mean() + (parts["output_bias"] ** 2).mean()
+    step = np.array([[1 - 2 * rate + rate**2 * (n_features + 2), rate**2],
+                     [rate**2 * n_features, 1 - 2 * rate + rate**2]])
+    k, m = np.linalg.matrix_power(step, steps) @ [1.0, 0.0]
+    assert reached == pytest.approx(n_features * k + m, rel=0.2)
+    assert (reached < n_features) == (share < 1)
+
+
 # Published examples
 
 
