@@ -1,1 +1,1 @@
-"""TBD"""
+"""The upper storey, back at base: streams, searching, gathering, fitting, contests and reports."""

@@ -2,10 +2,10 @@
 statistics, tables, in this order.
 """
 
-from hyperforecast.workshop.contest.contest import Progress, print_progress, run_contest
+from hyperforecast.workshop.contest.contest import Progress, run_contest
 from hyperforecast.workshop.contest.policies import CEILING, FLOOR, POLICIES, Policy
 from hyperforecast.workshop.contest.results import CONTESTS, Contest, load_contest
 from hyperforecast.workshop.contest.tables import as_text, summarize
 
 __all__ = ["CEILING", "CONTESTS", "Contest", "FLOOR", "POLICIES", "Policy", "Progress", "as_text", "load_contest",
-           "print_progress", "run_contest", "summarize"]
+           "run_contest", "summarize"]

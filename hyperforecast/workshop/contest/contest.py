@@ -5,7 +5,6 @@ entered with forecasters that were fitted without it.
 """
 
 import platform
-import sys
 import time
 from dataclasses import dataclass, replace
 from importlib import metadata
@@ -36,11 +35,6 @@ class Progress:
         last = self.piece
         return (f"{self.stored} of {self.total} pieces, about {self.seconds_left / 60:.0f} min left; "
                 f"last: {last['stream'].rpartition('/')[0]} {last['method']} in {last['seconds']:.1f} s")
-
-
-def print_progress(progress):
-    """Write a `Progress` to standard error."""
-    print(progress, file=sys.stderr, flush=True)
 
 
 def run_contest(definitions, forecasters, path, *, kind, plan=Plan(), seed=0, workers=1, trainer=None, progress=None):

@@ -9,20 +9,18 @@ import numpy as np
 from hyperforecast.checks import check_whole
 from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.forecasting import (
-    Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
+    MOST_DIVERGENCE, RANGES, Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
 )
 from hyperforecast.workshop.fitting.constants import constant_outcome, fit_constants
 from hyperforecast.workshop.fitting.models import (
     SMALL, source_weights, train, train_direct, train_later, train_outcomes,
 )
 
-RANGES = ("old", "new", "all")
 MISS_RATE = 0.1
 # Attempts of each boundary, best forecast first, whose errors calibrate the intervals: advice falls among them.
 CALIBRATED = 4
 # Errors smaller than this do not make an interval narrower.
 SMALLEST_ERROR = 0.005
-MOST_DIVERGENCE = 0.1
 
 
 @dataclass(frozen=True)

@@ -1,6 +1,5 @@
 """Gathering: many trajectories in parallel into a records file, with progress, stoppable and resumable."""
 
-import sys
 import time
 
 import joblib
@@ -72,8 +71,3 @@ class Progress:
         last = self.trajectory
         return (f"{self.stored} of {self.total} trajectories, about {self.seconds_left / 60:.0f} min left; "
                 f"last: {last.stream} {last.method}, {len(last.boundaries)} boundaries in {last.seconds:.1f} s")
-
-
-def print_progress(progress):
-    """Write a `Progress` to standard error."""
-    print(progress, file=sys.stderr, flush=True)
