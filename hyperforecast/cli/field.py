@@ -1,0 +1,121 @@
+"""Commands for a device: advise, update, history."""
+
+from dataclasses import replace
+
+from hyperforecast.cli.options import add_device, add_forecaster, checked_seed, chosen_forecaster
+from hyperforecast.cli.text import CAUTION, expected, listed, number, say, settings_lines, short, table
+from hyperforecast.settings import METHODS, Plan
+
+PLAN_HELP = {
+    "method": "what holds on to old classes", "hidden_units": "width of the hidden layer, 0 for none",
+    "passes": "passes over the rows", "batch_size": "rows of a minibatch",
+    "memory_limit": 'most exemplars held, or bytes as "2 MB"',
+}
+
+
+def add_commands(command):
+    """Add the commands of a device; `command` is that of `hyperforecast.cli`."""
+    advise = command("advise", _advise, "Advise settings for an increment; nothing is trained.")
+    add_device(advise)
+    add_forecaster(advise)
+
+    update = command("update", _update, "Advise, learn, check, keep or roll back; the first one makes the device folder.")
+    add_device(update)
+    add_forecaster(update)
+    update.add_argument("--dry-run", action="store_true", help="stop after the advice")
+    update.add_argument("--seed", type=int, default=0, help="of training (%(default)s)")
+    plan = update.add_argument_group("plan, fixed at the first update")
+    for name, default in Plan().as_dict().items():
+        kind = int if isinstance(default, int) and name != "memory_limit" else str
+        plan.add_argument(f"--{name.replace('_', '-')}", type=kind, default=None,
+                          choices=METHODS if name == "method" else None,
+                          help=f"{PLAN_HELP[name]} ({default})")
+
+    history = command("history", _history, "What was advised, expected and achieved at each boundary of a device.")
+    history.add_argument("--device", required=True, metavar="DIR")
+
+
+def _advise(options):
+    advice = _dry_run(options).advice
+    say(options, advice.as_dict(), _advice_lines(advice))
+
+
+def _dry_run(options):
+    from hyperforecast.device import DeviceFolder, update
+    from hyperforecast.increments import read_increment
+
+    folder = DeviceFolder(options.device)
+    carryover = folder.read().carryover
+    increment = read_increment(options.increment, n_features=carryover.n_features)
+    return update(folder, increment, forecaster=chosen_forecaster(options, carryover.plan.method), dry_run=True)
+
+
+def _advice_lines(advice):
+    verdict = advice.familiarity
+    lines = ["Advised settings", *settings_lines(advice.settings), "Accuracy to expect, with 90% interval"]
+    for name, one in (("old classes", advice.expected_old), ("new classes", advice.expected_new),
+                      ("all classes", advice.expected_all)):
+        lines.append(f"  {name:<18} {one.value:.3f}  ({one.low:.3f} to {one.high:.3f})")
+    lines += [f"Probability of divergence  {advice.divergence:.3f}",
+              f"Familiarity  {verdict.score:.2f}: " + (
+                  "the records know boundaries like this one" if verdict.familiar
+                  else "NOT FAMILIAR, few records lie this far out; check the result with care")]
+    lines += [f"  out of range: {one.name} {one.value:.4g}, records from {one.low:.4g} to {one.high:.4g}"
+              for one in verdict.out_of_range[:5]]
+    lines += ["What moved the advice most", *(f"  {reason}" for reason in advice.reasons or ["nothing unusual"])]
+    lines.append("Alternatives, best first")
+    lines += [f"  {place}. {short(one)}" for place, one in enumerate(advice.alternatives, 2)]
+    return [*lines, CAUTION]
+
+
+def _update(options):
+    from hyperforecast.device import DeviceFolder, update
+    from hyperforecast.increments import read_increment
+
+    folder = DeviceFolder(options.device)
+    given = {name: getattr(options, name) for name in PLAN_HELP if getattr(options, name) is not None}
+    plan, forecaster, n_features = None, None, None
+    if folder.numbers():
+        carryover = folder.read().carryover
+        forecaster, n_features = chosen_forecaster(options, carryover.plan.method), carryover.n_features
+        plan = replace(carryover.plan, **_plan_arguments(given)) if given else None
+    else:
+        plan = Plan(**_plan_arguments(given)).checked()
+    increment = read_increment(options.increment, n_features=n_features)
+    report = update(folder, increment, plan=plan, forecaster=forecaster, seed=checked_seed(options), dry_run=options.dry_run)
+    say(options, report.as_dict(), _update_lines(report))
+    return report.status or 0
+
+
+def _plan_arguments(given):
+    if "memory_limit" in given and given["memory_limit"].isdecimal():
+        given["memory_limit"] = int(given["memory_limit"])
+    return given
+
+
+def _update_lines(report):
+    entry = report.entry
+    lines = [] if report.advice is None else _advice_lines(report.advice)[:-1]
+    if report.status is None:
+        return [*lines, "Dry run: nothing was trained or stored."]
+    lines += ["Trained with", *(f"  {name:<18} {value:.4g}" for name, value in entry["settings"].items())]
+    achieved = entry["achieved"]
+    lines.append(f"Achieved on {achieved['rows']} rows held back from training")
+    lines += [f"  {name + ' classes':<18} {achieved[name]:.3f}" for name in ("old", "new", "all")
+              if achieved[name] is not None]
+    lines += [f"  rolled back: {reason}" for one in [*entry["earlier_tries"], entry] for reason in one["reasons"]]
+    kept = "Kept" if entry["kept"] else "ROLLED BACK"
+    return [*lines, f"{kept}; generation {report.generation} of the device folder, update {entry['number']}.", CAUTION]
+
+
+def _history(options):
+    from hyperforecast.device import DeviceFolder
+
+    generation = DeviceFolder(options.device).read()
+    rows = [(one["number"], one["time"], one["rows"], len(one["classes_new"]), listed(one["settings"]),
+             expected(one["expected"]), number(one["achieved"]["all"]), number(one["achieved"]["old"]),
+             "kept" if one["kept"] else "rolled back") for one in generation.history]
+    names = ("update", "time", "rows", "new classes", "settings", "expected (90%)", "achieved", "old classes", "outcome")
+    lines = [table(names, rows)]
+    lines += [f"update {one['number']}: {reason}" for one in generation.history for reason in one["reasons"]]
+    say(options, {"device": options.device, "generation": generation.number, "updates": generation.history}, lines)
