@@ -11,7 +11,7 @@ from hyperforecast.describing import describe
 from hyperforecast.forecasting import Forecaster, advise_settings, load_forecaster, opening_settings
 from hyperforecast.increments import Increment, check_features, check_labels
 from hyperforecast.learning import (
-    HeadTrainer, boundary_seed, close_boundary, open_boundary, predict_codes, try_settings,
+    HeadTrainer, boundary_seed, class_probabilities, close_boundary, open_boundary, predict_codes, try_settings,
 )
 from hyperforecast.settings import Plan, Settings, SettingsBox
 
@@ -126,10 +126,8 @@ class GrowingClassifier:
 
     def predict_proba(self, X):
         """Return class probabilities (n, C) of rows X (n, d), columns in the order of `classes_`."""
-        scores = self._scores(X)
-        scores -= scores.max(axis=1, keepdims=True)
-        exponentials = np.exp(scores)
-        return exponentials / exponentials.sum(axis=1, keepdims=True)
+        carryover, Z = self._standardized(X)
+        return class_probabilities(HeadTrainer(), carryover.head, Z)
 
     def score(self, X, y, sample_weight=None):
         """Return the accuracy of `predict(X)` against labels y (n,), rows weighted by `sample_weight`."""
@@ -236,10 +234,6 @@ class GrowingClassifier:
     def _standardized(self, X):
         carryover = self._fitted()
         return carryover, carryover.standardized(self._features(X))
-
-    def _scores(self, X):
-        carryover, Z = self._standardized(X)
-        return np.nan_to_num(HeadTrainer().class_scores(carryover.head, Z).astype(np.float64), nan=-1e30)
 
 
 def advise(classifier, X, y):

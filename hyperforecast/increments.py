@@ -134,6 +134,13 @@ def check_labels(y, n_rows, *, name="y"):
     return y
 
 
+def check_labels_kind(y, classes):
+    """Refuse labels y, text or whole numbers, that are of another kind than `classes`."""
+    kind, other = ("text", "whole numbers") if classes.dtype.kind == "U" else ("whole numbers", "text")
+    if classes.dtype.kind != y.dtype.kind:
+        raise InputError("y", f"must hold {kind} as before", other)
+
+
 def check_increment(X, y, *, n_features=None):
     """Return an `Increment` of checked features and labels, or raise `InputError`."""
     X = check_features(X, n_features=n_features)
@@ -142,6 +149,17 @@ def check_increment(X, y, *, n_features=None):
 
 def read_increment(path, *, n_features=None):
     """Return the `Increment` in a .npz, .npy, .csv or .parquet file, or raise `InputError`."""
+    X, y = _read_rows(path, n_features, labelled=True)
+    return Increment(X, y)
+
+
+def read_features(path, *, n_features=None):
+    """Return the feature rows (n, d) in a file like those of `read_increment`, whose labels may be missing."""
+    return _read_rows(path, n_features, labelled=False)[0]
+
+
+def _read_rows(path, n_features, *, labelled):
+    """Return features and labels; the labels are None where they are not wanted."""
     path = Path(path)
     readers = {".npz": _read_npz, ".npy": _read_npy_pair, ".csv": _read_csv, ".parquet": _read_parquet}
     if path.suffix not in readers:
@@ -149,9 +167,9 @@ def read_increment(path, *, n_features=None):
     try:
         if not path.is_file():
             raise InputError(path, "must be a file that exists", "nothing of that name")
-        X, y = readers[path.suffix](path)
+        X, y = readers[path.suffix](path, labelled)
         X = check_features(X, n_features=n_features)
-        return Increment(X, check_labels(y, len(X)))
+        return X, check_labels(y, len(X)) if labelled else None
     except InputError as error:
         if error.parameter in ("X", "y"):
             raise InputError(f"{path} ({error.parameter})", error.rule, error.received, error.remedy) from None
@@ -165,12 +183,13 @@ def _first_words(values):
     return ", ".join(repr(value.item() if isinstance(value, np.generic) else value)[:40] for value in flat)
 
 
-def _read_npz(path):
+def _read_npz(path, labelled):
     with opened_zip(path, path, what="a complete .npz file") as archive:
         names = archive.namelist()
-        if not {"X.npy", "y.npy"} <= set(names):
-            raise InputError(path, "must hold the arrays X and y", ", ".join(names) or "none")
-        return _read_member(path, archive, "X.npy"), _read_member(path, archive, "y.npy")
+        if not {"X.npy", "y.npy"} <= {*names, *(() if labelled else ("y.npy",))}:
+            raise InputError(path, "must hold the arrays X and y" if labelled else "must hold the array X",
+                             ", ".join(names) or "none")
+        return _read_member(path, archive, "X.npy"), _read_member(path, archive, "y.npy") if labelled else None
 
 
 def _read_member(path, archive, member):
@@ -199,14 +218,16 @@ def _map_npy(path):
     return np.load(path, mmap_mode="r", allow_pickle=False)
 
 
-def _read_npy_pair(path):
+def _read_npy_pair(path, labelled):
+    if not labelled:
+        return _map_npy(path), None
     labels = path.with_suffix(".labels.npy")
     if not labels.is_file():
         raise InputError(path, f"must have its labels beside it in {labels.name}", "no such file")
     return _map_npy(path), np.array(_map_npy(labels))
 
 
-def _read_csv(path):
+def _read_csv(path, labelled):
     if path.stat().st_size > LARGEST_TEXT_FILE:
         raise InputError(path, f"must hold at most {LARGEST_TEXT_FILE} bytes", path.stat().st_size, "use .npy")
     features, labels = [], []
@@ -214,23 +235,24 @@ def _read_csv(path):
         with open(path, newline="", encoding="utf-8-sig") as stream:
             rows = csv.reader(stream, strict=True)
             header = next(rows, [])
-            if header.count(LABEL_COLUMN) != 1:
+            if header.count(LABEL_COLUMN) not in ((1,) if labelled else (0, 1)):
                 raise InputError(path, f"must have one column named {LABEL_COLUMN} in its header line",
                                  ", ".join(header)[:80] or "no header")
-            at = header.index(LABEL_COLUMN)
+            at = header.index(LABEL_COLUMN) if LABEL_COLUMN in header else None
             for row in rows:
                 if len(row) != len(header):
                     raise InputError(path, f"must have {len(header)} values in every line",
                                      f"{len(row)} in line {rows.line_num}")
+                label, values = ("", row) if at is None else (row[at], row[:at] + row[at + 1:])
                 try:
-                    features.append(np.array(row[:at] + row[at + 1:], dtype=np.float64))
+                    features.append(np.array(values, dtype=np.float64))
                 except ValueError:
                     raise InputError(path, f"must hold numbers in every column but {LABEL_COLUMN}",
                                      f"{', '.join(row)[:80]} in line {rows.line_num}") from None
-                if len(row[at]) > LONGEST_LABEL:
+                if len(label) > LONGEST_LABEL:
                     raise InputError(path, f"must hold labels of at most {LONGEST_LABEL} characters",
-                                     f"{len(row[at])} in line {rows.line_num}")
-                labels.append(row[at])
+                                     f"{len(label)} in line {rows.line_num}")
+                labels.append(label)
     except (UnicodeDecodeError, csv.Error) as error:
         raise InputError(path, "must be a .csv file in UTF-8", error) from None
     if not labels:
@@ -247,7 +269,7 @@ def whole_or_text(labels):
     return numbers if (numbers.astype(str) == labels).all() else labels
 
 
-def _read_parquet(path):
+def _read_parquet(path, labelled):
     try:
         import pyarrow.parquet
     except ImportError:
@@ -257,9 +279,9 @@ def _read_parquet(path):
         table = pyarrow.parquet.read_table(path)
     except (pyarrow.ArrowException, OSError, ValueError) as error:
         raise InputError(path, "must be a .parquet file", error) from None
-    if table.column_names.count(LABEL_COLUMN) != 1:
+    if table.column_names.count(LABEL_COLUMN) not in ((1,) if labelled else (0, 1)):
         raise InputError(path, f"must have one column named {LABEL_COLUMN}", ", ".join(table.column_names)[:80])
-    labels = np.array(table.column(LABEL_COLUMN).to_pylist(), dtype=object)
+    labels = np.array(table.column(LABEL_COLUMN).to_pylist(), dtype=object) if labelled else None
     columns = [name for name in table.column_names if name != LABEL_COLUMN]
     if not columns:
         raise InputError(path, "must hold at least one feature column", "none")

@@ -103,6 +103,8 @@ def _update_lines(report):
     lines.append(f"Achieved on {achieved['rows']} rows held back from training")
     lines += [f"  {name + ' classes':<18} {achieved[name]:.3f}" for name in ("old", "new", "all")
               if achieved[name] is not None]
+    if entry["acceptance"] is not None:
+        lines.append(f"  on {entry['acceptance']['rows']} acceptance rows {number(entry['acceptance']['all'])}")
     lines += [f"  rolled back: {reason}" for one in [*entry["earlier_tries"], entry] for reason in one["reasons"]]
     kept = "Kept" if entry["kept"] else "ROLLED BACK"
     return [*lines, f"{kept}; generation {report.generation} of the device folder, update {entry['number']}.", CAUTION]
@@ -114,8 +116,14 @@ def _history(options):
     generation = DeviceFolder(options.device).read()
     rows = [(one["number"], one["time"], one["rows"], len(one["classes_new"]), listed(one["settings"]),
              expected(one["expected"]), number(one["achieved"]["all"]), number(one["achieved"]["old"]),
-             "kept" if one["kept"] else "rolled back") for one in generation.history]
+             "rolled back" if not one["kept"] else "undone" if one.get("undone") else "kept")
+            for one in generation.history]
     names = ("update", "time", "rows", "new classes", "settings", "expected (90%)", "achieved", "old classes", "outcome")
     lines = [table(names, rows)]
     lines += [f"update {one['number']}: {reason}" for one in generation.history for reason in one["reasons"]]
-    say(options, {"device": options.device, "generation": generation.number, "updates": generation.history}, lines)
+    lines += [f"update {one['number']}: later {number(outcome['all'])} on {outcome['rows']} rows"
+              for one in generation.history for outcome in one.get("outcomes", ())]
+    steps = generation.care.steps
+    lines += [f"after update {one['after_update']}: {one['step']}" for one in steps]
+    say(options, {"device": options.device, "generation": generation.number, "updates": generation.history,
+                  "steps": list(steps)}, lines)

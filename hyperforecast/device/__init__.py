@@ -1,8 +1,16 @@
-"""What runs where the classifier works: the device folder and the update cycle. Read status, folder, cycle."""
+"""What runs where the classifier works: the device folder, the update cycle, and what a person does between updates.
 
+Read status, care, folder, cycle, use.
+"""
+
+from hyperforecast.device.care import Care
 from hyperforecast.device.cycle import UpdateReport, update
 from hyperforecast.device.folder import DeviceFolder, Generation, carryover_bundle, carryover_from
 from hyperforecast.device.status import FolderBusy, FolderDamaged, FolderNotWritable, UpdateStatus
+from hyperforecast.device.use import (
+    Evaluation, Prediction, against_forecast, evaluate, keep_acceptance, predict, record_outcome, roll_back,
+)
 
-__all__ = ["DeviceFolder", "FolderBusy", "FolderDamaged", "FolderNotWritable", "Generation", "UpdateReport",
-           "UpdateStatus", "carryover_bundle", "carryover_from", "update"]
+__all__ = ["Care", "DeviceFolder", "Evaluation", "FolderBusy", "FolderDamaged", "FolderNotWritable", "Generation",
+           "Prediction", "UpdateReport", "UpdateStatus", "against_forecast", "carryover_bundle", "carryover_from",
+           "evaluate", "keep_acceptance", "predict", "record_outcome", "roll_back", "update"]

@@ -11,12 +11,16 @@ An entry of the history, a JSON-able dict, tells of one update:
                             null at the first update
     forecaster              checksum of the one that advised, or null
     overruled               whether settings were given, whatever was advised
-    settings, expected, diverged, achieved, operations, reasons
-                            of the last try: what it was trained with, forecast and achieved (see `update`), and why it
-                            was not kept, in words
-    earlier_tries           the tries before it, each with the same six
+    settings, expected, diverged, achieved, acceptance, operations, reasons
+                            of the last try: what it was trained with, forecast and achieved (see `update`), the same
+                            on the acceptance set or null, and why it was not kept, in words
+    earlier_tries           the tries before it, each with the same seven
     kept                    whether the last try was kept; otherwise the device carries on as before
     seconds                 spent on the update
+    outcomes                only where labels came later: see `hyperforecast.device.use.record_outcome`
+    undone                  only where it was undone by hand: when; see `hyperforecast.device.use.roll_back`
+
+Labels stand in whole values, or in the words of reasons; nothing has a label for its key.
 """
 
 import time
@@ -28,10 +32,13 @@ import numpy as np
 
 from hyperforecast.checks import InputError, check_number, check_whole
 from hyperforecast.describing import describe
+from hyperforecast.device.care import Care
 from hyperforecast.device.folder import DeviceFolder
 from hyperforecast.device.status import UpdateStatus
 from hyperforecast.forecasting import Advice, advise_settings, load_forecaster, opening_settings
-from hyperforecast.learning import Carryover, HeadTrainer, accuracies, boundary_seed, close_boundary, open_boundary, try_settings
+from hyperforecast.learning import (
+    Carryover, HeadTrainer, accuracies, boundary_seed, close_boundary, open_boundary, standardize, try_settings,
+)
 from hyperforecast.settings import SettingsBox
 
 # A try is not kept if old classes lose more than this on average, or one of them more than that.
@@ -122,9 +129,13 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
     - `all` is below low - 2 s, where low is the low end of the interval forecast for these settings and
       s = sqrt(low (1 - low) sum_c 1 / n_c) / C is the standard deviation of a mean over classes of binomial shares.
 
+    The second and third rule hold for the acceptance set, too, if the device carries one. And of a class with a floor
+    of its own (`hyperforecast.device.care`) the accuracy over its check rows and acceptance rows together may not come
+    to lie below the floor, nor fall further where it lay below before; here no allowance is made for few rows.
+
     At the first update, which has no old classes and no forecast, only the first rule can apply. An update that is
-    rolled back stores a generation too: its history tells of it, its carryover is that of before. Where there is none
-    before, nothing is stored.
+    rolled back stores a generation too, in place of the current one: its history tells of it, its carryover is that of
+    before. Where there is none before, nothing is stored.
     """
     started = time.perf_counter()
     folder = folder if isinstance(folder, DeviceFolder) else DeviceFolder(folder)
@@ -144,7 +155,8 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         _check_head(folder, trainer, carryover)
         advice = None if carryover is None else _advise(trainer, boundary, forecaster, seed)
         candidates = _candidates(plan, advice, settings, retries)
-        check = _Check(trainer, boundary, advice, most_lost, most_lost_by_class)
+        care = Care() if before is None else before.care
+        check = _Check(trainer, boundary, advice, most_lost, most_lost_by_class, care)
         tries = []
         for candidate in () if dry_run else candidates:
             attempt = try_settings(trainer, boundary, [candidate], seed=seed)[0]
@@ -161,7 +173,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
             "kept": bool(tries) and not tries[-1]["reasons"], "seconds": round(time.perf_counter() - started, 4),
         }
         stored = not dry_run and carryover is not None
-        generation = folder.store(carryover, [*history, entry]) if stored else None
+        generation = folder.store(carryover, [*history, entry], care, in_place=not entry["kept"]) if stored else None
     status = None if dry_run else UpdateStatus.KEPT if entry["kept"] else UpdateStatus.ROLLED_BACK
     return UpdateReport(status, generation, entry, advice, carryover)
 
@@ -215,51 +227,105 @@ def _candidates(plan, advice, settings, retries):
 class _Check:
     """Judges attempts at a boundary by the rules of `update`."""
 
-    def __init__(self, trainer, boundary, advice, most_lost, most_lost_by_class):
+    def __init__(self, trainer, boundary, advice, most_lost, most_lost_by_class, care):
         self.trainer, self.boundary, self.advice = trainer, boundary, advice
         self.most_lost, self.most_lost_by_class = most_lost, most_lost_by_class
-        self.rows = boundary.check_set()
-        self.count = np.bincount(self.rows.y, minlength=boundary.n_classes)
-        n_old = boundary.n_old
-        self.before = np.empty(0) if boundary.carryover is None else self._accuracies(boundary.carryover.head)[:n_old]
-        self.new = np.arange(n_old, boundary.n_classes) if n_old < boundary.n_classes else boundary.arrived
+        self.new = np.arange(boundary.n_old, boundary.n_classes) if boundary.n_old < boundary.n_classes \
+            else boundary.arrived
+        self.rows = _CheckedRows("check rows", trainer, boundary, *_rows_of(boundary.check_set()))
+        self.acceptance = _CheckedRows("acceptance rows", trainer, boundary, *_acceptance_rows(boundary, care))
+        self.floors = {code: care.floors[label] for code, label in enumerate(boundary.classes.tolist())
+                       if label in care.floors}
 
     def judged(self, attempt):
         """Return what the history tells of an attempt."""
-        after = self._accuracies(attempt.head)
-        achieved = {"old": _mean(after[:self.boundary.n_old]), "new": _mean(after[self.new]), "all": _mean(after),
-                    "old_before": _mean(self.before), "rows": len(self.rows)}
+        after, accepted = (rows.accuracies(attempt.head) for rows in (self.rows, self.acceptance))
+        achieved = self._achieved(self.rows, after)
         expected = None
         if self.advice is not None:
             forecast = self.advice.forecaster.at(self.advice.descriptors).expected([attempt.settings])
             expected = {name: one.at(0).as_dict() for name, one in forecast.items()}
         return {"settings": attempt.settings.as_dict(), "expected": expected, "diverged": attempt.diverged,
-                "achieved": achieved, "operations": attempt.operations,
-                "reasons": list(self._reasons(attempt, after, achieved, expected))}
+                "achieved": achieved, "acceptance": self._achieved(self.acceptance, accepted) if len(self.acceptance)
+                else None, "operations": attempt.operations,
+                "reasons": list(self._reasons(attempt, after, accepted, achieved, expected))}
 
-    def _accuracies(self, head):
-        return accuracies(self.trainer, head, self.rows.Z, self.rows.y, self.boundary.n_classes)
+    def _achieved(self, rows, after):
+        return {"old": _mean(after[:self.boundary.n_old]), "new": _mean(after[self.new]), "all": _mean(after),
+                "old_before": _mean(rows.before), "rows": len(rows)}
 
-    def _reasons(self, attempt, after, achieved, expected):
+    def _reasons(self, attempt, after, accepted, achieved, expected):
         """Yield why the attempt is not to be kept."""
         if attempt.diverged:
             yield "training diverged"
             return
-        lost = self.before - after[:self.boundary.n_old]
-        rows = self.count[:self.boundary.n_old]
-        mean = _mean(lost)
-        if mean is not None and mean > self.most_lost:
-            yield (f"accuracy on old classes fell by {mean:.2f} on average over {rows.sum()} check rows, "
-                   f"more than {self.most_lost:.2f}")
-        for code in np.flatnonzero((rows >= FEWEST_ROWS_OF_CLASS) & (lost > self.most_lost_by_class)):
-            yield (f"accuracy on class {self.boundary.classes[code]} fell by {lost[code]:.2f} over {rows[code]} check "
-                   f"rows, more than {self.most_lost_by_class:.2f}")
+        yield from self._losses(self.rows, after)
+        yield from self._losses(self.acceptance, accepted)
+        yield from self._broken_floors(after, accepted)
         if expected is not None and achieved["all"] is not None:
-            low, count = expected["all"]["low"], self.count[self.count > 0]
+            low, count = expected["all"]["low"], self.rows.count[self.rows.count > 0]
             noise = NOISE_DEVIATIONS * np.sqrt(low * (1 - low) * (1 / count).sum()) / len(count)
             if achieved["all"] < low - noise:
                 yield (f"accuracy over all classes is {achieved['all']:.2f} on {len(self.rows)} check rows, below the "
                        f"forecast's low end {low:.2f} by more than the noise of so few rows, {noise:.2f}")
+
+    def _losses(self, rows, after):
+        lost = rows.before - after[:self.boundary.n_old]
+        count = rows.count[:self.boundary.n_old]
+        mean = _mean(lost)
+        if mean is not None and mean > self.most_lost:
+            yield (f"accuracy on old classes fell by {mean:.2f} on average over {count.sum()} {rows.name}, "
+                   f"more than {self.most_lost:.2f}")
+        for code in np.flatnonzero((count >= FEWEST_ROWS_OF_CLASS) & (lost > self.most_lost_by_class)):
+            yield (f"accuracy on class {self.boundary.classes[code]} fell by {lost[code]:.2f} over {count[code]} "
+                   f"{rows.name}, more than {self.most_lost_by_class:.2f}")
+
+    def _broken_floors(self, after, accepted):
+        n_old = self.boundary.n_old
+        for code, floor in self.floors.items():
+            count = int(self.rows.count[code] + self.acceptance.count[code])
+            if not count:
+                continue
+            now = self._pooled(code, after, accepted)
+            before = self._pooled(code, self.rows.before, self.acceptance.before) if code < n_old else np.inf
+            if now < floor and now < before:
+                yield (f"accuracy on class {self.boundary.classes[code]} is {now:.2f} over {count} rows, "
+                       f"below its floor {floor:.2f}")
+
+    def _pooled(self, code, on_check_rows, on_acceptance_rows):
+        """Accuracy on a class over both kinds of rows."""
+        count = np.array([self.rows.count[code], self.acceptance.count[code]])
+        return np.nan_to_num([on_check_rows[code], on_acceptance_rows[code]]) @ count / count.sum()
+
+
+class _CheckedRows:
+    """Rows that attempts at a boundary are checked on, and the old head's accuracy on them."""
+
+    def __init__(self, name, trainer, boundary, Z, y):
+        self.name, self.trainer, self.Z, self.y = name, trainer, Z, y
+        self.count = np.bincount(y, minlength=boundary.n_classes)
+        n_old = boundary.n_old
+        self.before = np.empty(0) if boundary.carryover is None else self.accuracies(boundary.carryover.head)[:n_old]
+
+    def __len__(self):
+        return len(self.y)
+
+    def accuracies(self, head):
+        """Accuracy on the rows of each class."""
+        return accuracies(self.trainer, head, self.Z, self.y, len(self.count))
+
+
+def _rows_of(exemplars):
+    return exemplars.Z, exemplars.y
+
+
+def _acceptance_rows(boundary, care):
+    """Standardized acceptance rows of the classes known at a boundary, and their codes."""
+    if care.acceptance is None:
+        return np.empty((0, boundary.n_features), np.float32), np.empty(0, np.int64)
+    place = {label: code for code, label in enumerate(boundary.classes.tolist())}
+    codes = np.array([place.get(label, -1) for label in care.acceptance.y.tolist()], np.int64)
+    return standardize(care.acceptance.X[codes >= 0], boundary.center, boundary.scale), codes[codes >= 0]
 
 
 def _mean(values):

@@ -4,8 +4,9 @@
     DIR/generation-000007/        the one before
     DIR/generation-000008/        the current one: manifest.json and one .npy file for each array
 
-A generation is a bundle (`hyperforecast.storage`) of kind "carryover": plan, classes and the history of updates are
-facts in its manifest, readable with any tool; everything else is plain arrays, with checksums. A new generation is
+A generation is a bundle (`hyperforecast.storage`) of kind "carryover": plan, classes, the history of updates and what
+has been laid down (`hyperforecast.device.care`) are facts in its manifest, readable with any tool; everything else is
+plain arrays, with checksums. Version 1 had no care. A new generation is
 written under the name generation-000009.partial and appears in one rename. Nothing in the folder names a path, so
 that a copy of it works anywhere.
 """
@@ -22,6 +23,7 @@ from pathlib import Path
 import numpy as np
 
 from hyperforecast.checks import InputError, check_whole
+from hyperforecast.device.care import Care, care_from, care_parts
 from hyperforecast.device.status import FolderBusy, FolderDamaged, FolderNotWritable
 from hyperforecast.learning import Carryover, ClassSummaries, Exemplars
 from hyperforecast.settings import Plan
@@ -30,7 +32,7 @@ from hyperforecast.storage import (
 )
 
 KIND = "carryover"
-VERSION = 1
+VERSION = 2
 LOCK = "lock"
 GENERATION = re.compile(r"generation-(\d{6,})")
 PARTIAL = re.compile(r"generation-\d{6,}\.partial")
@@ -52,6 +54,7 @@ class Generation:
     carryover : Carryover
     history : list of dict
         The last updates, oldest first; see `hyperforecast.device.cycle`.
+    care : Care
     checksum : str
         SHA-256 of its content.
     """
@@ -59,6 +62,7 @@ class Generation:
     number: int
     carryover: Carryover
     history: list
+    care: Care
     checksum: str
 
 
@@ -118,20 +122,27 @@ class DeviceFolder:
             raise FolderDamaged(self.path / _name(numbers[-1]), "must be an undamaged generation",
                                 self._without_path(error), self._way_back(numbers)) from None
 
-    def store(self, carryover, history):
+    def before(self):
+        """Return the newest intact `Generation` before the current one, or None."""
+        return self._intact_before(self.numbers())
+
+    def store(self, carryover, history, care=Care(), *, in_place=False, alone=False):
         """Store a new generation; return its number. Call it within `locked`.
 
-        Afterwards the one before is still there, older ones are not.
+        Afterwards the one before is still there, older ones are not. With `in_place`, for a generation that carries
+        what the current one does, the current one goes instead, so that there is still something to go back to. With
+        `alone` no other stays.
 
         Raises
         ------
         FolderNotWritable
             If it cannot be written; the current generation is still current then.
         """
-        number = max(self.numbers(), default=0) + 1
+        before = self.numbers()
+        number = max(before, default=0) + 1
         final = self.path / _name(number)
         partial = _partial(final)
-        bundle = carryover_bundle(carryover, history)
+        bundle = carryover_bundle(carryover, history, care)
         try:
             try:
                 partial.mkdir()
@@ -148,8 +159,12 @@ class DeviceFolder:
         except OSError as error:
             raise FolderNotWritable(self.path, "must take a new generation", error.strerror or error,
                                     "nothing has changed: make room or mend the disk, then update again") from None
-        for old in self.numbers()[:-GENERATIONS_KEPT]:
-            _remove(self.path / _name(old))
+        if in_place:
+            before = before[:-1]
+        stays = [] if alone else before[-(GENERATIONS_KEPT - 1):]
+        for old in self.numbers()[:-1]:
+            if old not in stays:
+                _remove(self.path / _name(old))
         return number
 
     def revert(self):
@@ -167,6 +182,7 @@ class DeviceFolder:
             intact = self._intact_before(numbers)
             if intact is None:
                 raise InputError(self.path, "must hold an intact generation before the current one", "none before it")
+            intact = intact.number
             for number in reversed(numbers[numbers.index(intact) + 1:]):
                 _remove(self.path / _name(number))
             if self.numbers()[-1] != intact:
@@ -220,14 +236,14 @@ class DeviceFolder:
 
     def _read(self, number):
         bundle, checksum = read_bundle_folder(self.path / _name(number), KIND, newest=VERSION)
-        carryover, history = carryover_from(bundle)
-        return Generation(number, carryover, history, checksum)
+        carryover, history, care = carryover_from(bundle)
+        return Generation(number, carryover, history, care, checksum)
 
     def _intact_before(self, numbers):
-        """Return the number of the newest intact generation before the current one, or None."""
+        """Return the newest intact `Generation` before the current one, or None."""
         for number in reversed(numbers[:-1]):
             try:
-                return self._read(number).number
+                return self._read(number)
             except InputError:
                 continue
         return None
@@ -236,7 +252,7 @@ class DeviceFolder:
         intact = self._intact_before(numbers)
         if intact is None:
             return "no other generation is intact: copy the folder again from where it was saved"
-        return f"generation {intact} is intact: revert to it"
+        return f"generation {intact.number} is intact: revert to it with rollback"
 
     def _without_path(self, error):
         return str(error).replace(f"{self.path}{os.sep}", "")
@@ -247,22 +263,23 @@ class DeviceFolder:
                           "make a first update, with a plan")
 
 
-def carryover_bundle(carryover, history):
-    """Return a `Carryover` and the history of updates (list of JSON-able dicts) as a `Bundle`."""
+def carryover_bundle(carryover, history, care=Care()):
+    """Return a `Carryover`, the history of updates (list of JSON-able dicts) and a `Care` as a `Bundle`."""
     summaries = carryover.summaries
+    care_facts, care_arrays = care_parts(care)
     arrays = {
         "center": carryover.center, "scale": carryover.scale, "best_check_accuracy": carryover.best_check_accuracy,
         "class_count": summaries.count, "class_mean": summaries.mean, "class_variance": summaries.variance,
         **_row_arrays("exemplar", carryover.exemplars), **_row_arrays("check", carryover.check_rows),
-        **{HEAD + name: array for name, array in carryover.head.items()},
+        **{HEAD + name: array for name, array in carryover.head.items()}, **care_arrays,
     }
     facts = {"plan": carryover.plan.as_dict(), "classes": carryover.classes.tolist(),
-             "n_boundaries": carryover.n_boundaries, "history": _latest(history)}
+             "n_boundaries": carryover.n_boundaries, "history": _latest(history), "care": care_facts}
     return Bundle(KIND, VERSION, facts, arrays)
 
 
 def carryover_from(bundle):
-    """Return (carryover, history) from a bundle of `carryover_bundle`, every part checked.
+    """Return (carryover, history, care) from a bundle of `carryover_bundle`, every part checked.
 
     Raises
     ------
@@ -270,8 +287,10 @@ def carryover_from(bundle):
         If a part is missing, or does not fit the others.
     """
     facts, arrays = bundle.facts, bundle.arrays
-    if not isinstance(facts, dict) or set(facts) != {"plan", "classes", "n_boundaries", "history"}:
-        raise InputError("facts", "must be plan, classes, n_boundaries and history", "others")
+    if bundle.version == 1 and isinstance(facts, dict):
+        facts = {**facts, "care": care_parts(Care())[0]}
+    if not isinstance(facts, dict) or set(facts) != {"plan", "classes", "n_boundaries", "history", "care"}:
+        raise InputError("facts", "must be plan, classes, n_boundaries, history and care", "others")
     classes = _classes(facts["classes"])
     n_features, n_classes = len(stored_array(arrays, "center", kinds="f", shape=(None,))), len(classes)
 
@@ -304,7 +323,7 @@ def carryover_from(bundle):
         raise InputError("history", "must be a list of updates", "other content")
     for entry in history:
         check_whole("history number", entry.get("number"), low=1)
-    return carryover, history
+    return carryover, history, care_from(facts["care"], arrays, n_features=n_features)
 
 
 def _latest(history):

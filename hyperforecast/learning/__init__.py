@@ -1,6 +1,8 @@
 """The learner. Read exemplars, boundary, head, objectives, side_by_side, trainer, attempts, in this order."""
 
-from hyperforecast.learning.attempts import accuracies, close_boundary, predict_codes, try_settings
+from hyperforecast.learning.attempts import (
+    CHUNK_ROWS, accuracies, class_probabilities, close_boundary, predict_codes, try_settings,
+)
 from hyperforecast.learning.boundary import (
     Boundary, Carryover, ClassSummaries, boundary_seed, open_boundary, standardize,
 )
@@ -9,7 +11,7 @@ from hyperforecast.learning.objectives import distillation
 from hyperforecast.learning.trainer import Attempt, HeadTrainer, Job, Trainer, align_weights
 
 __all__ = [
-    "Attempt", "Boundary", "Carryover", "ClassSummaries", "Exemplars", "HeadTrainer", "Job", "Trainer",
-    "accuracies", "align_weights", "boundary_seed", "choose_exemplars", "close_boundary", "distillation", "herd",
-    "open_boundary", "predict_codes", "standardize", "try_settings", "unit_rows",
+    "Attempt", "Boundary", "CHUNK_ROWS", "Carryover", "ClassSummaries", "Exemplars", "HeadTrainer", "Job", "Trainer",
+    "accuracies", "align_weights", "boundary_seed", "choose_exemplars", "class_probabilities", "close_boundary",
+    "distillation", "herd", "open_boundary", "predict_codes", "standardize", "try_settings", "unit_rows",
 ]

@@ -28,6 +28,14 @@ def predict_codes(trainer, head, Z):
     return codes
 
 
+def class_probabilities(trainer, head, Z):
+    """Return class probabilities (n, C), float64, for standardized rows Z (n, d): the softmax of the scores."""
+    scores = np.nan_to_num(trainer.class_scores(head, Z).astype(np.float64), nan=-1e30)
+    scores -= scores.max(axis=1, keepdims=True)
+    exponentials = np.exp(scores)
+    return exponentials / exponentials.sum(axis=1, keepdims=True)
+
+
 def accuracies(trainer, head, Z, y, n_classes):
     """Return the accuracy on each class's rows, shape (n_classes,); NaN for a class without rows."""
     by_class = np.full(n_classes, np.nan)

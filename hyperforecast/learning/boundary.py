@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from hyperforecast.checks import InputError
+from hyperforecast.increments import check_labels_kind
 from hyperforecast.learning.exemplars import Exemplars
 from hyperforecast.settings import KEPT_PER_CLASS, Plan
 
@@ -201,9 +201,7 @@ def open_boundary(plan, carryover, increment, *, seed=0):
     """
     labels, first, codes = np.unique(increment.y, return_index=True, return_inverse=True)
     old = labels[:0] if carryover is None else carryover.classes
-    if carryover is not None and old.dtype.kind != labels.dtype.kind:
-        raise InputError("y", f"must hold {'text' if old.dtype.kind == 'U' else 'whole numbers'} as before",
-                         "whole numbers" if old.dtype.kind == "U" else "text")
+    check_labels_kind(labels, old)
     is_new = ~np.isin(labels, old)
     classes = np.concatenate([old, labels[is_new]])
     place = {label: code for code, label in enumerate(classes.tolist())}

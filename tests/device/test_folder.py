@@ -232,7 +232,7 @@ def test_with_both_generations_damaged_there_is_no_way_back(two):
 
 def rewrite(generation, change):
     """Change a generation's bundle and store it with proper checksums, as somebody who means harm could."""
-    bundle, _ = storage.read_bundle_folder(generation, "carryover", newest=1)
+    bundle, _ = storage.read_bundle_folder(generation, "carryover", newest=2)
     change(bundle)
     shutil.rmtree(generation)
     generation.mkdir()
@@ -247,8 +247,8 @@ def rewrite_manifest(generation, change):
 
 
 def test_a_generation_of_a_newer_version_is_refused_as_such(two):
-    rewrite(two.path / "generation-000002", lambda bundle: setattr(bundle, "version", 2))
-    with pytest.raises(InputError, match="must be of version 1 to 1; received version 2") as caught:
+    rewrite(two.path / "generation-000002", lambda bundle: setattr(bundle, "version", 3))
+    with pytest.raises(InputError, match="must be of version 1 to 2; received version 3") as caught:
         two.read()
     assert not isinstance(caught.value, FolderDamaged)
 

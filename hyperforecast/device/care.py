@@ -1,0 +1,80 @@
+"""What the person who looks after a device has laid down, beside what the device has learned.
+
+It lies in every generation of the device folder and does not change what is learned, only what is kept.
+A *step* is something that was done by hand between updates, a JSON-able dict: `time` (UTC, ISO text), `after_update`
+(number of the last update before it, 0 if none), `step` (what was done) and what else there is to tell. Labels stand
+in `class`, `from` and `into`.
+"""
+
+from dataclasses import dataclass, field, replace
+from datetime import UTC, datetime
+
+import numpy as np
+
+from hyperforecast.checks import InputError, check_number
+from hyperforecast.increments import Increment, check_features, check_labels
+from hyperforecast.storage import stored_array
+
+# The last steps are kept, older ones dropped.
+MOST_STEPS = 1000
+
+
+@dataclass(frozen=True)
+class Care:
+    """What has been laid down for a device.
+
+    Attributes
+    ----------
+    floors : dict of label to float
+        Accuracy, in [0, 1], that an update may not take a class below. A class that is not known now keeps its floor.
+    acceptance : Increment or None
+        Rows that every update is checked on, never trained on; not counted in the memory limit. They may be of classes
+        still to come.
+    steps : tuple of dict
+        What was done by hand, oldest first.
+    """
+
+    floors: dict = field(default_factory=dict)
+    acceptance: Increment | None = None
+    steps: tuple = ()
+
+    def with_step(self, step, history, **told):
+        """Return the care with one more step; `history` is that of updates, `told` what there is to tell of it."""
+        one = {"time": datetime.now(UTC).isoformat(timespec="seconds"),
+               "after_update": history[-1]["number"] if history else 0, "step": step, **told}
+        return replace(self, steps=(*self.steps, one)[-MOST_STEPS:])
+
+
+def care_parts(care):
+    """Return (facts, arrays) of a `Care`, to be stored in a bundle."""
+    facts = {"floors": [[label, floor] for label, floor in care.floors.items()], "steps": list(care.steps),
+             "acceptance_classes": []}
+    if care.acceptance is None:
+        return facts, {}
+    classes, codes = np.unique(care.acceptance.y, return_inverse=True)
+    facts["acceptance_classes"] = classes.tolist()
+    return facts, {"acceptance_X": np.array(care.acceptance.X, np.float32), "acceptance_y": codes.astype(np.int64)}
+
+
+def care_from(facts, arrays, *, n_features):
+    """Return the `Care` of stored parts, every one checked; `InputError` if one is missing or not proper."""
+    if not isinstance(facts, dict) or set(facts) != {"floors", "steps", "acceptance_classes"}:
+        raise InputError("care", "must be floors, steps and acceptance_classes", "others")
+    floors, steps, labels = facts["floors"], facts["steps"], facts["acceptance_classes"]
+    if not isinstance(floors, list) or not all(
+            isinstance(one, list) and len(one) == 2 and type(one[0]) in (int, str) for one in floors):
+        raise InputError("floors", "must be pairs of a label and a number", "others")
+    if not isinstance(steps, list) or not all(isinstance(one, dict) and isinstance(one.get("step"), str)
+                                              for one in steps):
+        raise InputError("steps", "must be a list of steps", "others")
+    if not isinstance(labels, list):
+        raise InputError("acceptance_classes", "must be a list of labels", "others")
+    acceptance = None
+    if labels:
+        X = check_features(stored_array(arrays, "acceptance_X", kinds="f", shape=(None, n_features)), name="acceptance_X")
+        codes = stored_array(arrays, "acceptance_y", kinds="i", shape=(len(X),))
+        if not ((codes >= 0) & (codes < len(labels))).all():
+            raise InputError("acceptance_y", "must hold codes of acceptance_classes", "others")
+        acceptance = Increment(X, check_labels(np.array(labels, object), len(labels), name="acceptance_classes")[codes])
+    return Care({label: check_number("floor", floor, low=0, high=1) for label, floor in floors}, acceptance,
+                tuple(steps))

@@ -1,0 +1,100 @@
+"""Commands that use and check a device, as a user runs them."""
+
+import csv
+import json
+
+import numpy as np
+import pytest
+
+from hyperforecast.cli import main
+
+NAMES = np.array(["nut", "bolt", "hook", "ring", "pin", "clip"])
+
+
+@pytest.fixture
+def files(tmp_path):
+    """Files of three increments of Gaussian classes, and judged rows of all classes."""
+    rng = np.random.default_rng(0)
+    centers = rng.normal(size=(6, 8)) * 2
+    paths = []
+    for name, codes in (("a", [0, 1]), ("b", [2, 3]), ("c", [4, 5]), ("judged", range(6))):
+        y = np.repeat(codes, 30)
+        paths.append(str(tmp_path / f"{name}.npz"))
+        np.savez(paths[-1], X=centers[y] + rng.normal(size=(len(y), 8)), y=NAMES[y])
+    return paths
+
+
+@pytest.fixture
+def device(tmp_path, files, capsys):
+    """A device folder after two updates."""
+    folder = str(tmp_path / "cell")
+    assert main(["update", "--increment", files[0], "--device", folder, "--memory-limit", "120"]) == 0
+    assert main(["update", "--increment", files[1], "--device", folder]) == 0
+    capsys.readouterr()
+    return folder
+
+
+def run(capsys, *arguments):
+    """Run a command with --json; return its document."""
+    assert main([*arguments, "--json"]) == 0
+    return json.loads(capsys.readouterr().out)
+
+
+def refused(capsys, *arguments):
+    """Run a command that must be refused; return its one line."""
+    assert main(list(arguments)) == 2
+    shown = capsys.readouterr()
+    assert not shown.out and shown.err.count("\n") == 1
+    return shown.err
+
+
+def test_predictions_come_as_lines_json_csv_and_npz(capsys, device, files, tmp_path):
+    X = np.load(files[3], allow_pickle=False)["X"]
+    bare, table = tmp_path / "rows.npz", tmp_path / "rows.csv"
+    np.savez(bare, X=X)
+    np.savetxt(table, X, delimiter=",", header=",".join("abcdefgh"), comments="")
+    told = run(capsys, "predict", "--device", device, "--rows", str(bare))
+    labels = [one["label"] for one in told["rows"]]
+    assert len(labels) == 180 and all(sum(one["probabilities"]) == pytest.approx(1) for one in told["rows"])
+    assert [told["classes"][np.argmax(one["probabilities"])] for one in told["rows"]] == labels
+    assert run(capsys, "predict", "--device", device, "--rows", str(table))["rows"][0]["label"] == labels[0]
+    for end in ("csv", "npz"):
+        run(capsys, "predict", "--device", device, "--rows", files[3], "--out", str(tmp_path / f"out.{end}"))
+    with open(tmp_path / "out.csv", newline="") as file:
+        rows = list(csv.DictReader(file))
+    assert [row["label"] for row in rows] == labels and float(rows[0][f"p({labels[0]})"]) > 0.25
+    with np.load(tmp_path / "out.npz", allow_pickle=False) as out:
+        assert out["labels"].tolist() == labels and out["probabilities"].shape == (180, 4)
+    assert main(["predict", "--device", device, "--rows", files[3]]) == 0
+    assert labels[0] in capsys.readouterr().out.splitlines()[1]
+    assert "csv" in refused(capsys, "predict", "--device", device, "--rows", files[3], "--out", "out.txt")
+
+
+def test_evaluation_stands_beside_the_forecast_and_becomes_an_outcome(capsys, device, files):
+    told = run(capsys, "evaluate", "--device", device, "--rows", files[3])
+    assert told["unknown_classes"] == [{"class": "clip", "rows": 30}, {"class": "pin", "rows": 30}]
+    assert told["forecast"]["update"] == 2 and told["forecast"]["all"]["verdict"] in ("below", "within", "above")
+    assert main(["evaluate", "--device", device, "--rows", files[3], "--of-update", "2"]) == 0
+    text = capsys.readouterr().out
+    assert "Beside the forecast of update 2" in text and "not known: class pin" in text
+    history = run(capsys, "history", "--device", device)
+    assert history["updates"][1]["outcomes"][0]["all"] == told["accuracy"]
+    assert "kept" in refused(capsys, "evaluate", "--device", device, "--rows", files[3], "--of-update", "7")
+
+
+def test_a_device_carries_an_acceptance_set(capsys, device, files):
+    assert "acceptance set" in refused(capsys, "evaluate", "--device", device)
+    told = run(capsys, "evaluate", "--device", device, "--rows", files[3], "--keep-as-acceptance")
+    assert run(capsys, "evaluate", "--device", device)["confusion"] == told["confusion"]
+    assert main(["update", "--increment", files[2], "--device", device]) in (0, 3)
+    assert "acceptance" in capsys.readouterr().out
+    assert run(capsys, "evaluate", "--device", device, "--drop-acceptance")["acceptance_rows"] == 0
+    assert "acceptance set" in refused(capsys, "evaluate", "--device", device)
+
+
+def test_rollback_by_hand_is_told_by_the_history(capsys, device):
+    told = run(capsys, "rollback", "--device", device, "--because", "wrong crate")
+    assert told["undone"] == [2]
+    assert main(["history", "--device", device]) == 0
+    text = capsys.readouterr().out
+    assert "undone" in text and "after update 2: rolled back" in text
