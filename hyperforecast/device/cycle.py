@@ -10,11 +10,15 @@ An entry of the history, a JSON-able dict, tells of one update:
     advice                  settings, expected accuracies with intervals, divergence, familiarity, and reasons in words;
                             null at the first update
     forecaster              checksum of the one that advised, or null
+    forecaster_version      version of the program that fitted it, or null
     overruled               whether settings were given, whatever was advised
-    settings, expected, diverged, achieved, acceptance, operations, reasons
+    settings, expected, diverged, achieved, acceptance, by_class, operations, reasons
                             of the last try: what it was trained with, forecast and achieved (see `update`), the same
-                            on the acceptance set or null, and why it was not kept, in words
-    earlier_tries           the tries before it, each with the same seven
+                            on the acceptance set or null, and why it was not kept, in words; by_class holds lists of
+                            one length, one place for each class known: `class` (its label), `arrived` (rows of the
+                            increment), `check_rows`, and its accuracy on these `before` and `after` the try (null
+                            without check rows, and before it was known)
+    earlier_tries           the tries before it, each with the same eight
     kept                    whether the last try was kept; otherwise the device carries on as before
     seconds                 spent on the update
     outcomes                only where labels came later: see `hyperforecast.device.use.record_outcome`
@@ -247,12 +251,19 @@ class _Check:
             expected = {name: one.at(0).as_dict() for name, one in forecast.items()}
         return {"settings": attempt.settings.as_dict(), "expected": expected, "diverged": attempt.diverged,
                 "achieved": achieved, "acceptance": self._achieved(self.acceptance, accepted) if len(self.acceptance)
-                else None, "operations": attempt.operations,
+                else None, "by_class": self._by_class(after), "operations": attempt.operations,
                 "reasons": list(self._reasons(attempt, after, accepted, achieved, expected))}
 
     def _achieved(self, rows, after):
         return {"old": _mean(after[:self.boundary.n_old]), "new": _mean(after[self.new]), "all": _mean(after),
                 "old_before": _mean(rows.before), "rows": len(rows)}
+
+    def _by_class(self, after):
+        boundary = self.boundary
+        arrived = np.bincount(np.concatenate([boundary.y, boundary.held_back.y]), minlength=boundary.n_classes)
+        before = np.concatenate([self.rows.before, np.full(boundary.n_classes - boundary.n_old, np.nan)])
+        return {"class": boundary.classes.tolist(), "arrived": arrived.tolist(),
+                "check_rows": self.rows.count.tolist(), "before": _rounded(before), "after": _rounded(after)}
 
     def _reasons(self, attempt, after, accepted, achieved, expected):
         """Yield why the attempt is not to be kept."""
@@ -334,6 +345,11 @@ def _mean(values):
     return float(known.mean()) if len(known) else None
 
 
+def _rounded(values):
+    """Accuracies as a list of floats in four digits, None where unknown."""
+    return [None if np.isnan(value) else round(float(value), 4) for value in values]
+
+
 def _arrived(boundary, increment):
     again = boundary.arrived[boundary.arrived < boundary.n_old]
     return {"rows": len(increment), "classes_old": boundary.n_old, "classes_again": boundary.classes[again].tolist(),
@@ -342,8 +358,9 @@ def _arrived(boundary, increment):
 
 def _advised(advice):
     if advice is None:
-        return {"descriptors": None, "advice": None, "forecaster": None}
+        return {"descriptors": None, "advice": None, "forecaster": None, "forecaster_version": None}
     told = advice.as_dict()
     shortened = {name: told[name] for name in ("settings", "expected", "divergence", "familiarity")}
     return {"descriptors": told["descriptors"], "forecaster": told["forecaster"],
+            "forecaster_version": advice.forecaster.version,
             "advice": {**shortened, "reasons": [str(reason) for reason in advice.reasons]}}

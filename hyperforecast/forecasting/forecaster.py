@@ -125,6 +125,13 @@ class Forecaster:
     recipe: dict
     checksum: str = ""
 
+    @property
+    def version(self):
+        """Version of the program that fitted it, by its recipe, or None."""
+        versions = self.recipe.get("versions")
+        version = versions.get("hyperforecast") if isinstance(versions, dict) else None
+        return version if isinstance(version, str) else None
+
     def vector(self, descriptors):
         """Return a dict of descriptors as the models' vector (F,); a name that is not there is missing (NaN)."""
         return np.array([descriptors.get(name, np.nan) for name in self.descriptor_names], dtype=np.float64)

@@ -10,6 +10,7 @@ from datetime import datetime
 import numpy as np
 import pytest
 
+import hyperforecast
 from hyperforecast.checks import InputError
 from hyperforecast.classifier import GrowingClassifier
 from hyperforecast.device import DeviceFolder, FolderBusy, UpdateStatus, carryover_bundle, cycle, update
@@ -87,6 +88,7 @@ def test_first_and_later_updates(tmp_path, forecasters, method):
         assert entry["settings"] == report.advice.settings.as_dict() == entry["advice"]["settings"]
         assert entry["expected"] == entry["advice"]["expected"]
         assert entry["forecaster"] == forecasters[method].checksum and not entry["overruled"]
+        assert entry["forecaster_version"] == hyperforecast.__version__
         assert entry["descriptors"]["classes_new"] == len(new) and entry["rows"] == 40 * len(labels)
         assert 0 <= entry["achieved"]["old"] <= 1 and entry["operations"] > 0 and entry["seconds"] > 0
         assert datetime.fromisoformat(entry["time"]).utcoffset().total_seconds() == 0
@@ -111,6 +113,11 @@ def test_achieved_is_measured_on_rows_never_trained_on(started, forecasters):
     assert achieved["new"] == pytest.approx(np.mean(by_class[3:]))
     assert achieved["all"] == pytest.approx(np.mean(by_class))
     assert achieved["old_before"] == pytest.approx(np.mean(before.best_check_accuracy))
+    by_class_told = report.entry["by_class"]
+    assert by_class_told["class"] == report.carryover.classes.tolist() and by_class_told["check_rows"] == [8] * 5
+    assert by_class_told["arrived"] == [0, 0, 0, 40, 40] and by_class_told["before"][3:] == [None, None]
+    np.testing.assert_allclose(by_class_told["after"], by_class, atol=1e-4)
+    np.testing.assert_allclose(by_class_told["before"][:3], before.best_check_accuracy, atol=1e-4)
     exemplars = report.carryover.exemplars.Z
     assert not {row.tobytes() for row in rows.Z} & {row.tobytes() for row in exemplars}
 
