@@ -27,7 +27,7 @@ def records(tmp_path_factory, demo_small):
     folder = tmp_path_factory.mktemp("records")
     (folder / "streams.toml").write_text(STREAMS)
     definitions = demo_small + load_streams(folder / "streams.toml")
-    gather(definitions, folder / "some.sqlite", methods=("wa", "ewc"), space_filled=16, proposed=8)
+    gather(definitions, folder / "some.sqlite", methods=("wa", "ewc"), attempts=(16, 0, 8))
     return RecordsFile(folder / "some.sqlite")
 
 

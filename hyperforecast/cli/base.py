@@ -22,6 +22,8 @@ def add_commands(command):
     add_streams(gather)
     gather.add_argument("--records", required=True, metavar="FILE", help="made if it does not exist")
     gather.add_argument("--method", nargs="+", choices=METHODS, default=list(METHODS), help="(all)")
+    gather.add_argument("--forecaster", nargs="+", default=[], metavar="FILE", help="steer a further round: search around "
+                        "what these advise, one for each method; fitted without the sources that they shall be judged on")
     gather.add_argument("--seed", type=int, default=0, help="(%(default)s)")
     add_workers(gather)
 
@@ -95,9 +97,11 @@ def _settings_cells(settings):
 def _gather(options):
     from hyperforecast.workshop.gathering import RecordsFile, gather
 
-    streams = definitions(options.streams)
+    streams, forecasters = definitions(options.streams), _by_method(options.forecaster)
+    if forecasters and set(options.method) - set(forecasters):
+        raise InputError("--forecaster", "must name one for each method", ", ".join(forecasters), "or name --method")
     n_run = gather(streams, options.records, methods=options.method, seed=checked_seed(options),
-                   workers=checked_workers(options), progress=progress)
+                   workers=checked_workers(options), forecasters=forecasters, progress=progress)
     counts = RecordsFile(options.records).counts()
     names = ("method", "source", "trajectories", "boundaries", "attempts")
     say(options, {"run": n_run, "records": [dict(zip(names, row)) for row in counts]},
@@ -152,19 +156,25 @@ def _search(options):
 
 
 def _contest(options):
-    from hyperforecast.forecasting import load_forecaster
     from hyperforecast.workshop.contest import as_text, run_contest, summarize
 
+    contest = run_contest(definitions(options.streams), _by_method(options.forecaster), options.result, kind=options.kind,
+                          workers=checked_workers(options), progress=progress)
+    summary = summarize(contest)
+    say(options, summary, [as_text(summary), f"Result file: {options.result}"])
+
+
+def _by_method(paths):
+    """Return {method: Forecaster} of forecaster files."""
+    from hyperforecast.forecasting import load_forecaster
+
     forecasters = {}
-    for path in options.forecaster:
+    for path in paths:
         forecaster = load_forecaster(path)
         if forecaster.method in forecasters:
             raise InputError("--forecaster", "must name one file for each method", f"two for {forecaster.method}")
         forecasters[forecaster.method] = forecaster
-    contest = run_contest(definitions(options.streams), forecasters, options.result, kind=options.kind,
-                          workers=checked_workers(options), progress=progress)
-    summary = summarize(contest)
-    say(options, summary, [as_text(summary), f"Result file: {options.result}"])
+    return forecasters
 
 
 def _report(options):

@@ -12,6 +12,30 @@ def check_accuracy_old(view):
 
 
 @descriptor("memory")
+def check_probability_old(view):
+    """Mean probability now of the right class on check rows of old classes, every class alike. Unit: probability.
+
+    It varies less from row to row than the accuracy does, and check rows are few.
+    """
+    return _mean(view.check_probability)
+
+
+@descriptor("memory")
+def exemplar_accuracy_old(view):
+    """Accuracy now on exemplars of old classes, every class alike; they were trained on. Unit: share."""
+    return _mean(view.exemplar_accuracy)
+
+
+@descriptor("memory")
+def simulated_accuracy_old(view):
+    """Accuracy now on rows drawn from Gaussians with the carried class means and variances. Unit: share.
+
+    As many rows as one likes, at the price of features that vary independently.
+    """
+    return view.simulated_accuracy
+
+
+@descriptor("memory")
 def forgetting(view):
     """Best accuracy ever on the check rows of each old class minus the accuracy now, mean over classes. Unit: share.
 

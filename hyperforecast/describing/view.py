@@ -8,8 +8,13 @@ from hyperforecast.learning import accuracies
 
 # Costly descriptors work on at most this many rows of the increment, and as many old ones.
 MOST_ROWS = 500
-# The leave-one-out probe inverts a matrix of this many rows.
-MOST_PROBE_ROWS = 240
+# Leave-one-out probes see at most this many features, or this many that bend.
+MOST_PROBE_FEATURES = 192
+FOURIER_FEATURES = 128
+# Rows drawn from class summaries.
+SIMULATED = 400
+# Ridge penalty, over the mean squared length of a feature.
+PROBE_PENALTY = 0.05
 
 
 class BoundaryView:
@@ -45,6 +50,37 @@ class BoundaryView:
             return np.empty(0)
         rows = boundary.old_check_rows
         return accuracies(self.trainer, boundary.carryover.head, rows.Z, rows.y, boundary.n_old)
+
+    @cached_property
+    def check_probability(self):
+        """Probability now of the right class, mean over the check rows of each old class, (O,); NaN without."""
+        boundary = self.boundary
+        if boundary.carryover is None:
+            return np.empty(0)
+        rows = boundary.old_check_rows
+        scores = self.trainer.class_scores(boundary.carryover.head, rows.Z)
+        scores = np.exp(scores - scores.max(axis=1, keepdims=True, initial=-np.inf))
+        right = scores[np.arange(len(rows)), rows.y] / scores.sum(axis=1)
+        return np.bincount(rows.y, right, boundary.n_old) / np.bincount(rows.y, minlength=boundary.n_old)
+
+    @cached_property
+    def exemplar_accuracy(self):
+        """Accuracy now on (at most MOST_ROWS) exemplars of each old class, (O,); NaN for a class without."""
+        boundary = self.boundary
+        if boundary.carryover is None or not boundary.plan.rehearses:
+            return np.empty(0)
+        return accuracies(self.trainer, boundary.carryover.head, self.old_rows.Z, self.old_rows.y, boundary.n_old)
+
+    @cached_property
+    def simulated_accuracy(self):
+        """Accuracy now on SIMULATED rows drawn from the class summaries, every old class alike."""
+        if self.summaries is None:
+            return np.nan
+        n_old = self.boundary.n_old
+        y = np.arange(SIMULATED) % n_old
+        noise = self._rng.standard_normal((len(y), self.boundary.n_features), dtype=np.float32)
+        Z = self.summaries.mean[y] + np.sqrt(self.summaries.variance[y]) * noise
+        return np.nanmean(accuracies(self.trainer, self.boundary.carryover.head, Z, y, n_old))
 
     @cached_property
     def old_rows(self):
@@ -131,29 +167,65 @@ class BoundaryView:
         return squared_distances(self.sample[0], self.old_means).min(axis=1)
 
     @cached_property
-    def probe(self):
-        """Leave-one-out hits of a ridge classifier on sampled and old rows: (hits (m,), is_old (m,)).
+    def probe_rows(self):
+        """(rows (m, d), place of each row's class (m,), whether it is an old row (m,)): the sample and the old rows."""
+        old, (Z, y) = self.old_rows, self.sample
+        place = np.unique(np.concatenate([y, old.y]), return_inverse=True)[1]
+        return np.concatenate([Z, old.Z]), place, np.arange(len(place)) >= len(y)
 
-        Ridge regression on one-hot labels has leave-one-out residuals r_i / (1 - h_ii), h the hat matrix; both kinds of
-        rows are drawn to half of MOST_PROBE_ROWS and weigh alike. Hastie, Tibshirani & Friedman 2009, section 7.10,
-        from memory.
+    @cached_property
+    def linear_probe(self):
+        """Leave-one-out accuracy of a linear ridge classifier, see `_ridge_hits`: (on new rows, on old rows)."""
+        rows, place, is_old = self.probe_rows
+        if rows.shape[1] > MOST_PROBE_FEATURES:
+            # A random projection keeps distances (Johnson & Lindenstrauss 1984).
+            rows = rows @ self._directions(rows.shape[1], MOST_PROBE_FEATURES) / np.float32(np.sqrt(rows.shape[1]))
+        return _mean_hits(_ridge_hits(rows, place), place, is_old)
+
+    @cached_property
+    def kernel_probe(self):
+        """The same in random Fourier features of the Gaussian kernel: what a head that bends boundaries can reach.
+
+        Rahimi & Recht 2007, "Random features for large-scale kernel machines", from memory: sqrt(2 / D) cos(w x + b),
+        w normal with the inverse of the kernel's width, b uniform. The width is that of the rows around their mean.
         """
-        old = self.old_rows
-        Z, y = self.sample
-        half = MOST_PROBE_ROWS // 2 if len(old) else MOST_PROBE_ROWS
-        new_rows = self._rng.permutation(len(y))[:half]
-        old_rows = self._rng.permutation(len(old))[:half]
-        rows = np.concatenate([Z[new_rows], old.Z[old_rows]])
-        labels = np.concatenate([y[new_rows], old.y[old_rows]])
-        codes, place = np.unique(labels, return_inverse=True)
-        wanted = (place[:, None] == np.arange(len(codes))) * np.float32(2) - np.float32(1)
-        gram = rows @ rows.T
-        gram += np.float32(1e-6) + gram.mean()
-        penalty = np.float32(0.1 * np.trace(gram) / len(rows))
-        hat = gram @ np.linalg.inv(gram + penalty * np.eye(len(rows), dtype=np.float32))
-        leverage = np.clip(np.diag(hat), 0, 0.999)[:, None]
-        left_out = wanted - (wanted - hat @ wanted) / (1 - leverage)
-        return left_out.argmax(axis=1) == place, np.arange(len(rows)) >= len(new_rows)
+        rows, place, is_old = self.probe_rows
+        width = np.sqrt(rows.var(axis=0).sum()) + np.float32(1e-6)
+        directions = self._directions(rows.shape[1], FOURIER_FEATURES) / width
+        phase = self._rng.uniform(0, 2 * np.pi, FOURIER_FEATURES).astype(np.float32)
+        return _mean_hits(_ridge_hits(np.cos(rows @ directions + phase), place), place, is_old)
+
+    def _directions(self, n_features, count):
+        return self._rng.standard_normal((n_features, count), dtype=np.float32)
+
+
+def _ridge_hits(rows, place):
+    """Return whether a ridge classifier that was fitted without a row gets its class, for each row (m,).
+
+    Ridge regression on one-hot labels, every class weighing alike, has leave-one-out residuals r_i / (1 - h_ii), h the
+    hat matrix of the weighted rows. Hastie, Tibshirani & Friedman 2009, section 7.10, from memory.
+    """
+    count = np.bincount(place)
+    weight = np.sqrt(len(place) / (len(count) * count[place])).astype(np.float32)[:, None]
+    wanted = (place[:, None] == np.arange(len(count))) * np.float32(2) - np.float32(1)
+    design = np.hstack([rows - rows.mean(axis=0), np.ones((len(rows), 1), np.float32)]) * weight
+    gram = design.T @ design
+    penalty = np.float32(PROBE_PENALTY * np.trace(gram) / len(gram) + 1e-6)
+    spread = design @ np.linalg.inv(gram + penalty * np.eye(len(gram), dtype=np.float32))
+    leverage = np.clip((spread * design).sum(axis=1), 0, 0.999)[:, None]
+    fitted = spread @ (design.T @ (wanted * weight))
+    # Residuals of the weighted rows; the weight of a row does not change which output is largest.
+    left_out = wanted * weight - (wanted * weight - fitted) / (1 - leverage)
+    return left_out.argmax(axis=1) == place
+
+
+def _mean_hits(hits, place, is_old):
+    """Return the share of hits among new rows and among old ones, every class alike; NaN where there are no rows."""
+    def mean(rows):
+        count = np.bincount(place[rows])
+        return (np.bincount(place[rows], hits[rows])[count > 0] / count[count > 0]).mean() if rows.any() else np.nan
+
+    return mean(~is_old), mean(is_old)
 
 
 def squared_distances(A, B):

@@ -39,7 +39,7 @@ def forecasters(tmp_path_factory):
         definition = StreamDefinition(family, f"synthetic_{family}", family, 0, increments=3, classes=6,
                                       raw_dimension=6, rows_per_class=20)
         for method in METHODS:
-            records.store(run_trajectory(definition, method, seed=0, space_filled=16, proposed=0))
+            records.store(run_trajectory(definition, method, seed=0, attempts=(16, 0, 0)))
     return {method: fit_forecaster(load_dataset(records, method), recipe={}) for method in METHODS}
 
 

@@ -55,7 +55,7 @@ def definitions(tmp_path_factory):
 def gathered(foreign, definitions, tmp_path_factory):
     """A `RecordsFile` of two sources, gathered with the trainer."""
     path = tmp_path_factory.mktemp("foreign") / "records.sqlite"
-    gather(definitions[:2], path, methods=("wa",), space_filled=16, proposed=8, trainer=foreign)
+    gather(definitions[:2], path, methods=("wa",), attempts=(16, 0, 8), trainer=foreign)
     return RecordsFile(path)
 
 

@@ -24,7 +24,7 @@ from hyperforecast.workshop.gathering import (
 
 DEMO_SMALL = pathlib.Path(__file__).parents[2] / "bench_streams" / "demo_small.toml"
 SPACE_FILLED, PROPOSED = 6, 3
-FEW = {"space_filled": SPACE_FILLED, "proposed": PROPOSED}
+FEW = {"attempts": (SPACE_FILLED, 0, PROPOSED)}
 
 
 def content(path):
@@ -120,7 +120,7 @@ def dumps(*arguments, **options):
     return json.dumps(*arguments, **options)
 
 records.json = types.SimpleNamespace(dumps=dumps)
-gather(load_streams(sys.argv[1]), sys.argv[2], methods={methods}, space_filled={space_filled}, proposed={proposed})
+gather(load_streams(sys.argv[1]), sys.argv[2], methods={methods}, attempts={attempts})
 """.format(methods=METHODS, **FEW)
 
 
@@ -142,7 +142,7 @@ def test_a_gathering_that_is_killed_goes_on_where_it_was(gathered, demo_small, t
 
 def test_descriptors_are_known_before_any_attempt(demo_small):
     """The attempts made at a boundary leave no trace in its descriptors."""
-    few, many = (run_trajectory(demo_small[0], "lwf", seed=0, space_filled=n, proposed=0).boundaries[0] for n in (2, 7))
+    few, many = (run_trajectory(demo_small[0], "lwf", seed=0, attempts=(n, 0, 0)).boundaries[0] for n in (2, 7))
     assert (len(few.attempts), len(many.attempts)) == (2, 7)
     np.testing.assert_equal(few.descriptors, many.descriptors)
 
@@ -156,13 +156,13 @@ def test_a_trainer_of_ones_own_does_the_training(demo_small):
             return super().learn(jobs, seed=seed)
 
     trainer = Noted()
-    run_trajectory(demo_small[0], "ewc", seed=0, space_filled=3, proposed=2, trainer=trainer)
+    run_trajectory(demo_small[0], "ewc", seed=0, attempts=(3, 0, 2), trainer=trainer)
     # The first increment, five attempts at each of two boundaries, and two of the first followed over one more.
     assert trainer.jobs == 1 + 5 + 5 + 4
 
 
 def some_trajectory(**changes):
-    boundary = BoundaryRecord(1, 2, 1, 10, {"rows": 5.0, "missing": np.nan}, [
+    boundary = BoundaryRecord(1, 2, 1, 10, 30, {"rows": 5.0, "missing": np.nan}, [
         AttemptRecord(Settings(0.1, 1.0, 3), "tpe", 0.5, 0.25, False, 1e6, 0.75, None),
         AttemptRecord(Settings(0.2, 2.0, 4), "tpe", 0.0, 1.0, True, 1e6)])
     return Trajectory(**{"key": "a", "stream": "s", "source": "o", "seed": 3, "method": "wa", "plan": {"passes": 2},
@@ -245,7 +245,7 @@ def foreign_sqlite(path):
 def other_version(path):
     RecordsFile(path, create=True)
     with sqlite3.connect(path) as connection:
-        connection.execute("PRAGMA user_version = 2")
+        connection.execute("PRAGMA user_version = 1")
     connection.close()
 
 
@@ -264,7 +264,7 @@ def truncated(path):
     (lambda path: path.write_text("method,source\nwa,digits\n" * 99), "must be a readable, undamaged records file"),
     (lambda path: path.write_bytes(b"SQLite format 3\0" + b"\xff" * 5000), "must be a readable, undamaged records"),
     (lambda path: path.mkdir(), "must be a readable, undamaged records file"), (truncated, "undamaged records file"),
-    (other_version, "must be of version 1; received version 2; use the program's version that wrote it"),
+    (other_version, "must be of version 2; received version 1; use the program's version that wrote it"),
 ], ids=["missing", "foreign", "empty", "text", "header only", "folder", "truncated", "version"])
 def test_other_files_are_refused(make, rule, tmp_path):
     path = tmp_path / "a.sqlite"

@@ -9,8 +9,8 @@ from hyperforecast.workshop.gathering.records import RecordsFile
 from hyperforecast.workshop.gathering.trajectories import run_trajectory, trajectory_key
 
 
-def gather(definitions, records_path, *, methods, seed=0, workers=1, space_filled=32, proposed=16, trainer=None,
-           progress=None):
+def gather(definitions, records_path, *, methods, seed=0, workers=1, attempts=None, forecasters=None,
+           trainer=None, progress=None):
     """Run the trajectories that a records file does not hold yet; return how many were run.
 
     Parameters
@@ -22,19 +22,21 @@ def gather(definitions, records_path, *, methods, seed=0, workers=1, space_fille
     seed : int
     workers : int
         Processes of the joblib backend that is active; the records do not depend on it, seconds aside.
-    space_filled, proposed : int
-        Attempts of each boundary from a space-filling design, then from TPE.
+    attempts : (int, int, int), optional
+        See `run_trajectory`.
+    forecasters : dict of str to Forecaster, optional
+        Those that steer this round, by method.
     trainer : Trainer, optional
     progress : callable, optional
         Called with a `Progress` after each trajectory.
     """
     records = RecordsFile(records_path, create=True)
-    stored = records.stored()
+    stored, forecasters = records.stored(), forecasters or {}
     # In random order, methods innermost: a run that is stopped has seen all kinds of streams and all methods.
     order = np.random.default_rng(seed).permutation(len(definitions))
     todo = [(definitions[place], method) for place in order for method in methods
-            if trajectory_key(definitions[place], method, seed) not in stored]
-    tasks = (joblib.delayed(_run)(definition, method, seed, space_filled, proposed, trainer)
+            if trajectory_key(definitions[place], method, seed, forecasters.get(method)) not in stored]
+    tasks = (joblib.delayed(_run)(definition, method, seed, attempts, forecasters.get(method), trainer)
              for definition, method in todo)
     total = len(definitions) * len(methods)
     started = time.perf_counter()
@@ -46,8 +48,8 @@ def gather(definitions, records_path, *, methods, seed=0, workers=1, space_fille
     return len(todo)
 
 
-def _run(definition, method, seed, space_filled, proposed, trainer):
-    return run_trajectory(definition, method, seed=seed, space_filled=space_filled, proposed=proposed, trainer=trainer)
+def _run(definition, method, seed, attempts, forecaster, trainer):
+    return run_trajectory(definition, method, seed=seed, attempts=attempts, forecaster=forecaster, trainer=trainer)
 
 
 class Progress:

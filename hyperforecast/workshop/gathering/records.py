@@ -16,7 +16,7 @@ from hyperforecast.settings import Settings
 from hyperforecast.storage import parse_json
 
 APPLICATION = 0x68666331
-VERSION = 1
+VERSION = 2
 SCHEMA = """
 CREATE TABLE trajectories (
     trajectory TEXT PRIMARY KEY, stream TEXT NOT NULL, source TEXT NOT NULL, seed INTEGER NOT NULL,
@@ -24,7 +24,8 @@ CREATE TABLE trajectories (
 ) WITHOUT ROWID;
 CREATE TABLE boundaries (
     trajectory TEXT NOT NULL REFERENCES trajectories, boundary INTEGER NOT NULL,
-    classes_old INTEGER NOT NULL, classes_new INTEGER NOT NULL, most_kept INTEGER NOT NULL, descriptors TEXT NOT NULL,
+    classes_old INTEGER NOT NULL, classes_new INTEGER NOT NULL, most_kept INTEGER NOT NULL,
+    outcome_rows INTEGER NOT NULL, descriptors TEXT NOT NULL,
     PRIMARY KEY (trajectory, boundary)
 ) WITHOUT ROWID;
 CREATE TABLE attempts (
@@ -60,13 +61,15 @@ class AttemptRecord:
 class BoundaryRecord:
     """A boundary: its number, class counts, exemplars that the memory allows, descriptors, and attempts.
 
-    `classes_new` counts the classes of the outcome `accuracy_new`, `classes_old` those of `accuracy_old`.
+    `classes_new` counts the classes of the outcome `accuracy_new`, `classes_old` those of `accuracy_old`; outcomes are
+    shares of `outcome_rows` rows.
     """
 
     number: int
     classes_old: int
     classes_new: int
     most_kept: int
+    outcome_rows: int
     descriptors: dict
     attempts: list
 
@@ -141,9 +144,9 @@ class RecordsFile:
                 return
             for boundary in trajectory.boundaries:
                 described = {name: None if np.isnan(value) else value for name, value in boundary.descriptors.items()}
-                connection.execute("INSERT INTO boundaries VALUES (?, ?, ?, ?, ?, ?)", (
+                connection.execute("INSERT INTO boundaries VALUES (?, ?, ?, ?, ?, ?, ?)", (
                     trajectory.key, boundary.number, boundary.classes_old, boundary.classes_new, boundary.most_kept,
-                    json.dumps(described)))
+                    boundary.outcome_rows, json.dumps(described)))
                 connection.executemany("INSERT INTO attempts VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)", [(
                     trajectory.key, boundary.number, place, one.strategy, one.settings.learning_rate,
                     one.settings.regularization, one.settings.kept_per_class, one.accuracy_old, one.accuracy_new,
@@ -156,8 +159,8 @@ class RecordsFile:
                 "SELECT * FROM trajectories WHERE ? IS NULL OR method = ? ORDER BY trajectory", (method, method))
             for key, stream, source, seed, method_, plan, seconds in chosen.fetchall():
                 boundaries = []
-                for number, old, new, most_kept, described in connection.execute(
-                        "SELECT boundary, classes_old, classes_new, most_kept, descriptors FROM boundaries"
+                for number, old, new, most_kept, rows, described in connection.execute(
+                        "SELECT boundary, classes_old, classes_new, most_kept, outcome_rows, descriptors FROM boundaries"
                         " WHERE trajectory = ? ORDER BY boundary", (key,)).fetchall():
                     attempts = [
                         AttemptRecord(Settings(rate, strength, kept), strategy, acc_old, acc_new, bool(diverged), ops, *later)
@@ -167,7 +170,7 @@ class RecordsFile:
                             (key, number))]
                     descriptors = {name: np.nan if value is None else value
                                    for name, value in self._mapping(described).items()}
-                    boundaries.append(BoundaryRecord(number, old, new, most_kept, descriptors, attempts))
+                    boundaries.append(BoundaryRecord(number, old, new, most_kept, rows, descriptors, attempts))
                 yield Trajectory(key, stream, source, seed, method_, self._mapping(plan), seconds, boundaries)
 
     def _mapping(self, text):

@@ -1,4 +1,8 @@
-"""One trajectory: a stream walked through with one plan, a search at every boundary that has old classes."""
+"""One trajectory: a stream walked through with one plan, a search at every boundary that has old classes.
+
+In a first round the search fills the space of settings. In a round steered by a forecaster it looks around what that
+advises, and the walk mostly follows the advice, so that records are dense where advice will fall.
+"""
 
 import hashlib
 import time
@@ -6,17 +10,23 @@ import time
 import numpy as np
 
 from hyperforecast.describing import describe
-from hyperforecast.forecasting import opening_settings
+from hyperforecast.forecasting import advise_settings, opening_settings
 from hyperforecast.increments import Increment
 from hyperforecast.learning import HeadTrainer, Job, close_boundary, open_boundary, standardize
 from hyperforecast.settings import Plan, Settings, SettingsBox
 from hyperforecast.workshop.gathering.records import AttemptRecord, BoundaryRecord, Trajectory
 from hyperforecast.workshop.searching import BoundarySearch, class_codes, run_search, space_filling
 
-# Settings of the boundaries that follow, where later outcomes are recorded.
+# Settings of the boundaries that follow, where later outcomes are recorded and no forecaster advises them.
 # About the best constants of a first gathering over 28 synthetic streams.
 REFERENCE = {"ewc": (3e-4, 100.0, None), "lwf": (0.01, 0.4, None), "icarl": (0.02, 0.1, 20), "wa": (0.04, 0.01, 20)}
 BEST_FOLLOWED, OTHERS_FOLLOWED = 4, 4
+# Attempts of a boundary from a space-filling design, around the forecaster's advice, and from TPE: in a first round, and
+# in a steered one.
+FIRST_ROUND, STEERED_ROUND = (32, 0, 16), (8, 16, 8)
+# Width, in the unit cube, of the neighbourhood of the advice, and how often a steered walk follows it.
+AROUND = 0.06
+FOLLOWS = 0.6
 # Attempts trained side by side, and TPE's proposals made at once.
 SIDE_BY_SIDE = 16
 # Mean cost of an attempt is capped: plans that would spend more operations get fewer passes.
@@ -50,7 +60,7 @@ def draw_plan(method, stream, rng):
     return Plan(method, hidden, passes, batch_size, max(per_class, 1) * n_classes)
 
 
-def run_trajectory(definition, method, *, seed, space_filled=32, proposed=16, trainer=None):
+def run_trajectory(definition, method, *, seed, attempts=None, forecaster=None, trainer=None):
     """Walk through a stream; return the `Trajectory` of its searches.
 
     Parameters
@@ -58,21 +68,26 @@ def run_trajectory(definition, method, *, seed, space_filled=32, proposed=16, tr
     definition : StreamDefinition
     method : str
     seed : int
-        With the definition's key and the method it determines everything.
-    space_filled, proposed : int
-        Attempts of each boundary from a space-filling design, then from TPE.
+        With the definition's key, the method and the forecaster it determines everything.
+    attempts : (int, int, int), optional
+        Attempts of each boundary from a space-filling design, around the forecaster's advice, and from TPE; by default
+        `FIRST_ROUND`, or `STEERED_ROUND` with a forecaster.
+    forecaster : Forecaster, optional
+        Steers the round: the search looks around its advice, the walk mostly follows it, and it is the reference policy
+        of later outcomes.
     trainer : Trainer, optional
         The built-in one by default.
 
     Notes
     -----
-    The walk goes on from the best attempt, or by chance from another good one, so that later boundaries are met by
-    models of many kinds.
+    A walk that does not follow advice goes on from the best attempt, or by chance from another good one, so that later
+    boundaries are met by models of many kinds.
     """
     started = time.perf_counter()
+    attempts = attempts or (STEERED_ROUND if forecaster else FIRST_ROUND)
     trainer = trainer or HeadTrainer()
     stream = definition.build()
-    key = trajectory_key(definition, method, seed)
+    key = trajectory_key(definition, method, seed, forecaster)
     rng = np.random.default_rng(derived_seed(key))
     plan = draw_plan(method, stream, rng)
     carryover, boundaries = None, []
@@ -82,19 +97,33 @@ def run_trajectory(definition, method, *, seed, space_filled=32, proposed=16, tr
         if carryover is None:
             attempt = trainer.learn([Job(boundary, opening_settings(plan))], seed=step_seed)[0]
         else:
+            described = describe(trainer, boundary, seed=step_seed)
             search = _search_at(trainer, boundary, stream, t, step_seed)
-            strategies = _search(search, SettingsBox(method, boundary.most_kept), space_filled, proposed, step_seed)
-            later = _follow(trainer, stream, search, _followed(search.outcomes, rng), t, key)
-            boundaries.append(_record(search, strategies, later, describe(trainer, boundary, seed=step_seed)))
-            attempt = search.attempts[_continued(search.outcomes, rng)]
+            around = _around(forecaster, described, boundary, attempts[1], rng)
+            strategies = _search(search, around, attempts, step_seed)
+            later = _follow(trainer, stream, search, _followed(search.outcomes, rng), t, key, forecaster)
+            boundaries.append(_record(search, strategies, later, described))
+            attempt = search.attempts[_continued(search.outcomes, strategies, rng)]
         carryover = close_boundary(trainer, boundary, attempt, seed=step_seed)
     return Trajectory(key, definition.name, definition.source, definition.seed, method, plan.as_dict(),
                       time.perf_counter() - started, boundaries)
 
 
-def trajectory_key(definition, method, seed):
+def trajectory_key(definition, method, seed, forecaster=None):
     """Return the text that identifies a trajectory in a records file."""
-    return f"{definition.key}|{method}|{seed}"
+    key = f"{definition.key}|{method}|{seed}"
+    return f"{key}|{forecaster.checksum[:12]}" if forecaster else key
+
+
+def _around(forecaster, described, boundary, count, rng):
+    """Return `count` settings: those that a forecaster advises, ranked, then others near them; none without one."""
+    if forecaster is None:
+        return []
+    box = SettingsBox(boundary.plan.method, boundary.most_kept)
+    ranked = advise_settings(forecaster, described, box).ranked[:count]
+    points = box.to_unit(ranked)[rng.integers(0, len(ranked), count - len(ranked))]
+    near = np.clip(points + AROUND * rng.standard_normal(points.shape), 0, 1)
+    return [*ranked, *(box.from_unit(near) if len(near) else ())]
 
 
 def _search_at(trainer, boundary, stream, t, seed):
@@ -110,10 +139,11 @@ def _followed(outcomes, rng):
     return [*order[:BEST_FOLLOWED], *others]
 
 
-def _follow(trainer, stream, search, places, t, key):
+def _follow(trainer, stream, search, places, t, key, forecaster):
     """Return {place: [accuracy on all classes one boundary later, two later]}, as far as the stream goes.
 
-    Later settings come from the reference policy, so that what differs is what the attempt left behind.
+    Later settings come from the reference policy, the same for all, so that what differs is what the attempt left
+    behind: the forecaster's advice after the best attempt, or fixed settings without one.
     """
     later = {int(place): [] for place in places}
     attempts = [search.attempts[place] for place in places]
@@ -124,19 +154,29 @@ def _follow(trainer, stream, search, places, t, key):
                    for boundary, attempt in zip(boundaries, attempts)]
         seed = derived_seed(key, s)
         boundaries = [open_boundary(one.plan, one, increment, seed=seed) for one in carried]
-        attempts = trainer.learn([Job(one, reference_settings(one.plan)) for one in boundaries], seed=seed)
+        settings = _reference(trainer, boundaries[0], forecaster, seed)
+        attempts = trainer.learn([Job(one, settings) for one in boundaries], seed=seed)
         judged = _search_at(trainer, boundaries[0], stream, s, seed)
         for outcomes, attempt in zip(later.values(), attempts):
             outcomes.append(judged.outcome(attempt, judged.Z, judged.y).all)
     return later
 
 
-def _search(search, box, space_filled, proposed, seed):
+def _reference(trainer, boundary, forecaster, seed):
+    if forecaster is None:
+        return reference_settings(boundary.plan)
+    box = SettingsBox(boundary.plan.method, boundary.most_kept)
+    return advise_settings(forecaster, describe(trainer, boundary, seed=seed), box).settings
+
+
+def _search(search, around, attempts, seed):
     """Make the attempts of a boundary; return the strategy behind each."""
-    design = box.from_unit(space_filling(space_filled, box.n_dimensions, seed=seed))
-    run_search(search.evaluate, box, strategy="tpe", attempts=space_filled + proposed, batch=SIDE_BY_SIDE,
+    boundary, (space_filled, _, proposed) = search.boundary, attempts
+    box = SettingsBox(boundary.plan.method, boundary.most_kept)
+    design = [*around, *box.from_unit(space_filling(space_filled, box.n_dimensions, seed=seed))]
+    run_search(search.evaluate, box, strategy="tpe", attempts=len(design) + proposed, batch=SIDE_BY_SIDE,
                warm_starts=design, seed=seed)
-    return ["space_filling"] * space_filled + ["tpe"] * proposed
+    return ["advice"] * len(around) + ["space_filling"] * space_filled + ["tpe"] * proposed
 
 
 def _record(search, strategies, later, descriptors):
@@ -147,11 +187,15 @@ def _record(search, strategies, later, descriptors):
         attempts.append(AttemptRecord(attempt.settings, strategy, outcome.old, outcome.new, outcome.diverged,
                                       outcome.operations, after_one, after_two))
     return BoundaryRecord(boundary.number, boundary.n_old, boundary.n_classes - boundary.n_old, boundary.most_kept,
-                          descriptors, attempts)
+                          len(search.y), descriptors, attempts)
 
 
-def _continued(outcomes, rng):
-    """Place of the attempt to go on from: the best half of the time, else one of the best quarter."""
+def _continued(outcomes, strategies, rng):
+    """Place of the attempt to go on from: what was advised, if that was searched around, most of the time; else the
+    best half of the time, else one of the best quarter.
+    """
+    if strategies[0] == "advice" and rng.random() < FOLLOWS:
+        return 0
     order = np.argsort([-one.all for one in outcomes], kind="stable")
     return int(order[0] if rng.random() < 0.5 else order[rng.integers(max(len(order) // 4, 1))])
 

@@ -9,13 +9,13 @@ LATER_CLASSES = (1, 12)
 MOST_RETURNING = 3
 
 
-def most_classes(n_increments):
-    """Return how many classes `n_increments` increments can hold."""
-    return FIRST_CLASSES[1] + LATER_CLASSES[1] * (n_increments - 1)
+def most_classes(n_increments, largest=None):
+    """Return how many classes `n_increments` increments can hold, later ones `largest` each (12 by default)."""
+    return FIRST_CLASSES[1] + (largest or LATER_CLASSES[1]) * (n_increments - 1)
 
 
-def deal_classes(labels, n_increments, rng, *, recurring=0.0):
-    """Deal labels to increments at random: 2 to 10 to the first, 1 to 12 to each later one.
+def deal_classes(labels, n_increments, rng, *, recurring=0.0, largest=None):
+    """Deal labels to increments at random: 2 to 10 to the first, 1 to `largest` (12 by default) to each later one.
 
     Parameters
     ----------
@@ -38,10 +38,10 @@ def deal_classes(labels, n_increments, rng, *, recurring=0.0):
     if len(labels) < n_increments + 1:
         raise InputError("increments", f"must be at most {len(labels) - 1}, with {len(labels)} classes", n_increments)
     sizes = np.array([FIRST_CLASSES[0]] + [LATER_CLASSES[0]] * (n_increments - 1))
-    full = np.array([FIRST_CLASSES[1]] + [LATER_CLASSES[1]] * (n_increments - 1))
+    full = np.array([FIRST_CLASSES[1]] + [largest or LATER_CLASSES[1]] * (n_increments - 1))
     # From very uneven increments to even ones.
     weights = rng.dirichlet(np.full(n_increments, rng.choice([0.7, 3.0, 100.0])))
-    for _ in range(min(len(labels), most_classes(n_increments)) - sizes.sum()):
+    for _ in range(min(len(labels), most_classes(n_increments, largest)) - sizes.sum()):
         open_weights = np.where(sizes < full, weights + 1e-9, 0)
         sizes[rng.choice(n_increments, p=open_weights / open_weights.sum())] += 1
     order = [labels[at] for at in rng.permutation(len(labels))[:sizes.sum()]]

@@ -3,7 +3,7 @@
 Keys of a table: `name`; `source` (an open set or a synthetic family) or `file`
 (rows of one's own, relative to the TOML file); `seeds` or `seed`; `increments`
 (lists of labels, or how many, the seed then deals the classes); `classes`,
-`recurring`, `rows_per_class`, `features`, `dimension`; for synthetic families
+`recurring`, `largest_increment`, `rows_per_class`, `features`, `dimension`; for synthetic families
 also `raw_dimension`, `separation`, `noise`.
 """
 
@@ -33,8 +33,8 @@ HIGHEST_SEED = 2**32 - 1
 MOST_INCREMENTS = 1000
 
 _SYNTHETIC_KEYS = ("raw_dimension", "separation", "noise")
-_KEYS = ("name", "source", "file", "seeds", "seed", "increments", "classes", "recurring", "rows_per_class", "features",
-         "dimension", *_SYNTHETIC_KEYS)
+_KEYS = ("name", "source", "file", "seeds", "seed", "increments", "classes", "recurring", "largest_increment",
+         "rows_per_class", "features", "dimension", *_SYNTHETIC_KEYS)
 
 
 @dataclass(frozen=True)
@@ -52,7 +52,7 @@ class StreamDefinition:
     seed : int
     increments : tuple of tuples of labels, or int
         Labels of each increment, or the number of increments; None: the seed draws it (synthetic).
-    classes, rows_per_class, dimension, raw_dimension : int or None
+    classes, rows_per_class, dimension, raw_dimension, largest_increment : int or None
     recurring, separation, noise : float or None
     features : str
         See `Stream` and `draw_synthetic`; None: all classes, 100 rows, or drawn (synthetic).
@@ -74,6 +74,7 @@ class StreamDefinition:
     separation: float | None = None
     noise: float | None = None
     content: str = ""
+    largest_increment: int | None = None
     _file: str = field(default="", compare=False, repr=False)
     _where: str = field(default="stream", compare=False, repr=False)
 
@@ -105,7 +106,7 @@ class StreamDefinition:
             draw = draw_synthetic(
                 self.origin, self.seed, increments=self.increments, classes=self.classes,
                 raw_dimension=self.raw_dimension, rows_per_class=self.rows_per_class, separation=self.separation,
-                noise=self.noise, recurring=self.recurring)
+                noise=self.noise, recurring=self.recurring, largest_increment=self.largest_increment)
             collection, increments, rows_per_class = draw.collection, draw.increments, draw.rows_per_class
             sensor = draw.sensor
         else:
@@ -123,7 +124,8 @@ class StreamDefinition:
             if self.classes > len(labels):
                 raise InputError("classes", f"must be at most the {len(labels)} of the source", self.classes)
             labels = [labels[at] for at in rng.permutation(len(labels))[:self.classes]]
-        return deal_classes(labels, self.increments, rng, recurring=self.recurring or 0.0)
+        return deal_classes(labels, self.increments, rng, recurring=self.recurring or 0.0,
+                            largest=self.largest_increment)
 
 
 @lru_cache(maxsize=1)
@@ -180,7 +182,8 @@ def _read_table(table, path, where):
         origin = check_choice("source", table["source"], (*FAMILIES, *OPEN_SETS))
         facts.update(origin=origin, source=OPEN_SETS[origin].source if origin in OPEN_SETS else origin)
     synthetic = facts["origin"] in FAMILIES
-    for key, low, high in (("classes", 3, None), ("rows_per_class", 1, 150 if synthetic else None),
+    for key, low, high in (("classes", 3, None), ("largest_increment", 1, None),
+                           ("rows_per_class", 1, 150 if synthetic else None),
                            ("dimension", 1, 65_536), ("raw_dimension", 2, 65_536)):
         if key in table:
             facts[key] = check_whole(key, table[key], low=low, high=high)
@@ -216,7 +219,7 @@ def _check_increments(table, facts, synthetic):
     if isinstance(given, list):
         if synthetic:
             raise InputError("increments", "must be a number: a synthetic family's classes are alike", given)
-        for key in ("classes", "recurring"):
+        for key in ("classes", "recurring", "largest_increment"):
             if key in facts:
                 raise InputError(key, "must be left out where increments are listed", table[key], "remove it")
         for increment in given:
@@ -227,7 +230,7 @@ def _check_increments(table, facts, synthetic):
     if given is None and synthetic:
         return None
     number = check_whole("increments", given, low=2, high=MOST_INCREMENTS, remedy="give a number, or lists of labels")
-    low, high = number + 1, most_classes(number)
+    low, high = number + 1, most_classes(number, facts.get("largest_increment"))
     if "classes" in facts and not low <= facts["classes"] <= high:
         raise InputError("classes", f"must be from {low} to {high} with {number} increments", facts["classes"])
     return number

@@ -45,7 +45,7 @@ class SyntheticDraw:
 
 
 def draw_synthetic(family, seed, *, increments=None, classes=None, raw_dimension=None, rows_per_class=None,
-                   separation=None, noise=None, recurring=None):
+                   separation=None, noise=None, recurring=None, largest_increment=None):
     """Draw a stream's content from a family; what is not given is drawn from the seed.
 
     Parameters
@@ -68,6 +68,8 @@ def draw_synthetic(family, seed, *, increments=None, classes=None, raw_dimension
         that a word is any word.
     recurring : float in [0, 1]
         Probability that an increment also brings back old classes.
+    largest_increment : int, 1 or more
+        Most new classes of an increment after the first (12).
 
     Returns
     -------
@@ -83,17 +85,17 @@ def draw_synthetic(family, seed, *, increments=None, classes=None, raw_dimension
     if increments is None and classes is None:
         increments = drawn_increments
     elif increments is None:
-        fewest = 1 + max(1, -(-(classes - FIRST_CLASSES[1]) // LATER_CLASSES[1]))
+        fewest = 1 + max(1, -(-(classes - FIRST_CLASSES[1]) // (largest_increment or LATER_CLASSES[1])))
         increments = int(np.clip(drawn_increments, fewest, max(fewest, classes - 1)))
     if classes is None:
-        classes = int(np.clip(round(drawn_classes), increments + 1, most_classes(increments)))
+        classes = int(np.clip(round(drawn_classes), increments + 1, most_classes(increments, largest_increment)))
     shape = _Shape(
         classes=classes,
         dimension=round(drawn_dimension) if raw_dimension is None else raw_dimension,
         separation=drawn_separation if separation is None else separation,
         noise=drawn_noise if noise is None else noise)
     dealt = deal_classes(list(range(classes)), increments, rng,
-                         recurring=drawn_recurring if recurring is None else recurring)
+                         recurring=drawn_recurring if recurring is None else recurring, largest=largest_increment)
     made = FAMILIES[family](shape, generator(seed, family, "rows"))
     most_rows = round(drawn_rows) if rows_per_class is None else rows_per_class
     rows = np.maximum(FEWEST_TRAINING, np.round(most_rows * made.share_of_rows)).astype(int)
