@@ -5,11 +5,11 @@ Scale-free coordinates express settings relative to a boundary's own scales
 """
 
 import re
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 
 import numpy as np
 
-from hyperforecast.checks import InputError, check_choice, check_number, check_whole
+from hyperforecast.checks import InputError, check_choice, check_keys, check_number, check_whole
 
 METHODS = ("ewc", "lwf", "icarl", "wa")
 REHEARSAL_METHODS = ("icarl", "wa")
@@ -167,6 +167,12 @@ class SettingsBox:
         """Return the (n, n_dimensions) unit-cube points of a list of `Settings`, clipped to the box."""
         values = np.array([[getattr(one, name) for name in self.names] for one in settings], dtype=np.float64)
         return np.clip((np.log(values.reshape(-1, len(self.names))) - self._low) / self._span, 0.0, 1.0)
+
+
+def completed(given, base, method):
+    """Return checked `Settings`: those that the dict `given` names, the others as in `base`."""
+    check_keys("settings", given, SettingsBox(method).names)
+    return replace(base, **given).checked(method)
 
 
 COORDINATES = (

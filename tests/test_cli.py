@@ -155,6 +155,24 @@ def test_bad_input_is_one_line_and_changes_nothing(capsys, device, deliveries, t
     assert not (tmp_path / "new").exists()
 
 
+def test_advice_is_overruled_with_who_and_why_or_not_at_all(capsys, device, deliveries):
+    update = ["update", "--increment", deliveries[2], "--device", device]
+    for given in (["--by", "shift 2", "--because", "a trial"], ["--settings", "learning_rate=0.01"],
+                  ["--settings", "learning_rate=0.01", "--by", "shift 2"]):
+        assert "all three or none" in refused(capsys, *update, *given)
+    who = ["--by", "shift 2", "--because", "a trial"]
+    for wrong in ("speed=1", "learning_rate=fast", "learning_rate=7", "kept_per_class=2.5"):
+        assert "; received" in refused(capsys, *update, "--settings", wrong, *who)
+    assert main([*update, "--settings", "learning_rate=0.01,kept_per_class=4", *who]) in (0, 3)
+    assert "overruled by shift 2: a trial" in capsys.readouterr().out
+    entry = run(capsys, "history", "--device", device)["updates"][-1]
+    assert entry["overruled"] == {"by": "shift 2", "because": "a trial"}
+    assert (entry["settings"]["learning_rate"], entry["settings"]["kept_per_class"]) == (0.01, 4)
+    assert entry["settings"]["regularization"] == entry["advice"]["settings"]["regularization"]
+    assert main(["history", "--device", device]) == 0
+    assert "update 3: overruled by shift 2: a trial" in capsys.readouterr().out
+
+
 @pytest.mark.parametrize("arguments", [["bogus"], ["advise"], ["gather", "--streams"], ["update", "--method", "none"]])
 def test_a_command_that_cannot_be_read_is_refused(capsys, arguments):
     with pytest.raises(SystemExit, match="2"):

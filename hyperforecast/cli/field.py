@@ -2,7 +2,10 @@
 
 from dataclasses import replace
 
-from hyperforecast.cli.options import add_device, add_forecaster, checked_seed, chosen_forecaster
+from hyperforecast.checks import InputError
+from hyperforecast.cli.options import (
+    add_device, add_forecaster, add_settings, checked_seed, chosen_forecaster, chosen_settings,
+)
 from hyperforecast.cli.text import CAUTION, expected, listed, number, say, settings_lines, short, table
 from hyperforecast.settings import METHODS, Plan
 
@@ -24,6 +27,10 @@ def add_commands(command):
     add_forecaster(update)
     update.add_argument("--dry-run", action="store_true", help="stop after the advice")
     update.add_argument("--seed", type=int, default=0, help="of training (%(default)s)")
+    overrule = update.add_argument_group("overrule the advice: all three together")
+    add_settings(overrule, "train with these")
+    overrule.add_argument("--by", metavar="WHO", help="who decides so, for the history")
+    overrule.add_argument("--because", metavar="WHY", help="why, for the history")
     plan = update.add_argument_group("plan, fixed at the first update")
     for name, default in Plan().as_dict().items():
         kind = int if isinstance(default, int) and name != "memory_limit" else str
@@ -72,6 +79,11 @@ def _update(options):
     from hyperforecast.device import DeviceFolder, update
     from hyperforecast.increments import read_increment
 
+    settings = chosen_settings(options)
+    missing = [f"--{name}" for name in ("settings", "by", "because") if getattr(options, name) is None]
+    if 0 < len(missing) < 3:
+        raise InputError(" and ".join(missing), "must be given with --settings, --by and --because, all three or none",
+                         "nothing", "say who overrules the advice, why, and with what settings")
     folder = DeviceFolder(options.device)
     given = {name: getattr(options, name) for name in PLAN_HELP if getattr(options, name) is not None}
     plan, forecaster, n_features = None, None, None
@@ -82,9 +94,20 @@ def _update(options):
     else:
         plan = Plan(**_plan_arguments(given)).checked()
     increment = read_increment(options.increment, n_features=n_features)
-    report = update(folder, increment, plan=plan, forecaster=forecaster, seed=checked_seed(options), dry_run=options.dry_run)
+    report = update(folder, increment, plan=plan, forecaster=forecaster, settings=settings, by=options.by,
+                    because=options.because, seed=checked_seed(options), dry_run=options.dry_run)
     say(options, report.as_dict(), _update_lines(report))
     return report.status or 0
+
+
+def overruled_lines(entry):
+    """Lines that say who overruled the advice of a history entry, why, and what was advised; none if it stood."""
+    told = entry["overruled"]
+    if not isinstance(told, dict) or told["by"] is None:
+        return []
+    instead = "nothing, it is the first update" if entry["advice"] is None else \
+        f"{listed(entry['advice']['settings'])}, expected {expected(entry['advice']['expected'])}"
+    return [f"overruled by {told['by']}: {told['because']}", f"  advised was {instead}"]
 
 
 def _plan_arguments(given):
@@ -96,6 +119,7 @@ def _plan_arguments(given):
 def _update_lines(report):
     entry = report.entry
     lines = [] if report.advice is None else _advice_lines(report.advice)[:-1]
+    lines += overruled_lines(entry)
     if report.status is None:
         return [*lines, "Dry run: nothing was trained or stored."]
     lines += ["Trained with", *(f"  {name:<18} {value:.4g}" for name, value in entry["settings"].items())]
@@ -107,6 +131,8 @@ def _update_lines(report):
         lines.append(f"  on {entry['acceptance']['rows']} acceptance rows {number(entry['acceptance']['all'])}")
     lines += [f"  rolled back: {reason}" for one in [*entry["earlier_tries"], entry] for reason in one["reasons"]]
     kept = "Kept" if entry["kept"] else "ROLLED BACK"
+    if entry["overruled"] and entry["expected"]:
+        lines.append(f"  expected of these settings  {expected(entry['expected'])}")
     return [*lines, f"{kept}; generation {report.generation} of the device folder, update {entry['number']}.", CAUTION]
 
 
@@ -121,6 +147,7 @@ def _history(options):
     names = ("update", "time", "rows", "new classes", "settings", "expected (90%)", "achieved", "old classes", "outcome")
     lines = [table(names, rows)]
     lines += [f"update {one['number']}: {reason}" for one in generation.history for reason in one["reasons"]]
+    lines += [f"update {one['number']}: {line}" for one in generation.history for line in overruled_lines(one)[:1]]
     lines += [f"update {one['number']}: later {number(outcome['all'])} on {outcome['rows']} rows"
               for one in generation.history for outcome in one.get("outcomes", ())]
     steps = generation.care.steps

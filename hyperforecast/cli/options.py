@@ -2,7 +2,7 @@
 
 import os
 
-from hyperforecast.checks import check_whole
+from hyperforecast.checks import InputError, check_keys, check_whole
 
 
 def add_device(parser):
@@ -31,6 +31,27 @@ def chosen_forecaster(options, method):
     from hyperforecast.forecasting import load_forecaster
 
     return load_forecaster(options.forecaster or method)
+
+
+def add_settings(parser, then):
+    """Name settings of one's own; `then` says what is done with them."""
+    parser.add_argument("--settings", metavar="NAME=VALUE,...", help=f"{then}: learning_rate, regularization, "
+                        "kept_per_class; those left out are as advised")
+
+
+def chosen_settings(options):
+    """Return --settings as a dict, None without."""
+    if options.settings is None:
+        return None
+    settings = {}
+    for part in options.settings.split(","):
+        name, _, value = (text.strip() for text in part.partition("="))
+        check_keys("--settings", [name], ("learning_rate", "regularization", "kept_per_class"))
+        try:
+            settings[name] = int(value) if name == "kept_per_class" else float(value)
+        except ValueError:
+            raise InputError(f"--settings {name}", "must be a number", repr(value)) from None
+    return settings
 
 
 def definitions(paths):

@@ -11,7 +11,8 @@ An entry of the history, a JSON-able dict, tells of one update:
                             null at the first update
     forecaster              checksum of the one that advised, or null
     forecaster_version      version of the program that fitted it, or null
-    overruled               whether settings were given, whatever was advised
+    overruled               null, or {"by", "because"} where settings were given, whatever was advised: who decided so
+                            and why, in their words; what was advised instead stands in `advice`
     settings, expected, diverged, achieved, acceptance, by_class, operations, reasons
                             of the last try: what it was trained with, forecast and achieved (see `update`), the same
                             on the acceptance set or null, and why it was not kept, in words; by_class holds lists of
@@ -43,7 +44,7 @@ from hyperforecast.forecasting import Advice, advise_settings, load_forecaster, 
 from hyperforecast.learning import (
     Carryover, HeadTrainer, accuracies, boundary_seed, close_boundary, open_boundary, standardize, try_settings,
 )
-from hyperforecast.settings import SettingsBox
+from hyperforecast.settings import SettingsBox, completed
 
 # A try is not kept if old classes lose more than this on average, or one of them more than that.
 MOST_LOST = 0.3
@@ -54,6 +55,8 @@ FEWEST_ROWS_OF_CLASS = 4
 NOISE_DEVIATIONS = 2.0
 # Without alternatives, at the first update, the next try is this much slower.
 SLOWER = 0.1
+# Characters of who overruled the advice, and of why.
+LONGEST_TEXT = 1000
 
 
 @dataclass(frozen=True)
@@ -86,8 +89,8 @@ class UpdateReport:
         return {"status": status, "generation": self.generation, **self.entry}
 
 
-def update(folder, increment, *, plan=None, forecaster=None, trainer=None, settings=None, retries=1,
-           most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0, dry_run=False):
+def update(folder, increment, *, plan=None, forecaster=None, trainer=None, settings=None, by=None, because=None,
+           retries=1, most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0, dry_run=False):
     """Learn an increment on a device, in one new generation of its folder; return an `UpdateReport`.
 
     Parameters
@@ -101,8 +104,10 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         By default the one that ships for the plan's method, which knows the built-in trainer alone.
     trainer : Trainer, optional
         The built-in one by default.
-    settings : Settings, optional
-        Train with these, whatever is advised.
+    settings : Settings or dict, optional
+        Train with these, whatever is advised. A dict names some of them; the others are as advised.
+    by, because : str, optional
+        Who overrules the advice and why, for the history: both, together with settings.
     retries : int
         How often a try that is not kept is followed by another one: with the next alternative of the advice, at the
         first update with a tenth of the learning rate. Settings that were given are tried once.
@@ -144,6 +149,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
     started = time.perf_counter()
     folder = folder if isinstance(folder, DeviceFolder) else DeviceFolder(folder)
     check_whole("retries", retries)
+    overruled = _overruled(settings, by, because)
     check_whole("seed", seed, high=2**32 - 1)
     most_lost = check_number("most_lost", most_lost, low=0, high=1)
     most_lost_by_class = check_number("most_lost_by_class", most_lost_by_class, low=0, high=1)
@@ -172,7 +178,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         entry = {
             "number": history[-1]["number"] + 1 if history else 1,
             "time": datetime.now(UTC).isoformat(timespec="seconds"),
-            **_arrived(boundary, increment), **_advised(advice), "overruled": settings is not None,
+            **_arrived(boundary, increment), **_advised(advice), "overruled": overruled,
             **(tries[-1] if tries else {"settings": candidates[0].as_dict()}), "earlier_tries": tries[:-1],
             "kept": bool(tries) and not tries[-1]["reasons"], "seconds": round(time.perf_counter() - started, 4),
         }
@@ -218,13 +224,29 @@ def _advise(trainer, boundary, forecaster, seed):
     return advise_settings(forecaster, descriptors, SettingsBox(method, boundary.most_kept))
 
 
+def _overruled(settings, by, because):
+    """Return who overrules the advice and why, None if it stands."""
+    if (by is None) != (because is None):
+        raise InputError("by" if by is None else "because", "must say who overrules the advice, and why", "none")
+    if settings is None:
+        if by is not None:
+            raise InputError("settings", "must be given where somebody overrules the advice", "none")
+        return None
+    for name, text in (("by", by), ("because", because)):
+        if text is not None and (not isinstance(text, str) or not text.strip() or len(text) > LONGEST_TEXT):
+            raise InputError(name, f"must be a text of 1 to {LONGEST_TEXT} characters", repr(text))
+    return {"by": by, "because": because}
+
+
 def _candidates(plan, advice, settings, retries):
     """Settings to try, in order."""
+    opening = opening_settings(plan)
+    if isinstance(settings, dict):
+        return [completed(settings, opening if advice is None else advice.settings, plan.method)]
     if settings is not None:
         return [settings.checked(plan.method)]
     if advice is not None:
         return advice.ranked[:1 + retries]
-    opening = opening_settings(plan)
     return [replace(opening, learning_rate=opening.learning_rate * SLOWER**k) for k in range(1 + retries)]
 
 

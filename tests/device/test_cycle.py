@@ -192,6 +192,31 @@ def test_a_diverged_update_is_rolled_back(started, forecasters):
     assert (after.status, after.entry["number"], after.entry["classes_old"]) == (UpdateStatus.KEPT, 3, 3)
 
 
+def test_an_overruled_advice_is_written_down_with_who_and_why(started, forecasters):
+    folder = started()
+    report = update(folder, clouds(SECOND), forecaster=forecasters["ewc"], settings={"learning_rate": 1e-5},
+                    by="shift 2", because="the belt must not stop today")
+    entry = DeviceFolder(folder).read().history[-1]
+    assert entry == report.entry and entry["overruled"] == {"by": "shift 2", "because": "the belt must not stop today"}
+    # What was not given is as advised; both forecasts stand side by side, and what came of it.
+    advised = entry["advice"]["settings"]
+    assert entry["settings"] == {**advised, "learning_rate": 1e-5} != advised
+    assert set(entry["expected"]) == set(entry["advice"]["expected"]) and entry["achieved"]["rows"] > 0
+
+
+@pytest.mark.parametrize("given, wrong", [
+    ({"by": "shift 2"}, "because"), ({"settings": IDLE, "because": "so"}, "by"),
+    ({"by": "shift 2", "because": "so"}, "settings"), ({"settings": IDLE, "by": " ", "because": "so"}, "by"),
+    ({"settings": {"speed": 1}}, "settings"), ({"settings": {"learning_rate": 7.0}}, "learning_rate"),
+])
+def test_overruling_without_a_reason_or_settings_is_refused(started, forecasters, given, wrong):
+    folder = started()
+    before = content(folder)
+    with pytest.raises(InputError) as refused:
+        update(folder, clouds(SECOND), forecaster=forecasters["ewc"], **given)
+    assert refused.value.parameter == wrong and content(folder) == before
+
+
 @pytest.mark.parametrize("limits, reasons", [
     ({"most_lost": 1.0, "most_lost_by_class": 1.0}, []),
     ({"most_lost_by_class": 1.0}, ["accuracy on old classes fell by"]),
