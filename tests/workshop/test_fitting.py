@@ -65,9 +65,9 @@ def test_sources_can_be_left_out_but_two_must_remain(records):
     sources = ["synthetic_drifting", "synthetic_gaussian", "synthetic_rectified"]
     assert sorted(set(load_dataset(records, "wa", without=sources[:1]).sources)) == sources[1:]
     for without, left in ((sources[:2], "synthetic_rectified"), (sources, "none")):
-        with pytest.raises(InputError, match=f"wa boundaries of at least two sources; received {left}; gather more"):
+        with pytest.raises(InputError, match=f"searched wa boundaries of at least two sources; received {left}; gather more"):
             load_dataset(records, "wa", without=without)
-    with pytest.raises(InputError, match="must hold icarl boundaries of at least two sources; received none"):
+    with pytest.raises(InputError, match="must hold searched icarl boundaries of at least two sources; received none"):
         load_dataset(records, "icarl")
 
 
@@ -132,6 +132,78 @@ def test_every_attempt_is_forecast_and_figures_are_of_recorded_attempts(dataset)
         assert one.outcome == pytest.approx(np.mean(chosen), rel=1e-12)
     gained = sum(one.outcome - one.constant for one in seen)
     assert held.gap_closed("outcome") == pytest.approx(gained / sum(one.best - one.constant for one in seen), rel=1e-12)
+
+
+# Updates of devices: one attempt or two at a boundary.
+
+
+def with_updates(dataset, outcome):
+    """The dataset with three updates of each of two devices, of which the second took two attempts."""
+    named, attempts = np.array(["device:a"] * 3 + ["device:b"] * 3), np.array([0, 8, 16, 24, 32, 40, 41, 48, 49])
+    boundary = np.array([0, 1, 2, 3, 3, 4, 4, 5, 5]) + dataset.n_boundaries
+    parts = {name: np.concatenate([values, values[attempts]]) for name, values in vars(dataset).items()
+             if isinstance(values, np.ndarray) and len(values) == len(dataset.all)}
+    for name in ("old", "new", "all"):
+        parts[name][len(dataset.all):] = outcome
+    described = dataset.boundary[attempts[[0, 1, 2, 3, 5, 7]]]
+    return replace(dataset, **{
+        **parts, "boundary": np.concatenate([dataset.boundary, boundary]),
+        "after": np.concatenate([dataset.after, np.full(len(attempts), np.nan)]),
+        "sources": np.concatenate([dataset.sources, named]), "trajectories": np.concatenate([dataset.trajectories, named]),
+        "descriptors": np.concatenate([dataset.descriptors, dataset.descriptors[described]]),
+        "most_kept": np.concatenate([dataset.most_kept, dataset.most_kept[described]])})
+
+
+def test_updates_of_devices_count_for_what_to_expect_and_not_for_what_is_best(dataset):
+    good, bad = with_updates(dataset, 1.0), with_updates(dataset, 0.0)
+    assert good.compared.tolist() == [True] * dataset.n_boundaries + [False] * 6
+    everything = np.ones(good.n_boundaries, bool)
+    assert fit_constants(good, everything, seed=0) == fit_constants(dataset, everything[:-6], seed=0)
+    inputs = dataset.inputs()
+    plain = models.train_outcomes(dataset, everything[:-6], seed=0)
+    fitted = [models.train_outcomes(one, everything, seed=0) for one in (good, bad)]
+    np.testing.assert_array_equal(fitted[0]["shortfall"].predict(inputs), plain["shortfall"].predict(inputs))
+    for train in (models.train_later, models.train_direct):
+        one, other = (train(data, everything[:data.n_boundaries], seed=0) for data in (good, dataset))
+        pairs = [(one, other)] if train is models.train_later else [(one[name], other[name]) for name in one]
+        for with_devices, without in pairs:
+            np.testing.assert_array_equal(with_devices.predict(inputs), without.predict(inputs))
+    for name in ("old", "new"):
+        expected = [one[name].predict(good.inputs(slice(-9, None))).mean() for one in fitted]
+        assert expected[0] > expected[1] + 0.02
+
+
+@pytest.mark.parametrize("folds", [None, 2, 4])
+def test_a_device_is_a_source_that_is_held_out_and_never_judged(folds, dataset):
+    """A spy as above; and with any number of folds every model has searched boundaries to learn from."""
+    good, bad = with_updates(dataset, 1.0), with_updates(dataset, 0.0)
+    held, spied = (hold_out(one, folds=folds, seed=0) for one in (good, bad))
+    assert [one.source for one in held.figures] == sorted(set(dataset.sources))
+    assert [one.boundaries for one in held.figures] == np.unique(dataset.sources, return_counts=True)[1].tolist()
+    own = np.isin(good.sources, ["device:a"])[good.boundary]
+    assert all(np.isfinite(values).all() for values in held.forecast.values())
+    if folds is None:
+        others = good.sources[good.boundary] == "device:b"
+        nothing = with_updates(dataset, np.where(own[-9:], 0.0, 1.0))
+        alone = hold_out(nothing, seed=0)
+        np.testing.assert_array_equal(held.forecast["old"][own], alone.forecast["old"][own])
+        assert not np.array_equal(held.forecast["old"][others], alone.forecast["old"][others])
+    assert not np.array_equal(held.forecast["old"][own], spied.forecast["old"][own])
+
+
+def test_records_of_devices_make_another_forecaster_that_knows_them(datasets):
+    dataset = datasets["wa"]
+    plain, forecaster = (fit_forecaster(one, recipe={}) for one in (dataset, with_updates(dataset, 1.0)))
+    assert forecaster.recipe["boundaries"] == {**plain.recipe["boundaries"], "device:a": 3, "device:b": 3}
+    assert forecaster.raw_constant == plain.raw_constant
+    assert [one["source"] for one in forecaster.recipe["held_out"]] == sorted(set(dataset.sources))
+    assert forecaster.checksum != plain.checksum
+
+
+def test_records_of_devices_alone_are_refused(records, monkeypatch):
+    monkeypatch.setattr("hyperforecast.workshop.fitting.dataset.FEWEST_COMPARED", 1000)
+    with pytest.raises(InputError, match="searched wa boundaries of at least two sources; received none; gather more"):
+        load_dataset(records, "wa")
 
 
 # The best constant.

@@ -14,8 +14,9 @@ def fit_constants(dataset, boundaries, *, seed):
     """Return (raw `Constant`, scale-free `Constant`, kind of the better one) over the boundaries in a mask (B,).
 
     A candidate's outcome at a boundary is the mean over attempts there, weighted by nearness (a Nadaraya-Watson
-    estimate); every source counts alike.
+    estimate); every source counts alike, and boundaries with too few attempts to compare do not count.
     """
+    boundaries = boundaries & dataset.compared
     constants, values, scales = {}, {}, _scales(dataset)
     for kind in ("raw", "scale_free"):
         candidates = _candidates(dataset, boundaries, kind, np.random.default_rng(seed))

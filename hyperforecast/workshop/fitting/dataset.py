@@ -8,6 +8,9 @@ from hyperforecast.checks import InputError
 from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.settings import COORDINATES, SCALES, SettingsBox, scale_free
 
+# A search makes dozens of attempts at a boundary, a device's update one or two: too few to tell what is best there.
+FEWEST_COMPARED = 8
+
 
 @dataclass(frozen=True)
 class Dataset:
@@ -52,6 +55,14 @@ class Dataset:
         """Number of boundaries B."""
         return len(self.sources)
 
+    @property
+    def compared(self):
+        """Mask (B,) of the boundaries with attempts enough to be compared with each other.
+
+        The others, updates of devices, tell what outcome to expect, not which settings are best.
+        """
+        return np.bincount(self.boundary, minlength=self.n_boundaries) >= FEWEST_COMPARED
+
     def column(self, name):
         """Return one descriptor over the boundaries, shape (B,)."""
         return self.descriptors[:, list(DESCRIPTORS).index(name)]
@@ -84,7 +95,7 @@ def load_dataset(records, method, *, without=()):
     Raises
     ------
     InputError
-        If fewer than two sources remain.
+        If fewer than two sources remain whose boundaries were searched; records of devices alone will not do.
     """
     names = list(DESCRIPTORS)
     descriptors, sources, trajectories, most_kept = [], [], [], []
@@ -113,8 +124,9 @@ def load_dataset(records, method, *, without=()):
             sources.append(trajectory.source)
             trajectories.append(trajectory.key)
             most_kept.append(one.most_kept)
-    if len(set(sources)) < 2:
-        raise InputError(records.path, f"must hold {method} boundaries of at least two sources",
-                         ", ".join(sorted(set(sources))) or "none", "gather more")
+    searched = {source for source, one in zip(sources, parts["all"]) if len(one) >= FEWEST_COMPARED}
+    if len(searched) < 2:
+        raise InputError(records.path, f"must hold searched {method} boundaries of at least two sources",
+                         ", ".join(sorted(searched)) or "none", "gather more")
     return Dataset(method, np.array(descriptors, dtype=np.float64), np.array(sources), np.array(trajectories),
                    np.array(most_kept), **{name: np.concatenate(arrays) for name, arrays in parts.items()})

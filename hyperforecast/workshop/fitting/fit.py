@@ -27,7 +27,7 @@ SMALLEST_ERROR = 0.005
 class SourceFigures:
     """What each way of choosing reached on the recorded attempts of one source that it was not fitted on.
 
-    Mean accuracy on all classes over `boundaries` boundaries: of the constant (estimated), of the attempts that the
+    Mean accuracy on all classes over `boundaries` searched boundaries: of the constant (estimated), of the attempts that the
     outcome models and the direct regressors would choose, of the best attempt.
     """
 
@@ -84,7 +84,9 @@ def hold_out(dataset, *, folds=None, seed, workers=1, progress=None):
     progress : callable, optional
         Called with the `SourceFigures` of each source that was left out.
     """
-    sources = np.unique(dataset.sources)
+    searched = np.unique(dataset.sources[dataset.compared])
+    # Searched ones are dealt first, so that no group holds all of them.
+    sources = np.concatenate([searched, np.setdiff1d(dataset.sources, searched)])
     folds = min(len(sources) if folds is None else check_whole("folds", folds, low=2), len(sources))
     n = len(dataset.all)
     forecast = {name: np.full(n, np.nan) for name in (*RANGES, "shortfall")}
@@ -99,7 +101,7 @@ def hold_out(dataset, *, folds=None, seed, workers=1, progress=None):
         for name, values in told.items():
             forecast[name][attempts] = values
         divergence[attempts], direct[own], constant[own] = diverges, settings, outcome
-        for source in sources[k::folds]:
+        for source in np.intersect1d(sources[k::folds], searched):
             figures.append(_figures(dataset, source, held))
             if progress:
                 progress(figures[-1])
@@ -183,7 +185,7 @@ def fit_forecaster(dataset, *, recipe, folds=None, seed=0, workers=1, progress=N
 
 
 def _figures(dataset, source, held):
-    own = dataset.sources == source
+    own = (dataset.sources == source) & dataset.compared
     rows = np.flatnonzero(own[dataset.boundary])
     b = dataset.boundary[rows]
     safe = held.forecast["shortfall"][rows] - (held.divergence[rows] > MOST_DIVERGENCE)

@@ -54,12 +54,17 @@ def _taken(dataset):
 
 
 def train_outcomes(dataset, boundaries, *, seed):
-    """Return Boosters of outcomes, by the names in `hyperforecast.forecasting`, on the boundaries in a mask (B,)."""
+    """Return Boosters of outcomes, by the names in `hyperforecast.forecasting`, on the boundaries in a mask (B,).
+
+    That of the shortfall learns from boundaries whose attempts can be compared, the others from all.
+    """
     attempts = np.flatnonzero(boundaries[dataset.boundary] & _taken(dataset))
     inputs, weights = dataset.inputs(attempts), attempt_weights(dataset, attempts)
     models = {name: train(inputs, getattr(dataset, name)[attempts], weights, seed=seed) for name in ("old", "new")}
-    shortfall = (dataset.all - dataset.best()[dataset.boundary])[attempts]
-    models["shortfall"] = train(inputs, shortfall, weights, size=LARGE, seed=seed)
+    compared = dataset.compared[dataset.boundary[attempts]]
+    judged = attempts[compared]
+    shortfall = (dataset.all - dataset.best()[dataset.boundary])[judged]
+    models["shortfall"] = train(inputs[compared], shortfall, attempt_weights(dataset, judged), size=LARGE, seed=seed)
     even = source_weights(dataset.sources[dataset.boundary[attempts]])
     models["diverged"] = train(inputs, dataset.diverged[attempts].astype(float), even, objective="binary", size=SMALL,
                                seed=seed)
@@ -100,8 +105,8 @@ def later_advantage(dataset):
 
 
 def train_direct(dataset, boundaries, *, seed):
-    """Return Boosters from descriptors to the best attempt's settings, as unit-cube coordinates, by setting."""
-    rows = np.flatnonzero(boundaries)
+    """Return Boosters from descriptors to the best of compared attempts, as unit-cube coordinates, by setting."""
+    rows = np.flatnonzero(boundaries & dataset.compared)
     best = best_attempts(dataset)[rows]
     unset = np.full((len(rows), dataset.coordinates.shape[1]), np.nan)
     inputs = np.hstack([dataset.descriptors[rows], unset])
