@@ -98,3 +98,19 @@ def test_rollback_by_hand_is_told_by_the_history(capsys, device):
     assert main(["history", "--device", device]) == 0
     text = capsys.readouterr().out
     assert "undone" in text and "after update 2: rolled back" in text
+
+
+def test_classes_are_listed_and_looked_after(capsys, device):
+    listed = run(capsys, "classes", "--device", device)["classes"]
+    assert [one["label"] for one in listed] == ["bolt", "nut", "hook", "ring"] and listed[0]["floor"] is None
+    assert run(capsys, "classes", "--device", device, "--floor", "nut", "0.9")["classes"][1]["floor"] == 0.9
+    run(capsys, "classes", "--device", device, "--rename", "hook", "crane hook")
+    run(capsys, "classes", "--device", device, "--merge", "ring", "crane hook")
+    run(capsys, "classes", "--device", device, "--retire", "bolt")
+    assert main(["classes", "--device", device, "--erase", "nut"]) == 0
+    text = capsys.readouterr().out
+    assert "crane hook" in text and "no mention of its name is left" in text
+    steps = [one["step"] for one in run(capsys, "history", "--device", device)["steps"]]
+    assert steps == ["floor", "renamed", "merged", "retired", "erased"]
+    assert "knows crane hook" in refused(capsys, "classes", "--device", device, "--retire", "nut")
+    assert "--floor" in refused(capsys, "classes", "--device", device, "--floor", "crane hook", "high")

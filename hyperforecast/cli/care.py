@@ -12,7 +12,8 @@ def add_commands(command):
     """Add the commands that use and check a device; `command` is that of `hyperforecast.cli`."""
     predict = command("predict", _predict, "Labels and probabilities for rows; nothing is learned.")
     predict.add_argument("--device", required=True, metavar="DIR")
-    predict.add_argument("--rows", required=True, metavar="FILE", help=".npz, .npy, .csv or .parquet; labels may be missing")
+    predict.add_argument("--rows", required=True, metavar="FILE",
+                         help=".npz, .npy, .csv or .parquet; labels may be missing")
     predict.add_argument("--out", metavar="FILE", help="write .csv or .npz instead of lines on standard output")
 
     evaluate = command("evaluate", _evaluate, "Accuracy on labelled rows, by class and beside the forecast.")
@@ -111,7 +112,8 @@ def _evaluation_lines(evaluation, beside):
         rows.append((one["class"], one["rows"], f"{one['accuracy']:.3f}", taken or "-"))
     lines = [table(("class", "rows", "accuracy", "taken for"), rows),
              f"Mean over classes {evaluation.mean():.3f} on {evaluation.rows.sum()} rows"]
-    lines += [f"  not known: class {label}, {count} rows, counted in nothing" for label, count in evaluation.unknown.items()]
+    lines += [f"  not known: class {label}, {count} rows, counted in nothing"
+              for label, count in evaluation.unknown.items()]
     if beside is None:
         return lines
     later = f", {beside['updates_later']} updates later" if beside["updates_later"] else ""
@@ -132,5 +134,6 @@ def _rollback(options):
     step = generation.care.steps[-1]
     lines = [f"Generation {generation.number} carries what generation {step['to_generation']} did: "
              f"{len(generation.carryover.classes)} classes, {generation.carryover.n_boundaries} boundaries."]
-    lines += [f"Update {one} is undone." for one in step["undone"]] + [f"Update {one} stands again." for one in step["again"]]
+    lines += [f"Update {one} is undone." for one in step["undone"]]
+    lines += [f"Update {one} stands again." for one in step["again"]]
     say(options, {"generation": generation.number, **step}, lines)

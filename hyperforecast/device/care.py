@@ -71,7 +71,8 @@ def care_from(facts, arrays, *, n_features):
         raise InputError("acceptance_classes", "must be a list of labels", "others")
     acceptance = None
     if labels:
-        X = check_features(stored_array(arrays, "acceptance_X", kinds="f", shape=(None, n_features)), name="acceptance_X")
+        X = stored_array(arrays, "acceptance_X", kinds="f", shape=(None, n_features))
+        X = check_features(X, name="acceptance_X")
         codes = stored_array(arrays, "acceptance_y", kinds="i", shape=(len(X),))
         if not ((codes >= 0) & (codes < len(labels))).all():
             raise InputError("acceptance_y", "must hold codes of acceptance_classes", "others")

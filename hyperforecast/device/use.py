@@ -252,9 +252,8 @@ def _kept_entry(history, number):
     entry = next((one for one in history if one["number"] == number), None)
     if entry is None or not _stands(entry):
         kept = ", ".join(str(one["number"]) for one in history[-8:] if _stands(one))
-        raise InputError("update", f"must be one that was kept, such as {kept}" if kept else "must be one that was kept",
-                         f"{number}, " + ("of which the history does not tell" if entry is None else "undone"
-                                          if entry["kept"] else "rolled back"))
+        why = "of which the history does not tell" if entry is None else "undone" if entry["kept"] else "rolled back"
+        raise InputError("update", f"must be one that was kept ({kept})", f"{number}, {why}")
     return entry
 
 

@@ -1,4 +1,4 @@
-"""The learner. Read exemplars, boundary, head, objectives, side_by_side, trainer, attempts, in this order."""
+"""The learner. Read exemplars, boundary, head, objectives, side_by_side, trainer, attempts, class_care in turn."""
 
 from hyperforecast.learning.attempts import (
     CHUNK_ROWS, accuracies, class_probabilities, close_boundary, predict_codes, try_settings,
@@ -6,6 +6,7 @@ from hyperforecast.learning.attempts import (
 from hyperforecast.learning.boundary import (
     Boundary, Carryover, ClassSummaries, boundary_seed, open_boundary, standardize,
 )
+from hyperforecast.learning.class_care import merge_classes, rename_class, without_class
 from hyperforecast.learning.exemplars import Exemplars, choose_exemplars, herd, unit_rows
 from hyperforecast.learning.objectives import distillation
 from hyperforecast.learning.trainer import Attempt, HeadTrainer, Job, Trainer, align_weights
@@ -13,5 +14,6 @@ from hyperforecast.learning.trainer import Attempt, HeadTrainer, Job, Trainer, a
 __all__ = [
     "Attempt", "Boundary", "CHUNK_ROWS", "Carryover", "ClassSummaries", "Exemplars", "HeadTrainer", "Job", "Trainer",
     "accuracies", "align_weights", "boundary_seed", "choose_exemplars", "class_probabilities", "close_boundary",
-    "distillation", "herd", "open_boundary", "predict_codes", "standardize", "try_settings", "unit_rows",
+    "distillation", "herd", "merge_classes", "open_boundary", "predict_codes", "rename_class", "standardize",
+    "try_settings", "unit_rows", "without_class",
 ]

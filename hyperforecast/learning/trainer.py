@@ -9,6 +9,7 @@ from typing import Protocol
 
 import numpy as np
 
+from hyperforecast.checks import InputError
 from hyperforecast.learning.boundary import Boundary
 from hyperforecast.learning.exemplars import herd, unit_rows
 from hyperforecast.learning.head import (
@@ -20,6 +21,9 @@ from hyperforecast.settings import Settings
 
 # Rows that facts about gradients and curvature are computed on.
 MOST_FACT_ROWS = 128
+# Of merged outputs: rows drawn from each class's summary, and the ridge, a share of the features' mean square.
+DRAWN_PER_CLASS = 32
+RIDGE = 1e-3
 
 
 @dataclass(frozen=True)
@@ -149,6 +153,14 @@ class Trainer(Protocol):
         """
         return {}
 
+    def without_class(self, head, code):
+        """Return the head without the class `code`; the codes above it move down by one. By default it is refused."""
+        raise InputError("trainer", "must offer without_class, so that a class can be taken out", type(self).__name__)
+
+    def merged_classes(self, carryover, code, into, *, seed):
+        """Return the carryover's head with `into` answering for `code`, too, and without `code`; refused by default."""
+        raise InputError("trainer", "must offer merged_classes, so that classes can be merged", type(self).__name__)
+
 
 class HeadTrainer(Trainer):
     """The built-in trainer: EWC, LwF, iCaRL and WA on a linear head or one hidden layer.
@@ -228,6 +240,54 @@ class HeadTrainer(Trainer):
             facts = _facts(head, objective, boundary, rng)
         return {name: float(value) for name, value in facts.items() if np.isfinite(value)}
 
+    def without_class(self, head, code):
+        """Return the head without output `code`, its importance and its class mean.
+
+        The softmax of the others is what it was, given that it is none of that class.
+        """
+        left = {}
+        for name, array in head.items():
+            of_outputs = name.removeprefix("importance_").startswith("output_")
+            left[name] = np.delete(array, code, axis=1) if of_outputs else array
+        if "class_means" in head:
+            left["class_means"] = np.delete(head["class_means"], code, axis=0)
+        return left
+
+    def merged_classes(self, carryover, code, into, *, seed):
+        """Return the head with one output for both classes, `into`'s, and without output `code`.
+
+        Under a softmax the logit of either is log(e^a + e^b) for their logits a and b; with iCaRL's logistic outputs
+        1 - (1 - p)(1 - q) has the logit log(e^a + e^b + e^(a + b)). Neither is linear in the features, so that the new
+        output is a ridge regression of it, drawn to the mean of the two outputs (weighted by rows seen), over rows held
+        and rows drawn from the class summaries. Importances add: exact where no row is torn between the two, and too
+        strong otherwise. iCaRL's class mean is that of both classes' exemplars. Own derivations.
+        """
+        head = carryover.head
+        share = carryover.summaries.count[code] / carryover.summaries.count[[code, into]].sum()
+        Z, weight = _merging_rows(carryover, code, into, np.random.default_rng([seed, 0x6D65]))
+        features = np.hstack([hidden_features(head, Z), np.ones((len(Z), 1), np.float32)]).astype(np.float64)
+        output = np.vstack([head["output_weights"], head["output_bias"]]).astype(np.float64)
+        logits = features @ output[:, [code, into]]
+        wanted = np.logaddexp(*logits.T)
+        if carryover.plan.method == "icarl":
+            wanted = np.logaddexp(wanted, logits.sum(axis=1))
+        middle = output[:, [code, into]] @ [share, 1 - share]
+        gram = (features * weight[:, None]).T @ features
+        gram[np.diag_indices_from(gram)] += RIDGE * np.trace(gram) / len(gram)
+        output[:, into] = middle + np.linalg.solve(gram, features.T @ (weight * (wanted - features @ middle)))
+        output = output.astype(np.float32)
+        merged = {**head, "output_weights": output[:-1], "output_bias": output[-1:]}
+        for name in ("importance_output_weights", "importance_output_bias"):
+            if name in head:
+                merged[name] = head[name].copy()
+                merged[name][:, into] += head[name][:, code]
+        if "class_means" in head:
+            rows = np.isin(carryover.exemplars.y, [code, into])
+            means = head["class_means"].copy()
+            means[into] = unit_rows(unit_rows(hidden_features(head, carryover.exemplars.Z[rows])).sum(axis=0))
+            merged["class_means"] = means
+        return self.without_class(merged, code)
+
 
 def align_weights(head, n_old):
     """Return the head with the outputs of classes from `n_old` on scaled so that the mean weight norms agree.
@@ -243,6 +303,17 @@ def align_weights(head, n_old):
     weights[:, n_old:] *= gamma
     bias[:, n_old:] *= gamma
     return {**head, "output_weights": weights, "output_bias": bias}
+
+
+def _merging_rows(carryover, code, into, rng):
+    """Rows to fit a merged output on, and their weights: the two classes together weigh as much as all others."""
+    summaries, held = carryover.summaries, (carryover.exemplars, carryover.check_rows)
+    drawn = np.repeat(np.arange(len(summaries.count)), DRAWN_PER_CLASS)
+    noise = rng.standard_normal((len(drawn), carryover.n_features), dtype=np.float32)
+    noise = summaries.mean[drawn] + np.sqrt(summaries.variance[drawn]) * noise
+    Z = np.concatenate([*(rows.Z for rows in held), noise])
+    merged = np.isin(np.concatenate([*(rows.y for rows in held), drawn]), [code, into])
+    return Z, np.where(merged, 0.5 / merged.sum(), 0.5 / max((~merged).sum(), 1))
 
 
 def _objective(boundary):
