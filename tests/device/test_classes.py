@@ -97,7 +97,7 @@ def test_a_floor_that_was_broken_before_bars_only_what_falls_further(folder):
     wrong = clouds(["rod"], seed=3, rows=8)
     # Rows of another class, judged as nuts: the floor is broken whatever is learned.
     keep_acceptance(folder, check_increment(wrong.X, np.repeat("nut", 8)))
-    report = update(folder, clouds(["plate"], seed=2), settings=Settings(1e-5, 1.0, 10))
+    report = update(folder, clouds(["rod"], seed=2), settings=Settings(1e-5, 1.0, 10))
     assert not any("floor" in reason for reason in report.entry["reasons"])
 
 
