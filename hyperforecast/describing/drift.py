@@ -118,3 +118,18 @@ def shift_of_returning(view):
 def cut_share(view):
     """Share of standardized values that were cut at 10 standard deviations. Unit: share."""
     return (np.abs(view.sample[0]) >= LARGEST_Z).mean()
+
+
+@descriptor("drift")
+def cut_feature(view):
+    """The same share of the feature that was cut most: near 1 where one comes in another unit. Unit: share."""
+    return (np.abs(view.sample[0]) >= LARGEST_Z).mean(axis=0).max()
+
+
+@descriptor("drift")
+def closest_classes(view):
+    """Least distance of a class of the increment to another class, new or old, in units of chance; see `closest_pair`.
+
+    Near 1 where two classes are the same, or labels are shuffled. Unit: ratio.
+    """
+    return view.closest_pair

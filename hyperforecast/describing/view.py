@@ -13,6 +13,10 @@ MOST_PROBE_FEATURES = 192
 FOURIER_FEATURES = 128
 # Rows drawn from class summaries.
 SIMULATED = 400
+# A class's variance is shrunk to the mean variance of all classes as if so many of its rows had that.
+SHRUNK_ROWS = 3
+# Of how many classes that lie nearest the chance is computed.
+NEAREST_CLASSES = 3
 # Ridge penalty, over the mean squared length of a feature.
 PROBE_PENALTY = 0.05
 
@@ -165,6 +169,37 @@ class BoundaryView:
         if not len(self.old_means):
             return np.full(len(self.sample[1]), np.inf)
         return squared_distances(self.sample[0], self.old_means).min(axis=1)
+
+    @cached_property
+    def closest_pair(self):
+        """Least squared distance of a class mean of the increment to another class mean, over what chance would make it.
+
+        Mean over features of (m_a - m_b)^2 / (v_a / n_a + v_b / n_b), where the means of n rows of one class differ by
+        1 on average (the squared t of Welch 1947, "The generalization of 'Student's' problem when several different
+        population variances are involved"). Old classes that came again do not count. NaN with one row in each class.
+        """
+        counts = self.sample_counts
+        inside = np.zeros((len(counts), self.boundary.n_features), np.float32)
+        np.add.at(inside, self.own_place, (self.sample[0] - self.means[self.own_place]) ** 2)
+        means = self.means
+        if self.summaries is not None:
+            stays = np.setdiff1d(np.arange(self.boundary.n_old), self.arrived)
+            old = self.summaries
+            counts = np.concatenate([counts, old.count[stays]])
+            inside = np.concatenate([inside, old.variance[stays] * old.count[stays, None]]).astype(np.float32)
+            means = np.concatenate([means, self.old_means])
+        common = inside.sum(axis=0) / counts.sum()
+        if len(counts) < 2 or counts.max() < 2 or not common.any():
+            return np.nan
+        common = np.maximum(common, 0.01 * common.mean())
+        counts = counts[:, None]
+        chance = (inside + SHRUNK_ROWS * common) / (counts - 1 + SHRUNK_ROWS) / counts
+        apart = squared_distances(self.means / np.sqrt(common), means / np.sqrt(common))
+        places = np.arange(len(apart))
+        apart[places, places] = np.inf
+        nearest = np.argsort(apart, axis=1)[:, :min(NEAREST_CLASSES, len(counts) - 1)]
+        difference = (self.means[:, None] - means[nearest]) ** 2
+        return (difference / (chance[places, None] + chance[nearest])).mean(axis=2).min()
 
     @cached_property
     def probe_rows(self):

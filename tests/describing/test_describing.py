@@ -70,7 +70,8 @@ def test_what_is_missing_at_a_plain_boundary(method, hidden_units, absent):
 def test_what_is_missing_at_the_first_boundary(method):
     boundary = open_boundary(Plan(method, 6, 3, 16, 200), None, drawn([0, 1, 2]))
     known = {name for name, one in DESCRIPTORS.items() if one.group in ("data", "plan")}
-    known |= {"ridge_accuracy_new", "kernel_accuracy_new", "cut_share", "boundary_number"}
+    known |= {"ridge_accuracy_new", "kernel_accuracy_new", "cut_share", "cut_feature", "closest_classes",
+              "boundary_number"}
     if boundary.plan.rehearses:
         known.add("most_kept")
     assert missing(describe(HeadTrainer(), boundary)) == set(DESCRIPTORS) - known

@@ -6,14 +6,14 @@ import numpy as np
 import pytest
 from scipy.linalg import sqrtm
 from scipy.special import log_softmax, softmax
-from scipy.stats import kurtosis
+from scipy.stats import kurtosis, ttest_ind
 from sklearn.datasets import load_digits, make_circles
 from sklearn.feature_selection import f_classif
 from sklearn.kernel_ridge import KernelRidge
 from sklearn.linear_model import Ridge
 from sklearn.neighbors import NearestCentroid
 
-from hyperforecast.describing import DESCRIPTORS, describe
+from hyperforecast.describing import DESCRIPTORS, describe, view
 from hyperforecast.describing.view import BoundaryView
 from hyperforecast.increments import Increment
 from hyperforecast.learning import (
@@ -141,6 +141,38 @@ def test_distances_to_old_classes_by_brute_force():
     assert value("variance_ratio", boundary) == pytest.approx(within / old_variance.mean(axis=0).sum(), rel=1e-4)
     shift = ((means[1] - old_mean[1]) ** 2).sum()
     assert value("shift_of_returning", boundary) == pytest.approx(shift / within, rel=1e-4)
+
+
+def test_the_closest_classes_by_welchs_test(monkeypatch):
+    # Without shrinkage: scipy's t test of two samples that do not share a variance, squared, mean over features.
+    monkeypatch.setattr(view, "SHRUNK_ROWS", 0)
+    Z, y = clusters(3, n_classes=5, rows=20)
+    Z = (Z * (1 + 0.2 * y[:, None])).astype(np.float32)
+    t2 = [np.mean(ttest_ind(Z[y == a], Z[y == b], equal_var=False)[0] ** 2) for a in range(5) for b in range(a)]
+    assert value("closest_classes", boundary_of(Z, y)) == pytest.approx(min(t2), rel=1e-4)
+    # Three of them old, of whom only moments are carried: pairs of old classes do not count.
+    old, new = y < 3, y >= 3
+    moments = [np.stack([Z[y == c].mean(axis=0) for c in range(3)]), np.stack([Z[y == c].var(axis=0) for c in range(3)])]
+    boundary = boundary_of(Z[new], y[new], old_mean=moments[0], old_variance=moments[1])
+    boundary = replace(boundary, carryover=replace(boundary.carryover, summaries=ClassSummaries(
+        np.full(3, 20), *(moment.astype(np.float32) for moment in moments))))
+    t2 = [np.mean(ttest_ind(Z[y == a], Z[y == b], equal_var=False)[0] ** 2) for a in (3, 4) for b in range(a)]
+    assert value("closest_classes", boundary) == pytest.approx(min(t2), rel=1e-4)
+
+
+def test_the_closest_classes_are_one_apart_where_they_are_the_same():
+    # By the definition of a t statistic: mean of its square near 1, here over 40 draws and 6 features.
+    twins = [value("closest_classes", boundary_of(*clusters(seed, n_classes=2, rows=30, spread=0))) for seed in range(40)]
+    assert 0.8 < np.mean(twins) < 1.2
+    assert value("closest_classes", boundary_of(*clusters(0, n_classes=2, rows=30))) > 5
+    assert np.isnan(value("closest_classes", boundary_of([[0.0], [1.0]], [0, 1])))
+
+
+def test_the_feature_that_is_cut_most():
+    Z = np.zeros((4, 5))
+    Z[:3, 2], Z[0, 1] = -10, 10
+    assert value("cut_feature", boundary_of(Z, [0, 0, 1, 1])) == 0.75
+    assert value("cut_share", boundary_of(Z, [0, 0, 1, 1])) == 0.2
 
 
 def test_nearest_mean_accuracy_of_old_rows_by_brute_force():
