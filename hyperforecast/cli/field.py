@@ -52,9 +52,9 @@ def _dry_run(options):
     from hyperforecast.increments import read_increment
 
     folder = DeviceFolder(options.device)
-    carryover = folder.read().carryover
-    increment = read_increment(options.increment, n_features=carryover.n_features)
-    return update(folder, increment, forecaster=chosen_forecaster(options, carryover.plan.method), dry_run=True)
+    generation = folder.read()
+    increment = read_increment(options.increment, n_features=generation.carryover.n_features)
+    return update(folder, increment, forecaster=chosen_forecaster(options, folder, generation), dry_run=True)
 
 
 def _advice_lines(advice):
@@ -88,9 +88,9 @@ def _update(options):
     given = {name: getattr(options, name) for name in PLAN_HELP if getattr(options, name) is not None}
     plan, forecaster, n_features = None, None, None
     if folder.numbers():
-        carryover = folder.read().carryover
-        forecaster, n_features = chosen_forecaster(options, carryover.plan.method), carryover.n_features
-        plan = replace(carryover.plan, **_plan_arguments(given)) if given else None
+        generation = folder.read()
+        forecaster, n_features = chosen_forecaster(options, folder, generation), generation.carryover.n_features
+        plan = replace(generation.carryover.plan, **_plan_arguments(given)) if given else None
     else:
         plan = Plan(**_plan_arguments(given)).checked()
     increment = read_increment(options.increment, n_features=n_features)

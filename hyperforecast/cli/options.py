@@ -13,7 +13,8 @@ def add_device(parser):
 
 def add_forecaster(parser):
     """Name a forecaster, where it is not the one that ships."""
-    parser.add_argument("--forecaster", metavar="FILE", help="(the one that ships for the method)")
+    parser.add_argument("--forecaster", metavar="FILE", help="(the one that the device is pinned to, "
+                        "else the one that ships for the method)")
 
 
 def add_streams(parser):
@@ -26,11 +27,12 @@ def add_workers(parser):
     parser.add_argument("--workers", type=int, default=os.cpu_count() or 1, help="(%(default)s, all processors)")
 
 
-def chosen_forecaster(options, method):
-    """Return the forecaster that was named, or the one that ships for a method."""
+def chosen_forecaster(options, folder, generation):
+    """Return the forecaster that was named, or the one that a device's `generation` is advised by."""
+    from hyperforecast.device import forecaster_for
     from hyperforecast.forecasting import load_forecaster
 
-    return load_forecaster(options.forecaster or method)
+    return forecaster_for(folder, generation, given=load_forecaster(options.forecaster) if options.forecaster else None)
 
 
 def add_settings(parser, then):

@@ -6,6 +6,7 @@ A *step* is something that was done by hand between updates, a JSON-able dict: `
 in `class`, `from` and `into`.
 """
 
+import re
 from dataclasses import dataclass, field, replace
 from datetime import UTC, datetime
 
@@ -17,6 +18,23 @@ from hyperforecast.storage import stored_array
 
 # The last steps are kept, older ones dropped.
 MOST_STEPS = 1000
+CHECKSUM = re.compile("[0-9a-f]{64}")
+
+
+@dataclass(frozen=True)
+class Pin:
+    """The forecaster that alone may advise a device; see `hyperforecast.device.pin`.
+
+    Attributes
+    ----------
+    checksum : str
+        SHA-256 of its content, in hexadecimal.
+    public_key : str or None
+        The key in PEM that its signature, and that of every upgrade, must be made with.
+    """
+
+    checksum: str
+    public_key: str | None = None
 
 
 @dataclass(frozen=True)
@@ -32,11 +50,13 @@ class Care:
         still to come.
     steps : tuple of dict
         What was done by hand, oldest first.
+    pin : Pin or None
     """
 
     floors: dict = field(default_factory=dict)
     acceptance: Increment | None = None
     steps: tuple = ()
+    pin: Pin | None = None
 
     def with_step(self, step, history, **told):
         """Return the care with one more step; `history` is that of updates, `told` what there is to tell of it."""
@@ -48,7 +68,7 @@ class Care:
 def care_parts(care):
     """Return (facts, arrays) of a `Care`, to be stored in a bundle."""
     facts = {"floors": [[label, floor] for label, floor in care.floors.items()], "steps": list(care.steps),
-             "acceptance_classes": []}
+             "acceptance_classes": [], "pin": None if care.pin is None else dict(care.pin.__dict__)}
     if care.acceptance is None:
         return facts, {}
     classes, codes = np.unique(care.acceptance.y, return_inverse=True)
@@ -58,8 +78,8 @@ def care_parts(care):
 
 def care_from(facts, arrays, *, n_features):
     """Return the `Care` of stored parts, every one checked; `InputError` if one is missing or not proper."""
-    if not isinstance(facts, dict) or set(facts) != {"floors", "steps", "acceptance_classes"}:
-        raise InputError("care", "must be floors, steps and acceptance_classes", "others")
+    if not isinstance(facts, dict) or set(facts) != {"floors", "steps", "acceptance_classes", "pin"}:
+        raise InputError("care", "must be floors, steps, acceptance_classes and pin", "others")
     floors, steps, labels = facts["floors"], facts["steps"], facts["acceptance_classes"]
     if not isinstance(floors, list) or not all(
             isinstance(one, list) and len(one) == 2 and type(one[0]) in (int, str) for one in floors):
@@ -78,4 +98,14 @@ def care_from(facts, arrays, *, n_features):
             raise InputError("acceptance_y", "must hold codes of acceptance_classes", "others")
         acceptance = Increment(X, check_labels(np.array(labels, object), len(labels), name="acceptance_classes")[codes])
     return Care({label: check_number("floor", floor, low=0, high=1) for label, floor in floors}, acceptance,
-                tuple(steps))
+                tuple(steps), _pin_from(facts["pin"]))
+
+
+def _pin_from(facts):
+    if facts is None:
+        return None
+    proper = isinstance(facts, dict) and set(facts) == {"checksum", "public_key"}
+    if not proper or not isinstance(facts["checksum"], str) or not CHECKSUM.fullmatch(facts["checksum"]) \
+            or not isinstance(facts["public_key"], (str, type(None))):
+        raise InputError("pin", "must be a checksum and perhaps a public key", "others")
+    return Pin(**facts)

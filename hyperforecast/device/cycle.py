@@ -39,8 +39,9 @@ from hyperforecast.checks import InputError, check_number, check_whole
 from hyperforecast.describing import describe
 from hyperforecast.device.care import Care
 from hyperforecast.device.folder import DeviceFolder
+from hyperforecast.device.pin import forecaster_for
 from hyperforecast.device.status import UpdateStatus
-from hyperforecast.forecasting import Advice, advise_settings, load_forecaster, opening_settings
+from hyperforecast.forecasting import Advice, advise_settings, opening_settings
 from hyperforecast.learning import (
     Carryover, HeadTrainer, accuracies, boundary_seed, close_boundary, open_boundary, standardize, try_settings,
 )
@@ -101,7 +102,8 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
     plan : Plan, optional
         Needed at the first update, and fixed by it.
     forecaster : Forecaster, optional
-        By default the one that ships for the plan's method, which knows the built-in trainer alone.
+        By default the one that the device is pinned to, or the one that ships for the plan's method, which knows the
+        built-in trainer alone.
     trainer : Trainer, optional
         The built-in one by default.
     settings : Settings or dict, optional
@@ -163,7 +165,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         boundary = open_boundary(plan, carryover, increment, seed=seed)
         trainer = HeadTrainer() if trainer is None else trainer
         _check_head(folder, trainer, carryover)
-        advice = None if carryover is None else _advise(trainer, boundary, forecaster, seed)
+        advice = None if carryover is None else _advise(folder, before, trainer, boundary, forecaster, seed)
         candidates = _candidates(plan, advice, settings, retries)
         care = Care() if before is None else before.care
         check = _Check(trainer, boundary, advice, most_lost, most_lost_by_class, care)
@@ -212,12 +214,12 @@ def _check_head(folder, trainer, carryover):
                          received, "use the trainer of the first update")
 
 
-def _advise(trainer, boundary, forecaster, seed):
+def _advise(folder, before, trainer, boundary, forecaster, seed):
     method = boundary.plan.method
-    if forecaster is None and not isinstance(trainer, HeadTrainer):
+    if forecaster is None and before.care.pin is None and not isinstance(trainer, HeadTrainer):
         raise InputError("forecaster", "must be given with a trainer of one's own", "none",
                          "gather records with that trainer and fit a forecaster on them")
-    forecaster = load_forecaster(method) if forecaster is None else forecaster
+    forecaster = forecaster_for(folder, before, given=forecaster)
     if forecaster.method != method:
         raise InputError("forecaster", f"must be one for {method}, the method of the plan", forecaster.method)
     descriptors = describe(trainer, boundary, seed=seed)

@@ -209,8 +209,8 @@ def roll_back(folder, *, because=None):
     """Go back by hand to what the device carried in the generation before; return the new `Generation`.
 
     It is a generation of its own: the history stays, the updates that were undone get `undone`, the time, and the step
-    is written down. What was undone is the generation before now, so that going back once more brings it back. Floors
-    and the acceptance set stay as they are; only where classes had been merged, renamed or retired since they, too, go
+    is written down. What was undone is the generation before now, so that going back once more brings it back. Floors,
+    the acceptance set and the pinned forecaster stay as they are; only where classes had been merged, renamed or retired since they, too, go
     back. A damaged generation is passed over and removed.
 
     Raises
@@ -230,7 +230,7 @@ def roll_back(folder, *, because=None):
         history, care = (before if current is None else current).history, (before if current is None else current).care
         classes = before.carryover.classes.tolist()
         if current is not None and current.carryover.classes.tolist()[:len(classes)] != classes:
-            care = replace(before.care, steps=care.steps)
+            care = replace(before.care, steps=care.steps, pin=care.pin)
         known = {one["number"] for one in before.history if _stands(one)}
         undone = [one["number"] for one in history if _stands(one) and one["number"] not in known]
         again = [one["number"] for one in history if one.get("undone") and one["number"] in known]

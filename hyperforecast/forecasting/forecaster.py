@@ -4,6 +4,7 @@ A forecaster file is a bundle (`hyperforecast.storage`) of kind "forecaster": tr
 """
 
 import os
+from contextlib import nullcontext
 from dataclasses import dataclass
 from importlib import resources
 
@@ -15,7 +16,9 @@ from hyperforecast.forecasting.trees import TreeEnsemble
 from hyperforecast.settings import (
     COORDINATES, METHODS, REHEARSAL_METHODS, SCALES, Settings, SettingsBox, scale_free,
 )
-from hyperforecast.storage import Bundle, bundle_checksum, read_bundle_file, stored_array, write_bundle_file
+from hyperforecast.storage import (
+    LARGEST_ARRAY, Bundle, bundle_checksum, read_bundle_file, read_bytes, stored_array, write_bundle_file,
+)
 
 KIND = "forecaster"
 VERSION = 1
@@ -262,12 +265,23 @@ def load_forecaster(source):
     InputError
         If the file is missing, damaged, or of another kind or version.
     """
+    with _path_of(source) as path:
+        return _load(path)
+
+
+def forecaster_bytes(source):
+    """Return the bytes of a forecaster file; `source` and errors as for `load_forecaster`, but for damage."""
+    with _path_of(source) as path:
+        return read_bytes(path, largest=LARGEST_ARRAY)
+
+
+def _path_of(source):
+    """Context with the path of a forecaster file."""
     if not isinstance(source, (str, os.PathLike)):
         raise InputError("forecaster", "must be a method or the path of a forecaster file", repr(source))
     if source in METHODS:
-        with resources.as_file(resources.files("hyperforecast.models") / f"{source}.forecaster") as path:
-            return _load(path)
-    return _load(source)
+        return resources.as_file(resources.files("hyperforecast.models") / f"{source}.forecaster")
+    return nullcontext(source)
 
 
 def _load(path):
