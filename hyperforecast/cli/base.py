@@ -1,4 +1,4 @@
-"""Commands for base: demo, gather, fit, search, contest, report."""
+"""Commands for base: demo, gather, merge, fit, search, contest, report."""
 
 import os
 
@@ -26,6 +26,11 @@ def add_commands(command):
                         "what these advise, one for each method; fitted without the sources that they shall be judged on")
     gather.add_argument("--seed", type=int, default=0, help="(%(default)s)")
     add_workers(gather)
+
+    merge = command("merge", _merge, "Merge histories that devices exported into a records file, to fit on; repeatable.")
+    merge.add_argument("--records", required=True, metavar="FILE", help="made if it does not exist")
+    merge.add_argument("--from", required=True, nargs="+", dest="exports", metavar="FILE",
+                       help="files of hyperforecast history --export")
 
     fit = command("fit", _fit, "Fit a forecaster to records of one method; judged on held-out sources.")
     fit.add_argument("--records", required=True, metavar="FILE")
@@ -106,6 +111,18 @@ def _gather(options):
     names = ("method", "source", "trajectories", "boundaries", "attempts")
     say(options, {"run": n_run, "records": [dict(zip(names, row)) for row in counts]},
          [f"{n_run} trajectories run; {options.records} now holds", table(names, counts)])
+
+
+def _merge(options):
+    from hyperforecast.device.export import read_export
+    from hyperforecast.workshop.gathering import RecordsFile, merge
+
+    histories = [read_export(path) for path in options.exports]
+    records = RecordsFile(options.records, create=True)
+    merged = [{"file": path, **merge(records, one).as_dict()} for path, one in zip(options.exports, histories)]
+    names = ("file", "device", "method", "updates", "added", "without_outcome")
+    say(options, {"records": options.records, "merged": merged},
+        [table([name.replace("_", " ") for name in names], [[one[name] for name in names] for one in merged])])
 
 
 def _fit(options):

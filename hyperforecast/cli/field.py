@@ -40,6 +40,9 @@ def add_commands(command):
 
     history = command("history", _history, "What was advised, expected and achieved at each boundary of a device.")
     history.add_argument("--device", required=True, metavar="DIR")
+    history.add_argument("--export", metavar="FILE", help="write a file for base (hyperforecast merge): plan, descriptors, "
+                         "settings and outcomes, nothing else")
+    history.add_argument("--class-names", action="store_true", help="let class names leave the device with the export")
 
 
 def _advise(options):
@@ -140,6 +143,9 @@ def _history(options):
     from hyperforecast.device import DeviceFolder
 
     generation = DeviceFolder(options.device).read()
+    if options.export or options.class_names:
+        _export(options, generation)
+        return
     rows = [(one["number"], one["time"], one["rows"], len(one["classes_new"]), listed(one["settings"]),
              expected(one["expected"]), number(one["achieved"]["all"]), number(one["achieved"]["old"]),
              "rolled back" if not one["kept"] else "undone" if one.get("undone") else "kept")
@@ -154,3 +160,13 @@ def _history(options):
     lines += [f"after update {one['after_update']}: {one['step']}" for one in steps]
     say(options, {"device": options.device, "generation": generation.number, "updates": generation.history,
                   "steps": list(steps)}, lines)
+
+
+def _export(options, generation):
+    from hyperforecast.device.export import export_history
+
+    if not options.export:
+        raise InputError("--class-names", "must be used with --export", "no --export")
+    count = export_history(options.export, generation, class_names=options.class_names)
+    say(options, {"export": options.export, "updates": count, "class_names": options.class_names},
+        [f"{options.export}: {count} updates {'with' if options.class_names else 'without'} class names"])

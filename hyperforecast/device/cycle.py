@@ -3,6 +3,7 @@
 An entry of the history, a JSON-able dict, tells of one update:
 
     number, time            from 1, and UTC as ISO text; the order is that of the numbers, clocks may jump
+    device                  identity of the device: random, 32 hexadecimal digits, made at its first update
     rows, classes_old       rows of the increment, and how many classes were known before
     classes_new             labels that were new
     classes_again           labels of the increment that were known before
@@ -28,6 +29,7 @@ An entry of the history, a JSON-able dict, tells of one update:
 Labels stand in whole values, or in the words of reasons; nothing has a label for its key.
 """
 
+import os
 import time
 from contextlib import nullcontext
 from dataclasses import dataclass, replace
@@ -179,7 +181,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         history = [] if before is None else before.history
         entry = {
             "number": history[-1]["number"] + 1 if history else 1,
-            "time": datetime.now(UTC).isoformat(timespec="seconds"),
+            "time": datetime.now(UTC).isoformat(timespec="seconds"), "device": _identity(history),
             **_arrived(boundary, increment), **_advised(advice), "overruled": overruled,
             **(tries[-1] if tries else {"settings": candidates[0].as_dict()}), "earlier_tries": tries[:-1],
             "kept": bool(tries) and not tries[-1]["reasons"], "seconds": round(time.perf_counter() - started, 4),
@@ -188,6 +190,11 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         generation = folder.store(carryover, [*history, entry], care, in_place=not entry["kept"]) if stored else None
     status = None if dry_run else UpdateStatus.KEPT if entry["kept"] else UpdateStatus.ROLLED_BACK
     return UpdateReport(status, generation, entry, advice, carryover)
+
+
+def _identity(history):
+    """The device's identity, a new one if its history has none."""
+    return next((one["device"] for one in reversed(history) if "device" in one), None) or os.urandom(16).hex()
 
 
 def _agreed_plan(plan, carryover, increment):
