@@ -208,7 +208,7 @@ def scale_free(settings, scales):
     old_rows = kept * scales["classes_old"]
     rows = scales["rows"] + old_rows
     steps = scales["passes"] * np.ceil(rows / scales["batch_size"])
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(all="ignore"):
         logs = np.log10(np.stack([
             rate, strength, kept, steps, np.ones_like(rate), rate * new, rate * exemplars, rate * steps,
             rate * steps * new, rate * strength * anchor, strength * anchor / new, rate * steps * strength * anchor,

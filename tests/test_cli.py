@@ -173,7 +173,7 @@ def test_advice_is_overruled_with_who_and_why_or_not_at_all(capsys, device, deli
     assert "update 3: overruled by shift 2: a trial" in capsys.readouterr().out
 
 
-@pytest.mark.parametrize("arguments", [["bogus"], ["advise"], ["gather", "--streams"], ["update", "--method", "none"]])
+@pytest.mark.parametrize("arguments", [["bogus"], ["advise", "--schema", "none"], ["gather", "--streams"], ["update", "--method", "none"]])
 def test_a_command_that_cannot_be_read_is_refused(capsys, arguments):
     with pytest.raises(SystemExit, match="2"):
         main(arguments)

@@ -19,7 +19,11 @@ PLAN_HELP = {
 def add_commands(command):
     """Add the commands of a device; `command` is that of `hyperforecast.cli`."""
     advise = command("advise", _advise, "Advise settings for an increment; nothing is trained.")
-    add_device(advise)
+    add_device(advise, required=False)
+    advise.add_argument("--descriptors", metavar="FILE", help="a JSON request of another trainer, instead of --increment "
+                        "and --device")
+    advise.add_argument("--schema", choices=("request", "advice"), help="print the JSON Schema of such a request, or of "
+                        "the answer to --json, and stop")
     add_forecaster(advise)
 
     update = command("update", _update, "Advise, learn, check, keep or roll back; the first one makes the device folder.")
@@ -39,15 +43,42 @@ def add_commands(command):
                           help=f"{PLAN_HELP[name]} ({default})")
 
     history = command("history", _history, "What was advised, expected and achieved at each boundary of a device.")
-    history.add_argument("--device", required=True, metavar="DIR")
+    history.add_argument("--device", metavar="DIR")
     history.add_argument("--export", metavar="FILE", help="write a file for base (hyperforecast merge): plan, descriptors, "
                          "settings and outcomes, nothing else")
     history.add_argument("--class-names", action="store_true", help="let class names leave the device with the export")
+    history.add_argument("--schema", action="store_true", help="print the JSON Schema of an export, and stop")
 
 
 def _advise(options):
-    advice = _dry_run(options).advice
+    if options.schema:
+        _print_schema(options.schema)
+        return
+    named = [name for name in ("increment", "device", "descriptors") if getattr(options, name) is not None]
+    if named == ["descriptors"]:
+        advice = _answer(options)
+    elif named == ["increment", "device"]:
+        advice = _dry_run(options).advice
+    else:
+        raise InputError("--increment and --device", "must be named, or --descriptors instead",
+                         ", ".join(f"--{name}" for name in named) or "nothing", "see hyperforecast advise --help")
     say(options, advice.as_dict(), _advice_lines(advice))
+
+
+def _print_schema(name):
+    import json
+
+    from hyperforecast.device.documents import schema
+
+    print(json.dumps(schema(name), indent=1, ensure_ascii=False))
+
+
+def _answer(options):
+    from hyperforecast.device.request import read_request
+    from hyperforecast.forecasting import load_forecaster
+
+    request = read_request(options.descriptors)
+    return request.advice(load_forecaster(options.forecaster or request.method))
 
 
 def _dry_run(options):
@@ -142,6 +173,11 @@ def _update_lines(report):
 def _history(options):
     from hyperforecast.device import DeviceFolder
 
+    if options.schema:
+        _print_schema("history")
+        return
+    if options.device is None:
+        raise InputError("--device", "must name a device folder", "nothing", "see hyperforecast history --help")
     generation = DeviceFolder(options.device).read()
     if options.export or options.class_names:
         _export(options, generation)

@@ -5,10 +5,10 @@ import os
 from hyperforecast.checks import InputError, check_keys, check_whole
 
 
-def add_device(parser):
+def add_device(parser, *, required=True):
     """Name an increment and a device folder."""
-    parser.add_argument("--increment", required=True, metavar="FILE", help=".npz, .npy, .csv or .parquet")
-    parser.add_argument("--device", required=True, metavar="DIR")
+    parser.add_argument("--increment", required=required, metavar="FILE", help=".npz, .npy, .csv or .parquet")
+    parser.add_argument("--device", required=required, metavar="DIR")
 
 
 def add_forecaster(parser):

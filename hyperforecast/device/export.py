@@ -120,7 +120,8 @@ def _checked(document):
     check_whole("version", document["version"], low=1, high=VERSION, remedy="use the program's version that wrote it")
     if not isinstance(document["device"], str) or not IDENTITY.fullmatch(document["device"]):
         raise InputError("device", "must be an identity of 32 hexadecimal digits", repr(document["device"]))
-    plan = Plan(**check_object("plan", document["plan"], tuple(Plan().as_dict()))).checked()
+    parts = check_object("plan", document["plan"], tuple(Plan().as_dict()), tuple(Plan.__dataclass_fields__))
+    plan = Plan(**parts).checked()
     if not isinstance(document["updates"], list):
         raise InputError("updates", "must be a list of updates", type(document["updates"]).__name__)
     updates = [_update(f"update {place}", one, plan) for place, one in enumerate(document["updates"], 1)]

@@ -71,7 +71,7 @@ class Constant:
         rate, strength = self.learning_rate, self.regularization
         if self.kind == "scale_free":
             # A head that has diverged may have no curvature at all.
-            with np.errstate(divide="ignore", invalid="ignore"):
+            with np.errstate(all="ignore"):
                 new, anchor = (np.float64(descriptors.get(name, np.nan))
                                for name in ("curvature_new", "anchor_curvature"))
                 rate, strength = float(rate / new), float(strength * new / anchor)

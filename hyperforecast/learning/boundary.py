@@ -189,6 +189,13 @@ def boundary_seed(seed, carryover):
     return seed + 7919 * (0 if carryover is None else carryover.n_boundaries)
 
 
+def class_limits(plan, n_features, n_classes):
+    """Return (check rows, exemplars) that the plan's memory allows each of `n_classes`; `InputError` if less than one."""
+    rows = plan.rows_per_class(n_features, n_classes)
+    check_rows = min(MOST_CHECK_ROWS, rows // 4 if plan.rehearses else rows)
+    return check_rows, min(rows - check_rows, KEPT_PER_CLASS[1])
+
+
 def open_boundary(plan, carryover, increment, *, seed=0):
     """Return the `Boundary` at which `increment` meets `carryover` (None: it is the first increment).
 
@@ -206,15 +213,13 @@ def open_boundary(plan, carryover, increment, *, seed=0):
     classes = np.concatenate([old, labels[is_new]])
     place = {label: code for code, label in enumerate(classes.tolist())}
     y = np.array([place[label] for label in labels.tolist()], np.int64)[codes]
-    rows_per_class = plan.rows_per_class(increment.n_features, len(classes))
-    check_per_class = min(MOST_CHECK_ROWS, rows_per_class // 4 if plan.rehearses else rows_per_class)
+    check_per_class, most_kept = class_limits(plan, increment.n_features, len(classes))
     center, scale = fit_scaling(increment.X) if carryover is None else (carryover.center, carryover.scale)
     Z = standardize(increment.X, center, scale)
     training, held_back = _hold_back(Z, y, check_per_class, np.random.default_rng([seed, 0x6368]))
     return Boundary(
         plan=plan, carryover=carryover, classes=classes, n_old=len(old), center=center, scale=scale,
-        Z=Z[training], y=y[training], held_back=held_back, check_per_class=check_per_class,
-        most_kept=min(rows_per_class - check_per_class, KEPT_PER_CLASS[1]),
+        Z=Z[training], y=y[training], held_back=held_back, check_per_class=check_per_class, most_kept=most_kept,
     )
 
 
