@@ -8,7 +8,7 @@ import numpy as np
 
 from hyperforecast.checks import InputError, check_whole
 from hyperforecast.describing import describe
-from hyperforecast.forecasting import Forecaster, advise_settings, load_forecaster, opening_settings
+from hyperforecast.forecasting import Forecaster, Preferences, advise_settings, load_forecaster, opening_settings
 from hyperforecast.increments import Increment, check_features, check_labels
 from hyperforecast.learning import (
     HeadTrainer, boundary_seed, class_probabilities, close_boundary, open_boundary, predict_codes, try_settings,
@@ -34,6 +34,12 @@ class GrowingClassifier:
         Settings of each boundary: advised, or these.
     forecaster : None, path or Forecaster
         What advises; None is the one that ships for the method.
+    old_weight : None or float in [0, 1]
+        What advice cares for: weight of the accuracy on old classes, new ones having the rest; None is by class count.
+    now_weight : float in [0, 1]
+        Weight of the outcome at the boundary itself; the rest is that of the two boundaries that follow.
+    tolerance : float in [0, 1]
+        Accuracy that may be given away for fewer exemplars per class.
     random_state : int, numpy RandomState or None
         Fixes every draw; None draws a new seed at the first increment.
 
@@ -63,7 +69,7 @@ class GrowingClassifier:
     """
 
     def __init__(self, method="wa", *, hidden_units=64, passes=10, batch_size=32, memory_limit=2000, settings=ADVISED,
-                 forecaster=None, random_state=0):
+                 forecaster=None, old_weight=None, now_weight=1 / 3, tolerance=0.005, random_state=0):
         self.method = method
         self.hidden_units = hidden_units
         self.passes = passes
@@ -71,6 +77,9 @@ class GrowingClassifier:
         self.memory_limit = memory_limit
         self.settings = settings
         self.forecaster = forecaster
+        self.old_weight = old_weight
+        self.now_weight = now_weight
+        self.tolerance = tolerance
         self.random_state = random_state
 
     def fit(self, X, y):
@@ -207,6 +216,7 @@ class GrowingClassifier:
 
     def _boundary(self, increment, seed):
         carryover = getattr(self, "carryover_", None)
+        self._preferences()
         return open_boundary(self._plan(), carryover, increment, seed=boundary_seed(seed, carryover))
 
     def _advice_at(self, boundary, seed):
@@ -216,7 +226,11 @@ class GrowingClassifier:
         if forecaster.method != self.method:
             raise InputError("forecaster", f"must be fitted for the method {self.method}", forecaster.method)
         descriptors = describe(HeadTrainer(), boundary, seed=boundary_seed(seed, boundary.carryover))
-        return advise_settings(forecaster, descriptors, SettingsBox(self.method, boundary.most_kept))
+        return advise_settings(forecaster, descriptors, SettingsBox(self.method, boundary.most_kept),
+                               **self._preferences().as_dict())
+
+    def _preferences(self):
+        return Preferences(self.old_weight, self.now_weight, self.tolerance).checked()
 
     def _given_settings(self):
         """Return the user's own `Settings`, checked; None where they are to be advised."""

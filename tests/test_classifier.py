@@ -338,6 +338,16 @@ def test_advice_keeps_to_the_memory_at_hand(forecasters):
     assert all(one.kept_per_class <= 3 for one in (*found.ranked, found.constant))
 
 
+def test_advice_cares_for_what_the_classifier_was_told(forecasters):
+    told = {"old_weight": 0.9, "now_weight": 0.5, "tolerance": 0.01}
+    clf = classifier("wa", settings="advised", forecaster=forecasters["wa"], **told)
+    clf.partial_fit(*parts([0, 1])).partial_fit(*parts([2], seed=1))
+    assert clf.advice_.preferences.as_dict() == told
+    clf.set_params(now_weight=2)
+    with pytest.raises(InputError, match="^now_weight: must be a number from 0 to 1; received 2"):
+        clf.partial_fit(*parts([3], seed=2))
+
+
 def test_there_is_no_advice_before_the_first_increment(advised):
     with pytest.raises(NotFittedError, match="has learned nothing yet"):
         advise(classifier(settings="advised"), *parts([0, 1]))
@@ -370,7 +380,7 @@ def test_the_front_door_has_these_names_and_no_others():
         hyperforecast.Forecast
     assert clone(GrowingClassifier()).get_params() == {
         "method": "wa", "hidden_units": 64, "passes": 10, "batch_size": 32, "memory_limit": 2000, "settings": "advised",
-        "forecaster": None, "random_state": 0}
+        "forecaster": None, "old_weight": None, "now_weight": 1 / 3, "tolerance": 0.005, "random_state": 0}
 
 
 def test_the_examples_in_the_docstrings_run():

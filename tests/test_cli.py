@@ -87,6 +87,20 @@ def test_a_dry_run_stores_nothing(capsys, device, deliveries):
     assert run(capsys, "history", "--device", device) == before
 
 
+def test_what_advice_is_to_care_for_is_told_and_kept(capsys, device, deliveries):
+    given = ["--increment", deliveries[2], "--device", device]
+    usual, old = (run(capsys, "advise", *given, *told) for told in ([], ["--old-weight", "1", "--tolerance", "0.02"]))
+    assert usual["preferences"] == {"old_weight": None, "now_weight": 1 / 3, "tolerance": 0.005}
+    assert old["preferences"] == {"old_weight": 1.0, "now_weight": 1 / 3, "tolerance": 0.02}
+    assert old["expected"]["old"]["value"] >= usual["expected"]["old"]["value"]
+    main(["update", *given, "--old-weight", "0.8"])
+    assert "Asked for  old weight 0.8\n" in capsys.readouterr().out
+    assert run(capsys, "advise", *given)["preferences"]["old_weight"] == 0.8
+    assert run(capsys, "advise", *given, "--old-weight", "count")["preferences"]["old_weight"] is None
+    assert "--old-weight: must be a number" in refused(capsys, "advise", *given, "--old-weight", "most")
+    assert "now_weight: must be a number" in refused(capsys, "advise", *given, "--now-weight", "-1")
+
+
 def test_history_tells_what_was_advised_expected_and_achieved(capsys, device):
     updates = run(capsys, "history", "--device", device)["updates"]
     assert [one["number"] for one in updates] == [1, 2]

@@ -4,7 +4,8 @@ from dataclasses import replace
 
 from hyperforecast.checks import InputError
 from hyperforecast.cli.options import (
-    add_device, add_forecaster, add_settings, checked_seed, chosen_forecaster, chosen_settings,
+    add_device, add_forecaster, add_preferences, add_settings, checked_seed, chosen_forecaster, chosen_preferences,
+    chosen_settings,
 )
 from hyperforecast.cli.text import CAUTION, expected, listed, number, say, settings_lines, short, table
 from hyperforecast.settings import METHODS, Plan
@@ -25,10 +26,12 @@ def add_commands(command):
     advise.add_argument("--schema", choices=("request", "advice"), help="print the JSON Schema of such a request, or of "
                         "the answer to --json, and stop")
     add_forecaster(advise)
+    add_preferences(advise)
 
     update = command("update", _update, "Advise, learn, check, keep or roll back; the first one makes the device folder.")
     add_device(update)
     add_forecaster(update)
+    add_preferences(update)
     update.add_argument("--dry-run", action="store_true", help="stop after the advice")
     update.add_argument("--seed", type=int, default=0, help="of training (%(default)s)")
     overrule = update.add_argument_group("overrule the advice: all three together")
@@ -82,18 +85,20 @@ def _answer(options):
 
 
 def _dry_run(options):
-    from hyperforecast.device import DeviceFolder, update
+    from hyperforecast.device import DeviceFolder, kept_preferences, update
     from hyperforecast.increments import read_increment
 
     folder = DeviceFolder(options.device)
     generation = folder.read()
     increment = read_increment(options.increment, n_features=generation.carryover.n_features)
-    return update(folder, increment, forecaster=chosen_forecaster(options, folder, generation), dry_run=True)
+    return update(folder, increment, forecaster=chosen_forecaster(options, folder, generation), dry_run=True,
+                  preferences=chosen_preferences(options, kept_preferences(generation.history)))
 
 
 def _advice_lines(advice):
     verdict = advice.familiarity
-    lines = ["Advised settings", *settings_lines(advice.settings), "Accuracy to expect, with 90% interval"]
+    lines = ["Advised settings", *settings_lines(advice.settings), *_preference_lines(advice.preferences),
+             "Accuracy to expect, with 90% interval"]
     for name, one in (("old classes", advice.expected_old), ("new classes", advice.expected_new),
                       ("all classes", advice.expected_all)):
         lines.append(f"  {name:<18} {one.value:.3f}  ({one.low:.3f} to {one.high:.3f})")
@@ -109,8 +114,16 @@ def _advice_lines(advice):
     return [*lines, CAUTION]
 
 
+def _preference_lines(preferences):
+    """A line that says what advice was told to care for, if that is not the usual."""
+    usual = type(preferences)().as_dict()
+    told = [f"{name.replace('_', ' ')} {'by class count' if value is None else format(value, '.3g')}"
+            for name, value in preferences.as_dict().items() if value != usual[name]]
+    return [f"Asked for  {', '.join(told)}"] if told else []
+
+
 def _update(options):
-    from hyperforecast.device import DeviceFolder, update
+    from hyperforecast.device import DeviceFolder, kept_preferences, update
     from hyperforecast.increments import read_increment
 
     settings = chosen_settings(options)
@@ -120,16 +133,18 @@ def _update(options):
                          "nothing", "say who overrules the advice, why, and with what settings")
     folder = DeviceFolder(options.device)
     given = {name: getattr(options, name) for name in PLAN_HELP if getattr(options, name) is not None}
-    plan, forecaster, n_features = None, None, None
+    plan, forecaster, n_features, history = None, None, None, []
     if folder.numbers():
         generation = folder.read()
         forecaster, n_features = chosen_forecaster(options, folder, generation), generation.carryover.n_features
         plan = replace(generation.carryover.plan, **_plan_arguments(given)) if given else None
+        history = generation.history
     else:
         plan = Plan(**_plan_arguments(given)).checked()
     increment = read_increment(options.increment, n_features=n_features)
     report = update(folder, increment, plan=plan, forecaster=forecaster, settings=settings, by=options.by,
-                    because=options.because, seed=checked_seed(options), dry_run=options.dry_run)
+                    because=options.because, preferences=chosen_preferences(options, kept_preferences(history)),
+                    seed=checked_seed(options), dry_run=options.dry_run)
     say(options, report.as_dict(), _update_lines(report))
     return report.status or 0
 

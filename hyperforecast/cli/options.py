@@ -1,6 +1,7 @@
 """Options that several commands share."""
 
 import os
+from dataclasses import replace
 
 from hyperforecast.checks import InputError, check_keys, check_whole
 
@@ -54,6 +55,29 @@ def chosen_settings(options):
         except ValueError:
             raise InputError(f"--settings {name}", "must be a number", repr(value)) from None
     return settings
+
+
+def add_preferences(parser):
+    """What advice is to care for."""
+    group = parser.add_argument_group("what advice is to care for; a device keeps it from update to update")
+    group.add_argument("--old-weight", metavar="SHARE", help='weight of old classes, new ones have the rest, 0 to 1; or '
+                       '"count", by their number (count)')
+    group.add_argument("--now-weight", type=float, metavar="SHARE", help="weight of this boundary, the two that follow "
+                       "have the rest (1/3)")
+    group.add_argument("--tolerance", type=float, metavar="SHARE", help="accuracy that may be given away for fewer "
+                       "exemplars (0.005)")
+
+
+def chosen_preferences(options, kept):
+    """Return the preferences that were kept, changed as the options say."""
+    given = {name: value for name in kept.as_dict() if (value := getattr(options, name)) is not None}
+    if "old_weight" in given:
+        try:
+            given["old_weight"] = None if given["old_weight"] == "count" else float(given["old_weight"])
+        except ValueError:
+            raise InputError("--old-weight", 'must be a number from 0 to 1, or "count"',
+                             repr(given["old_weight"])) from None
+    return replace(kept, **given).checked()
 
 
 def definitions(paths):

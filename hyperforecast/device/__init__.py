@@ -8,7 +8,7 @@ from hyperforecast.device.classes import (
     ClassStatus, Erasure, class_table, erase, merge, rename, retire, set_floor,
 )
 from hyperforecast.device.comparison import Comparison, compare_forecasters, mean_errors
-from hyperforecast.device.cycle import UpdateReport, update
+from hyperforecast.device.cycle import UpdateReport, kept_preferences, update
 from hyperforecast.device.folder import DeviceFolder, Generation, carryover_bundle, carryover_from
 from hyperforecast.device.pin import (
     forecaster_for, pin_forecaster, pinned_path, unpin_forecaster, upgrade_forecaster, verify_pinned,
@@ -22,6 +22,7 @@ __all__ = [
     "Care", "ClassStatus", "Comparison", "DeviceFolder", "Erasure", "Evaluation", "FolderBusy", "FolderDamaged",
     "FolderNotWritable", "Generation", "Pin", "Prediction", "UpdateReport", "UpdateStatus", "against_forecast",
     "carryover_bundle", "carryover_from", "class_table", "compare_forecasters", "erase", "evaluate", "forecaster_for",
-    "keep_acceptance", "mean_errors", "merge", "pin_forecaster", "pinned_path", "predict", "record_outcome", "rename",
-    "retire", "roll_back", "set_floor", "unpin_forecaster", "update", "upgrade_forecaster", "verify_pinned",
+    "keep_acceptance", "kept_preferences", "mean_errors", "merge", "pin_forecaster", "pinned_path", "predict",
+    "record_outcome", "rename", "retire", "roll_back", "set_floor", "unpin_forecaster", "update", "upgrade_forecaster",
+    "verify_pinned",
 ]

@@ -12,6 +12,8 @@ An entry of the history, a JSON-able dict, tells of one update:
                             null at the first update
     forecaster              checksum of the one that advised, or null
     forecaster_version      version of the program that fitted it, or null
+    preferences             what advice was to care for, see `hyperforecast.forecasting.Preferences`: the next update keeps
+                            them unless it is told otherwise
     overruled               null, or {"by", "because"} where settings were given, whatever was advised: who decided so
                             and why, in their words; what was advised instead stands in `advice`
     settings, expected, diverged, achieved, acceptance, by_class, operations, reasons
@@ -43,7 +45,7 @@ from hyperforecast.device.care import Care
 from hyperforecast.device.folder import DeviceFolder
 from hyperforecast.device.pin import forecaster_for
 from hyperforecast.device.status import UpdateStatus
-from hyperforecast.forecasting import Advice, advise_settings, opening_settings
+from hyperforecast.forecasting import Advice, Preferences, advise_settings, opening_settings
 from hyperforecast.learning import (
     Carryover, HeadTrainer, accuracies, boundary_seed, close_boundary, open_boundary, standardize, try_settings,
 )
@@ -93,7 +95,7 @@ class UpdateReport:
 
 
 def update(folder, increment, *, plan=None, forecaster=None, trainer=None, settings=None, by=None, because=None,
-           retries=1, most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0, dry_run=False):
+           preferences=None, retries=1, most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0, dry_run=False):
     """Learn an increment on a device, in one new generation of its folder; return an `UpdateReport`.
 
     Parameters
@@ -112,6 +114,8 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         Train with these, whatever is advised. A dict names some of them; the others are as advised.
     by, because : str, optional
         Who overrules the advice and why, for the history: both, together with settings.
+    preferences : Preferences, optional
+        What advice is to care for, from now on; by default what it was told at earlier updates.
     retries : int
         How often a try that is not kept is followed by another one: with the next alternative of the advice, at the
         first update with a tenth of the learning rate. Settings that were given are tried once.
@@ -167,7 +171,9 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         boundary = open_boundary(plan, carryover, increment, seed=seed)
         trainer = HeadTrainer() if trainer is None else trainer
         _check_head(folder, trainer, carryover)
-        advice = None if carryover is None else _advise(folder, before, trainer, boundary, forecaster, seed)
+        history = [] if before is None else before.history
+        preferences = kept_preferences(history) if preferences is None else preferences.checked()
+        advice = None if carryover is None else _advise(folder, before, trainer, boundary, forecaster, preferences, seed)
         candidates = _candidates(plan, advice, settings, retries)
         care = Care() if before is None else before.care
         check = _Check(trainer, boundary, advice, most_lost, most_lost_by_class, care)
@@ -178,11 +184,11 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
             if not tries[-1]["reasons"]:
                 carryover = close_boundary(trainer, boundary, attempt, seed=seed)
                 break
-        history = [] if before is None else before.history
         entry = {
             "number": history[-1]["number"] + 1 if history else 1,
             "time": datetime.now(UTC).isoformat(timespec="seconds"), "device": _identity(history),
-            **_arrived(boundary, increment), **_advised(advice), "overruled": overruled,
+            **_arrived(boundary, increment), **_advised(advice),
+            "preferences": preferences.as_dict(), "overruled": overruled,
             **(tries[-1] if tries else {"settings": candidates[0].as_dict()}), "earlier_tries": tries[:-1],
             "kept": bool(tries) and not tries[-1]["reasons"], "seconds": round(time.perf_counter() - started, 4),
         }
@@ -190,6 +196,12 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         generation = folder.store(carryover, [*history, entry], care, in_place=not entry["kept"]) if stored else None
     status = None if dry_run else UpdateStatus.KEPT if entry["kept"] else UpdateStatus.ROLLED_BACK
     return UpdateReport(status, generation, entry, advice, carryover)
+
+
+def kept_preferences(history):
+    """Return the `Preferences` that a device was last told, from its history; `InputError` if they are damaged."""
+    told = [entry["preferences"] for entry in history if "preferences" in entry]
+    return Preferences.from_dict("preferences in the history", told[-1]) if told else Preferences()
 
 
 def _identity(history):
@@ -221,7 +233,7 @@ def _check_head(folder, trainer, carryover):
                          received, "use the trainer of the first update")
 
 
-def _advise(folder, before, trainer, boundary, forecaster, seed):
+def _advise(folder, before, trainer, boundary, forecaster, preferences, seed):
     method = boundary.plan.method
     if forecaster is None and before.care.pin is None and not isinstance(trainer, HeadTrainer):
         raise InputError("forecaster", "must be given with a trainer of one's own", "none",
@@ -230,7 +242,8 @@ def _advise(folder, before, trainer, boundary, forecaster, seed):
     if forecaster.method != method:
         raise InputError("forecaster", f"must be one for {method}, the method of the plan", forecaster.method)
     descriptors = describe(trainer, boundary, seed=seed)
-    return advise_settings(forecaster, descriptors, SettingsBox(method, boundary.most_kept))
+    return advise_settings(forecaster, descriptors, SettingsBox(method, boundary.most_kept),
+                           **preferences.as_dict())
 
 
 def _overruled(settings, by, because):

@@ -1,4 +1,7 @@
-"""Forecasts and advice with numpy alone. Read trees, intervals, familiarity, forecaster, advice, in this order."""
+"""Forecasts and advice with numpy alone.
+
+Read trees, intervals, familiarity, forecaster, preferences, advice, in this order.
+"""
 
 from hyperforecast.forecasting.advice import MOST_DIVERGENCE, Advice, Reason, advise_settings, explain
 from hyperforecast.forecasting.familiarity import Familiarity, FamiliarityVerdict
@@ -7,8 +10,9 @@ from hyperforecast.forecasting.forecaster import (
 )
 from hyperforecast.forecasting.intervals import grouped_conformal_threshold
 from hyperforecast.forecasting.opening import opening_settings
+from hyperforecast.forecasting.preferences import Preferences
 from hyperforecast.forecasting.trees import TreeEnsemble
 
 __all__ = ["Advice", "Constant", "Expected", "Familiarity", "FamiliarityVerdict", "Forecaster", "MOST_DIVERGENCE",
-           "RANGES", "Reason", "TreeEnsemble", "advise_settings", "combined", "explain", "forecaster_bytes",
+           "Preferences", "RANGES", "Reason", "TreeEnsemble", "advise_settings", "combined", "explain", "forecaster_bytes",
            "grouped_conformal_threshold", "load_forecaster", "opening_settings", "save_forecaster", "with_checksum"]

@@ -5,9 +5,9 @@ from functools import cached_property
 
 import numpy as np
 
-from hyperforecast.checks import check_number
 from hyperforecast.forecasting.familiarity import FamiliarityVerdict
-from hyperforecast.forecasting.forecaster import Forecaster
+from hyperforecast.forecasting.forecaster import Forecaster, old_share
+from hyperforecast.forecasting.preferences import Preferences
 from hyperforecast.settings import KEPT_PER_CLASS, Settings, SettingsBox
 
 # Candidates that are weighed over the whole box, and around the best of them.
@@ -18,8 +18,6 @@ CENTERS, AROUND_EACH = 6, 16
 NEIGHBOURHOOD = 0.05
 # Candidates more likely to diverge than this are left out while there are others.
 MOST_DIVERGENCE = 0.1
-# Fewer exemplars are preferred while the expected outcome stays within this of the best.
-KEPT_TOLERANCE = 0.005
 ALTERNATIVES = 8
 # Alternatives differ from better ranked ones by at least this much, in unit-cube distance.
 FEWEST_APART = 0.08
@@ -75,6 +73,8 @@ class Advice:
         What the best constant would have been here.
     descriptors : dict of str to float
     forecaster : Forecaster
+    box : SettingsBox
+    preferences : Preferences
     """
 
     settings: Settings
@@ -88,12 +88,12 @@ class Advice:
     descriptors: dict
     forecaster: Forecaster = field(repr=False)
     box: SettingsBox = field(repr=False)
-    now_weight: float = 1 / 3
+    preferences: Preferences = Preferences()
 
     @cached_property
     def reasons(self):
         """The descriptors that moved the advice most, as `Reason`, greatest first; computed when first asked for."""
-        return explain(self.forecaster, self.descriptors, self.box, now_weight=self.now_weight)
+        return explain(self.forecaster, self.descriptors, self.box, preferences=self.preferences)
 
     @property
     def ranked(self):
@@ -113,14 +113,14 @@ class Advice:
                 "score": verdict.score, "familiar": verdict.familiar, "distance": verdict.distance,
                 "out_of_range": [{"descriptor": one.name, "value": one.value, "low": one.low, "high": one.high}
                                  for one in verdict.out_of_range]},
-            "constant": self.constant.as_dict(),
+            "constant": self.constant.as_dict(), "preferences": self.preferences.as_dict(),
             "reasons": [{**one.__dict__, "text": str(one)} for one in self.reasons],
             "descriptors": {name: None if np.isnan(value) else value for name, value in self.descriptors.items()},
             "forecaster": self.forecaster.checksum,
         }
 
 
-def advise_settings(forecaster, descriptors, box, *, now_weight=1 / 3):
+def advise_settings(forecaster, descriptors, box, **preferences):
     """Return the `Advice` of a forecaster for a boundary.
 
     Parameters
@@ -130,13 +130,13 @@ def advise_settings(forecaster, descriptors, box, *, now_weight=1 / 3):
         NaN, or no entry, is missing.
     box : SettingsBox
         The settings that are open at the boundary.
-    now_weight : float in [0, 1]
-        Weight of the outcome at this boundary; the rest is that of the two boundaries that follow.
+    preferences : old_weight, now_weight, tolerance
+        See `Preferences`.
     """
-    check_number("now_weight", now_weight, low=0, high=1)
+    preferences = Preferences(**preferences).checked()
     forecast = forecaster.at(descriptors)
-    settings, scores = _weigh(forecast, box, now_weight)
-    best = _fewest_kept(forecast, settings[int(np.argmax(scores))], box, now_weight)
+    settings, scores = _weigh(forecast, box, preferences)
+    best = _fewest_kept(forecast, settings[int(np.argmax(scores))], box, preferences)
     alternatives = _apart(box, best, settings, scores)
     expected = forecast.expected([best])
     return Advice(
@@ -145,11 +145,11 @@ def advise_settings(forecaster, descriptors, box, *, now_weight=1 / 3):
         divergence=float(forecast.divergence([best])[0]),
         familiarity=forecaster.familiarity.assess(forecaster.vector(descriptors)),
         constant=forecaster.constant_settings(descriptors, box), descriptors=descriptors, forecaster=forecaster,
-        box=box, now_weight=now_weight,
+        box=box, preferences=preferences,
     )
 
 
-def explain(forecaster, descriptors, box, *, now_weight=1 / 3, count=3):
+def explain(forecaster, descriptors, box, *, preferences=Preferences(), count=3):
     """Return the `count` most telling `Reason`: each descriptor in turn is set to its typical value, and advice taken.
 
     Only the most influential descriptors are looked into, over the candidates that cover the whole box.
@@ -158,7 +158,7 @@ def explain(forecaster, descriptors, box, *, now_weight=1 / 3, count=3):
     settings = box.from_unit(points)
 
     def choice(described):
-        return points[int(np.argmax(_smooth(points, _scores(forecaster.at(described), settings, box, now_weight))))]
+        return points[int(np.argmax(_smooth(points, _scores(forecaster.at(described), settings, box, preferences))))]
 
     here = choice(descriptors)
     typical = dict(zip(forecaster.descriptor_names, forecaster.typical))
@@ -192,30 +192,37 @@ def lattice(n, n_dimensions):
     return (0.5 + np.arange(1, n + 1)[:, None] * g ** -np.arange(1.0, n_dimensions + 1)) % 1.0
 
 
-def _weigh(forecast, box, now_weight):
+def _weigh(forecast, box, preferences):
     """Return candidate settings and their scores: over the whole box, then around the best."""
     points = lattice(SPREAD_OUT, box.n_dimensions)
-    scores = _scores(forecast, box.from_unit(points), box, now_weight)
+    scores = _scores(forecast, box.from_unit(points), box, preferences)
     centers = points[np.argsort(-_smooth(points, scores), kind="stable")[:CENTERS]]
     offsets = (lattice(AROUND_EACH, box.n_dimensions) - 0.5) * 4 * NEIGHBOURHOOD
     around = np.clip((centers[:, None] + offsets).reshape(-1, box.n_dimensions), 0, 1)
-    scores = np.concatenate([scores, _scores(forecast, box.from_unit(around), box, now_weight)])
+    scores = np.concatenate([scores, _scores(forecast, box.from_unit(around), box, preferences)])
     points = np.concatenate([points, around])
     return box.from_unit(points), _smooth(points, scores)
 
 
-def _scores(forecast, settings, box, now_weight):
+def _scores(forecast, settings, box, preferences):
     """Return what candidates are ranked by, shape (n,)."""
-    if forecast.forecaster.ranking == "direct":
+    # Direct forecasts know nothing of weights.
+    if forecast.forecaster.ranking == "direct" and preferences.old_weight is None:
         return -np.linalg.norm(box.to_unit(settings) - forecast.direct(box), axis=1)
-    return _objective(forecast, settings, now_weight)
+    return _objective(forecast, settings, preferences)
 
 
-def _objective(forecast, settings, now_weight):
+def _objective(forecast, settings, preferences):
     """Return the expected outcome (n,), now and later, from the best; candidates that may well diverge come last."""
-    value = now_weight * forecast.shortfall(settings)
-    if now_weight < 1:
-        value = value + (1 - now_weight) * forecast.later(settings)
+    now = preferences.now_weight
+    value = now * forecast.shortfall(settings)
+    if now < 1:
+        value = value + (1 - now) * forecast.later(settings)
+    if preferences.old_weight is not None:
+        # w old + (1 - w) new lies (w - share) (old - new) above the accuracy that counts every class alike. Between
+        # old and new classes, what is won now is taken to last.
+        outcome = forecast.outcome(settings)
+        value = value + (preferences.old_weight - old_share(forecast.descriptors)) * (outcome["old"] - outcome["new"])
     return value - (forecast.divergence(settings) > MOST_DIVERGENCE)
 
 
@@ -228,14 +235,14 @@ def _smooth(points, scores):
     return np.round(weights @ scores / weights.sum(axis=1), 9)
 
 
-def _fewest_kept(forecast, best, box, now_weight):
+def _fewest_kept(forecast, best, box, preferences):
     """Return `best` with the fewest exemplars per class whose expected outcome is within tolerance of the best."""
     if best.kept_per_class is None:
         return best
     kept = np.unique(np.round(np.geomspace(KEPT_PER_CLASS[0], box.most_kept, 24)).astype(int))
     candidates = [replace(best, kept_per_class=int(k)) for k in kept]
-    values = _objective(forecast, candidates, now_weight)
-    return candidates[int(np.argmax(values >= values.max() - KEPT_TOLERANCE))]
+    values = _objective(forecast, candidates, preferences)
+    return candidates[int(np.argmax(values >= values.max() - preferences.tolerance))]
 
 
 def _apart(box, best, settings, scores):

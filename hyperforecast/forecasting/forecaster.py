@@ -216,14 +216,18 @@ class BoundaryForecast:
 
 
 def combined(old, new, descriptors):
-    """Return the accuracy on all classes seen, every class alike, from that on old and on new ones.
+    """Return the accuracy on all classes seen, every class alike, from that on old and on new ones."""
+    share = old_share(descriptors)
+    return share * old + (1 - share) * new
+
+
+def old_share(descriptors):
+    """Return the share of old classes among all classes seen.
 
     As many old as new ones are taken for granted where the descriptors do not tell.
     """
     n_old, n_new = (descriptors.get(name, np.nan) for name in ("classes_old", "classes_new"))
-    if np.isnan(n_old) or np.isnan(n_new):
-        n_old = n_new = 1
-    return (n_old * old + n_new * new) / (n_old + n_new)
+    return 0.5 if np.isnan(n_old) or np.isnan(n_new) else n_old / (n_old + n_new)
 
 
 def save_forecaster(path, forecaster):

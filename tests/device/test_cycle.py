@@ -14,7 +14,7 @@ import hyperforecast
 from hyperforecast.checks import InputError
 from hyperforecast.classifier import GrowingClassifier
 from hyperforecast.device import DeviceFolder, FolderBusy, UpdateStatus, carryover_bundle, cycle, update
-from hyperforecast.forecasting import TreeEnsemble, opening_settings, save_forecaster
+from hyperforecast.forecasting import Preferences, TreeEnsemble, opening_settings, save_forecaster
 from hyperforecast.increments import Increment, check_increment
 from hyperforecast.learning import HeadTrainer
 from hyperforecast.settings import METHODS, Plan, Settings
@@ -171,6 +171,30 @@ def test_a_dry_run_stops_after_the_advice_and_changes_nothing(started, forecaste
 
 
 # --- the rules ------------------------------------------------------------------------------------------------------
+
+def test_a_device_keeps_what_advice_is_to_care_for(tmp_path, forecasters):
+    told = Preferences(old_weight=0.9, now_weight=0.5, tolerance=0.02)
+    update(tmp_path / "cell", clouds(FIRST), plan=PLANS["wa"], preferences=told)
+    folder, forecaster = DeviceFolder(tmp_path / "cell"), forecasters["wa"]
+    kept = update(folder, clouds(SECOND, seed=1), forecaster=forecaster, dry_run=True)
+    assert kept.entry["preferences"] == told.as_dict() and kept.advice.preferences == told
+    usual = update(folder, clouds(SECOND, seed=1), forecaster=forecaster, preferences=Preferences(), dry_run=True)
+    assert usual.advice.preferences == Preferences()
+    assert kept.advice.expected_old.value >= usual.advice.expected_old.value
+    # A dry run leaves it as it was; an update does not.
+    assert update(folder, clouds(SECOND, seed=1), forecaster=forecaster).advice.preferences == told
+    update(folder, clouds(THIRD, seed=2), forecaster=forecaster, preferences=Preferences(now_weight=1))
+    assert cycle.kept_preferences(folder.read().history) == Preferences(now_weight=1)
+    with pytest.raises(InputError, match="^old_weight: must be a number from 0 to 1; received 2"):
+        update(folder, clouds(THIRD, seed=3), forecaster=forecaster, preferences=Preferences(old_weight=2))
+
+
+@pytest.mark.parametrize("damaged", [{"old_weight": "much"}, {"weight": 1}, [], "old"])
+def test_damaged_preferences_are_refused(damaged):
+    with pytest.raises(InputError):
+        cycle.kept_preferences([{"preferences": damaged}])
+    assert cycle.kept_preferences([{}]) == Preferences()
+
 
 def rolled_back(folder, report, before):
     """Assert that nothing but the history has changed."""

@@ -116,10 +116,11 @@ def test_advice_tells_what_the_forecaster_says_of_its_settings(forecasters, here
     assert found.constant == forecaster.constant_settings(here, box)
 
 
-@pytest.mark.parametrize("weight", [-0.1, 1.1, np.nan, "1", None])
-def test_the_weight_of_now_is_a_share(weight, forecasters, here):
-    with pytest.raises(InputError, match="^now_weight: must be a number from 0 to 1; received "):
-        advise_settings(forecasters["wa"], here, SettingsBox("wa"), now_weight=weight)
+@pytest.mark.parametrize("name", ["now_weight", "old_weight", "tolerance"])
+@pytest.mark.parametrize("weight", [-0.1, 1.1, np.nan, "1", True])
+def test_preferences_are_shares(name, weight, forecasters, here):
+    with pytest.raises(InputError, match=f"^{name}: must be a number from 0 to 1; received "):
+        advise_settings(forecasters["wa"], here, SettingsBox("wa"), **{name: weight})
 
 
 # Models made by hand.
@@ -160,6 +161,45 @@ def test_later_boundaries_weigh_as_much_as_is_told(made, here):
     assert advise_settings(again, here, box, now_weight=0.9).settings.learning_rate < 10**-2.5
 
 
+@pytest.mark.parametrize("method", ["wa", "ewc"])
+def test_the_weight_of_old_classes_moves_what_is_expected_of_them(method, forecasters, datasets):
+    """With w old + (1 - w) new to be maximized, old - new can only rise with w, but for the steps of the search."""
+    forecaster = replace(forecasters[method], ranking="outcome")
+    moved = []
+    for row, most_kept in list(zip(datasets[method].descriptors, datasets[method].most_kept))[::3]:
+        here, box = dict(zip(DESCRIPTORS, row)), SettingsBox(method, int(most_kept))
+        found = [advise_settings(forecaster, here, box, old_weight=weight) for weight in (0, 0.25, 0.5, 0.75, 1)]
+        moved.append([[one.expected_old.value, one.expected_new.value] for one in found])
+    old, new = np.moveaxis(np.array(moved), 2, 0)
+    assert (np.diff(old.mean(axis=0)) >= -0.003).all() and (np.diff(new.mean(axis=0)) <= 0.003).all()
+    assert np.mean(np.diff(old - new) >= -0.02) > 0.9
+    assert (old[:, -1] - old[:, 0]).mean() > 0.05 and (new[:, 0] - new[:, -1]).mean() > 0.05
+
+
+def test_the_weight_of_old_classes_by_hand(made, here):
+    """A low learning rate costs new classes 0.4, a high one old classes 0.2; of three classes two are old."""
+    outcomes = {"old": ensemble(split("log_learning_rate", -2.5, leaf(0.8), leaf(0.6))),
+                "new": ensemble(split("log_learning_rate", -2.5, leaf(0.3), leaf(0.7)))}
+    here, box = {**here, "classes_old": 2.0, "classes_new": 1.0}, SettingsBox("wa", 40)
+    # 2/3 x 0.8 + 1/3 x 0.3 = 0.633 against 2/3 x 0.6 + 1/3 x 0.7 = 0.633: even by class count.
+    forecaster = made(**outcomes)
+    assert advise_settings(forecaster, here, box, old_weight=0.7).settings.learning_rate < 10**-2.5
+    assert advise_settings(forecaster, here, box, old_weight=0.6).settings.learning_rate > 10**-2.5
+    # The models of all classes say which is better there: it takes so much more weight of old classes to overrule.
+    forecaster = made(**outcomes, shortfall=ensemble(split("log_learning_rate", -2.5, leaf(-0.06), leaf(0.0))))
+    assert advise_settings(forecaster, here, box, now_weight=1).settings.learning_rate > 10**-2.5
+    assert advise_settings(forecaster, here, box, now_weight=1, old_weight=0.75).settings.learning_rate > 10**-2.5
+    assert advise_settings(forecaster, here, box, now_weight=1, old_weight=0.8).settings.learning_rate < 10**-2.5
+
+
+@pytest.mark.parametrize("gain, tolerance, expected", [(0.004, 0.003, 11), (0.03, 0.04, 1), (0.03, 0, 11)])
+def test_the_tolerance_is_the_users(gain, tolerance, expected, made, here):
+    forecaster = made(shortfall=ensemble(split("log_kept_per_class", 1.0, leaf(-gain), leaf(0.0))))
+    found = advise_settings(forecaster, here, SettingsBox("wa", 40), now_weight=1, tolerance=tolerance)
+    assert found.settings.kept_per_class == expected
+    assert found.as_dict()["preferences"] == {"old_weight": None, "now_weight": 1, "tolerance": tolerance}
+
+
 @pytest.mark.parametrize("gain, expected", [(0.004, 1), (0.006, 11)])
 def test_exemplars_are_spent_only_where_they_bring_more_than_half_a_point(gain, expected, made, here):
     """More than ten exemplars of a class bring `gain`; 11 is the first of 24 even steps up to 40 beyond ten."""
@@ -174,13 +214,12 @@ def test_exemplars_are_spent_only_where_they_bring_more_than_half_a_point(gain, 
 def test_alternatives_are_ranked_by_the_models(made, here, monkeypatch):
     """Without smoothing the score of a candidate is its own, and can be looked up."""
     monkeypatch.setattr(advice, "NEIGHBOURHOOD", 1e-3)
-    monkeypatch.setattr(advice, "KEPT_TOLERANCE", 0.0)
     rng = np.random.default_rng(0)
     rough = ensemble(*(split(name, t, leaf(-rng.random() / 50), leaf(-rng.random() / 50))
                        for name, low, high in (("log_learning_rate", -5, 0), ("log_regularization", -3, 3),
                                                ("log_kept_per_class", 0, 1.6))
                        for t in rng.uniform(low, high, 12)))
-    found = advise_settings(made(shortfall=rough), here, SettingsBox("wa", 40))
+    found = advise_settings(made(shortfall=rough), here, SettingsBox("wa", 40), tolerance=0)
     values = found.forecaster.at(here).shortfall(found.ranked)
     assert len(set(values)) > 3
     assert (np.diff(values) <= 1e-9).all()
