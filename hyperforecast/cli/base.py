@@ -66,6 +66,7 @@ def add_commands(command):
     subject.add_argument("--device", metavar="DIR")
     subject.add_argument("--records", metavar="FILE")
     subject.add_argument("--result", metavar="FILE")
+    report.add_argument("--update", type=int, metavar="N", help="with --device: this update alone, on one page")
     report.add_argument("--html", required=True, metavar="FILE", help="report to write")
 
 
@@ -198,11 +199,21 @@ def _by_method(paths):
 
 def _report(options):
     document, lines = {"html": options.html}, []
+    if options.update is not None and not options.device:
+        raise InputError("--update", "must be given with --device", options.update)
     if options.device:
         from hyperforecast.device import DeviceFolder
-        from hyperforecast.workshop.reporting.device_report import device_page
+        from hyperforecast.workshop.reporting.device_report import device_document, device_page
+        from hyperforecast.workshop.reporting.update_report import update_document, update_page
 
-        page = device_page(DeviceFolder(options.device).read(), name=os.path.basename(os.path.normpath(options.device)))
+        generation, name = DeviceFolder(options.device).read(), os.path.basename(os.path.abspath(options.device))
+        if options.update is None:
+            told = device_document(generation, name=name)
+            page = device_page(told)
+        else:
+            told = update_document(generation, options.update, name=name)
+            page = update_page(told)
+        document.update(told)
     elif options.records:
         from hyperforecast.workshop.gathering import RecordsFile
         from hyperforecast.workshop.reporting.records_report import records_page

@@ -69,7 +69,8 @@ class Chart:
         return ElementTree.tostring(drawing, encoding="unicode")
 
 
-def line_chart(title, series, *, y_label, x_label="boundary", first=1, logarithmic=False, shares=False):
+def line_chart(title, series, *, y_label, x_label="boundary", first=1, logarithmic=False, shares=False,
+               ringed=()):
     """Return lines over boundaries, one for each series.
 
     Parameters
@@ -84,6 +85,8 @@ def line_chart(title, series, *, y_label, x_label="boundary", first=1, logarithm
         Whether the vertical axis is; values must then be positive.
     shares : bool
         Whether values are shares from 0 to 1, shown as percentages.
+    ringed : sequence of int
+        Places, from 0, at which every line's point is ringed.
     """
     with matplotlib.rc_context(_STYLE):
         figure, axes = _panel(x_label, y_label)
@@ -92,6 +95,8 @@ def line_chart(title, series, *, y_label, x_label="boundary", first=1, logarithm
             values = np.asarray(values, dtype=np.float64)
             look = {**_look(number), "markevery": max(1, len(values) // _MOST_MARKERS)}
             handles += axes.plot(np.arange(first, first + len(values)), values, **look)
+            axes.plot(first + np.array(ringed, dtype=int), values[list(ringed)], "o", markersize=10, color=_INK,
+                      fillstyle="none", markeredgewidth=0.8)
         _whole_numbers(axes.xaxis)
         if logarithmic:
             _logarithmic(axes.yaxis)
@@ -163,7 +168,7 @@ def expected_and_achieved(title, groups):
         return _finished(figure, title)
 
 
-def interval_chart(title, names, series, *, x_label, marks=(0.0, 1.0)):
+def interval_chart(title, names, series, *, x_label, marks=(0.0, 1.0), shares=False):
     """Return points with intervals for each name, one row per name, one marker per series.
 
     Parameters
@@ -176,6 +181,8 @@ def interval_chart(title, names, series, *, x_label, marks=(0.0, 1.0)):
     x_label : str
     marks : sequence of float
         Where upright lines help the eye; bars begin at the first.
+    shares : bool
+        Whether values are shares from 0 to 1, shown as percentages.
     """
     with matplotlib.rc_context(_STYLE):
         figure, axes = _panel(x_label, "", height=60 + len(names) * (8 + 12 * len(series)))
@@ -193,8 +200,41 @@ def interval_chart(title, names, series, *, x_label, marks=(0.0, 1.0)):
         axes.set_yticks(np.arange(len(names)), [_short(name) for name in names])
         axes.set_ylim(len(names) - 0.4, -0.6)
         axes.grid(False, axis="y")
-        axes.xaxis.set_major_formatter(FuncFormatter(_number))
+        axes.xaxis.set_major_formatter(FuncFormatter(_percentage if shares else _number))
         _legend(figure, handles, series, lines=False)
+        return _finished(figure, title)
+
+
+def change_chart(title, names, before, after, notes):
+    """Return shares before and after, one row for each name: hollow and full markers, dashed where it is a loss.
+
+    Parameters
+    ----------
+    title : str
+    names : sequence of str
+        Of the rows, from top to bottom.
+    before, after : sequences of float
+        Shares from 0 to 1; NaN where not known.
+    notes : sequence of str
+        Written at the right of each row.
+    """
+    before, after = (np.asarray(values, dtype=np.float64) for values in (before, after))
+    with matplotlib.rc_context(_STYLE):
+        figure, axes = _panel("accuracy", "", height=60 + 15 * len(names))
+        at = np.arange(len(names))
+        for lost, style in ((False, "-"), (True, (0, (3, 2)))):
+            rows = (after < before) if lost else (after >= before)
+            axes.hlines(at[rows], before[rows], after[rows], color=_INK, linewidth=1.4, linestyles=[style])
+        handles = axes.plot(before, at, "o", color=_INK, fillstyle="none", markersize=7)
+        handles += axes.plot(after, at, "s", color=_INK, markersize=5)
+        for place, note in enumerate(notes):
+            axes.annotate(plain(note), (1, place), (4, 0), xycoords=("axes fraction", "data"),
+                          textcoords="offset points", va="center", fontsize=9, color=_SOFT)
+        axes.set_yticks(at, [_short(name) for name in names])
+        axes.set(xlim=(-0.02, 1.04), ylim=(len(names) - 0.4, -0.6))
+        axes.grid(False, axis="y")
+        axes.xaxis.set_major_formatter(FuncFormatter(_percentage))
+        _legend(figure, handles, ["before", "after"], lines=False)
         return _finished(figure, title)
 
 

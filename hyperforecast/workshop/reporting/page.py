@@ -41,22 +41,35 @@ table { border-collapse: collapse; font-size: .9rem; font-variant-numeric: tabul
 th, td { padding: .25rem .6rem; border-bottom: 1px solid var(--rule); text-align: left; vertical-align: top;
   overflow-wrap: normal; }
 thead th { border-bottom: 2px solid var(--ink); vertical-align: bottom; }
-tbody th { font-weight: 500; min-width: 8rem; overflow-wrap: anywhere; }
+tbody th { font-weight: 500; overflow-wrap: anywhere; }
+tbody th:not(.number) { min-width: 8rem; }
 .number { text-align: right; white-space: nowrap; }
 .heat { width: 100%; }
 .heat td { padding: .2rem .3rem; text-align: right; border: 1px solid #fff; print-color-adjust: exact;
   -webkit-print-color-adjust: exact; }
 dl { display: grid; grid-template-columns: fit-content(45%) minmax(0, 1fr); gap: .2rem 1.2rem; max-width: 44rem; }
 dt { color: var(--soft); } dd { margin: 0; }
+ul { max-width: 44rem; margin: .6rem 0; padding-left: 1.2rem; }
 .pictures { display: grid; gap: .8rem 1.2rem; grid-template-columns: repeat(auto-fill, minmax(10rem, 1fr)); margin: 0;
   padding: 0; list-style: none; }
 .pictures li { break-inside: avoid; }
 .pictures img { display: block; width: 100%; max-width: 20rem; height: auto; }
 .pictures span { font-size: .9rem; }
 @media (min-width: 60rem) { .pictures { grid-template-columns: repeat(auto-fill, minmax(15rem, 1fr)); } }
+@media print, (min-width: 60rem) {
+  .sheet main { display: grid; grid-template-columns: minmax(0, 1fr) minmax(0, 1fr); column-gap: 2rem; }
+  .sheet section:nth-of-type(n+3), .sheet main > p { grid-column: 1 / -1; } }
 footer { margin-top: 3rem; border-top: 1px solid var(--rule); color: var(--soft); font-size: .85rem; }
-@media print { body { max-width: none; padding: 0; font-size: 10pt; } nav { display: none; } h2 { break-after: avoid; }
-  .scroll { overflow: visible; } tr { break-inside: avoid; } a { color: inherit; } }
+@page { size: A4; margin: 12mm 10mm; }
+@media print { :root { font-size: 10pt; } body { max-width: none; padding: 0; } nav { display: none; }
+  h2 { break-after: avoid; } .scroll { overflow: visible; } tr { break-inside: avoid; } a { color: inherit; }
+  table { font-size: .8rem; } th, td { padding: .2rem .35rem; } .panels { grid-template-columns: 1fr 1fr; }
+  footer { margin-top: 1rem; }
+  .sheet { font-size: .92rem; line-height: 1.35; } .sheet header { margin-bottom: .5rem; }
+  .sheet h1 { font-size: 1.4rem; margin: 0; } .sheet h2 { font-size: 1.05rem; margin: .7rem 0 .2rem; }
+  .sheet p, .sheet ul, .sheet dl, .sheet figure, .sheet .lead { margin: .3rem 0; max-width: none; font-size: inherit; }
+  .sheet dl { gap: .05rem 1rem; } .sheet footer { margin-top: .4rem; } .sheet .panels { gap: .3rem 1.5rem; }
+  .sheet td, .sheet th { padding: .08rem .4rem; } }
 """
 
 # What a page may do in a browser: show its own styles and pictures, nothing else.
@@ -92,9 +105,12 @@ class Page:
     title : str
     lead : str
         What the report says, in a sentence or two.
+    one_sheet : bool
+        Whether it is set closely, to print on one sheet of A4.
     """
 
-    def __init__(self, title, lead):
+    def __init__(self, title, lead, *, one_sheet=False):
+        self._one_sheet = one_sheet
         self._title = _escaped(title)
         self._lead = _escaped(lead)
         self._sections = []
@@ -111,6 +127,12 @@ class Page:
     def paragraph(self, text):
         """Add a paragraph."""
         self._parts.append(f"<p>{_escaped(text)}</p>")
+
+    def items(self, texts):
+        """Add a list of short texts; nothing if there are none."""
+        rows = "".join(f"<li>{_escaped(text)}</li>\n" for text in texts)
+        if rows:
+            self._parts.append(f"<ul>\n{rows}</ul>")
 
     def facts(self, facts):
         """Add a list of named facts, a mapping of texts to values."""
@@ -195,13 +217,15 @@ class Page:
     def html(self):
         """Return the report as HTML."""
         links = "".join(f'<li><a href="#section-{at}">{name}</a></li>\n' for at, name in enumerate(self._sections, 1))
-        contents = f'<nav aria-label="Contents"><ol>\n{links}</ol></nav>\n' if len(self._sections) > 2 else ""
+        long = len(self._sections) > 2 and not self._one_sheet
+        contents = f'<nav aria-label="Contents"><ol>\n{links}</ol></nav>\n' if long else ""
+        kind = ' class="sheet"' if self._one_sheet else ""
         body = "\n".join(self._parts) + ("\n</section>" if self._sections else "")
         return (
             '<!DOCTYPE html>\n<html lang="en">\n<head>\n<meta charset="utf-8">\n'
             f'<meta http-equiv="Content-Security-Policy" content="{_POLICY}">\n'
             '<meta name="viewport" content="width=device-width, initial-scale=1">\n'
-            f"<title>{self._title}</title>\n<style>{_STYLE}</style>\n</head>\n<body>\n"
+            f"<title>{self._title}</title>\n<style>{_STYLE}</style>\n</head>\n<body{kind}>\n"
             f'<header><h1>{self._title}</h1>\n<p class="lead">{self._lead}</p></header>\n'
             f"{contents}<main>\n{body}\n</main>\n<footer><p>Written by hyperforecast.</p></footer>\n</body>\n</html>\n"
         )
