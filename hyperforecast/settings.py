@@ -13,6 +13,8 @@ from hyperforecast.checks import InputError, check_choice, check_keys, check_num
 
 METHODS = ("ewc", "lwf", "icarl", "wa")
 REHEARSAL_METHODS = ("icarl", "wa")
+# Parts of a plan that hold for one update as well as for another; None is no limit.
+UPDATE_LIMITS = ("time_limit",)
 
 # Ranges of every policy, search and design; all are covered on a logarithmic scale.
 LEARNING_RATES = (1e-5, 1.0)
@@ -71,6 +73,8 @@ class Plan:
     batch_size : int
     memory_limit : int or str
         Most exemplars held in all, check rows included; or bytes, as "2 MB" (10^6) or "512 KiB" (2^10).
+    time_limit : float in [0.001, 1e7], or None
+        Seconds that an update may take; passes are planned to fit, see `hyperforecast.device.limits`.
     """
 
     method: str = "wa"
@@ -78,6 +82,7 @@ class Plan:
     passes: int = 10
     batch_size: int = 32
     memory_limit: int | str = 2000
+    time_limit: float | None = None
 
     def checked(self):
         """Return this plan, with Python's own numbers, if it is valid, else raise `InputError`."""
@@ -90,7 +95,13 @@ class Plan:
             method=check_choice("method", self.method, METHODS),
             hidden_units=check_whole("hidden_units", self.hidden_units, low=0, high=4096),
             passes=check_whole("passes", self.passes, low=1, high=10_000),
-            batch_size=check_whole("batch_size", self.batch_size, low=1, high=65_536), memory_limit=limit)
+            batch_size=check_whole("batch_size", self.batch_size, low=1, high=65_536), memory_limit=limit,
+            time_limit=self.time_limit if self.time_limit is None else
+            check_number("time_limit", self.time_limit, low=1e-3, high=1e7))
+
+    def without_limits(self):
+        """Return the plan without the limits that may change from update to update."""
+        return replace(self, **dict.fromkeys(UPDATE_LIMITS))
 
     def memory_rows(self, n_features):
         """Return how many rows of `n_features` float32 numbers (and a label of 8 bytes) the memory limit holds."""
@@ -112,8 +123,8 @@ class Plan:
         return self.method in REHEARSAL_METHODS
 
     def as_dict(self):
-        """Return the plan as a JSON-able dict."""
-        return asdict(self)
+        """Return the plan as a JSON-able dict, without the limits that are not set."""
+        return {name: value for name, value in asdict(self).items() if value is not None}
 
 
 UNITS = {"b": 1, "kb": 10**3, "mb": 10**6, "gb": 10**9, "kib": 2**10, "mib": 2**20, "gib": 2**30}

@@ -1,6 +1,6 @@
 """Commands for a device: advise, update, history."""
 
-from dataclasses import replace
+from dataclasses import asdict, replace
 
 from hyperforecast.checks import InputError
 from hyperforecast.cli.options import (
@@ -8,13 +8,17 @@ from hyperforecast.cli.options import (
     chosen_settings,
 )
 from hyperforecast.cli.text import CAUTION, expected, listed, number, say, settings_lines, short, table
-from hyperforecast.settings import METHODS, Plan
+from hyperforecast.settings import METHODS, UPDATE_LIMITS, Plan
 
 PLAN_HELP = {
     "method": "what holds on to old classes", "hidden_units": "width of the hidden layer, 0 for none",
     "passes": "passes over the rows", "batch_size": "rows of a minibatch",
     "memory_limit": 'most exemplars held, or bytes as "2 MB"',
+    "time_limit": "seconds that an update may take, reading the increment aside; none lifts it",
 }
+EXIT_CODES = ("Exit codes: 0 kept, or the end of a dry run; 1 a fault of the program; 2 bad input, nothing was "
+              "changed; 3 rolled back, only the history has grown; 4 another update is at work in the folder, try again later; "
+              "5 the folder is damaged, see rollback; 6 the folder cannot be written, nothing was changed.")
 
 
 def add_commands(command):
@@ -34,16 +38,24 @@ def add_commands(command):
     add_preferences(update)
     update.add_argument("--dry-run", action="store_true", help="stop after the advice")
     update.add_argument("--seed", type=int, default=0, help="of training (%(default)s)")
+    update.epilog = EXIT_CODES
+    rules = update.add_argument_group("rules of rolling back")
+    rules.add_argument("--retries", type=int, metavar="N", help="further tries after one that is not kept (1)")
+    rules.add_argument("--most-lost", type=float, metavar="SHARE",
+                       help="accuracy that old classes may lose on average (0.3)")
+    rules.add_argument("--most-lost-by-class", type=float, metavar="SHARE",
+                       help="accuracy that a single old class may lose (0.6)")
     overrule = update.add_argument_group("overrule the advice: all three together")
     add_settings(overrule, "train with these")
     overrule.add_argument("--by", metavar="WHO", help="who decides so, for the history")
     overrule.add_argument("--because", metavar="WHY", help="why, for the history")
     plan = update.add_argument_group("plan, fixed at the first update")
-    for name, default in Plan().as_dict().items():
+    limits = update.add_argument_group("limits of an update, as they were until named anew")
+    for name, default in asdict(Plan()).items():
         kind = int if isinstance(default, int) and name != "memory_limit" else str
-        plan.add_argument(f"--{name.replace('_', '-')}", type=kind, default=None,
+        (limits if name in UPDATE_LIMITS else plan).add_argument(f"--{name.replace('_', '-')}", type=kind, default=None,
                           choices=METHODS if name == "method" else None,
-                          help=f"{PLAN_HELP[name]} ({default})")
+                          help=PLAN_HELP[name] + ("" if default is None else f" ({default})"))
 
     history = command("history", _history, "What was advised, expected and achieved at each boundary of a device.")
     history.add_argument("--device", metavar="DIR")
@@ -144,7 +156,7 @@ def _update(options):
     increment = read_increment(options.increment, n_features=n_features)
     report = update(folder, increment, plan=plan, forecaster=forecaster, settings=settings, by=options.by,
                     because=options.because, preferences=chosen_preferences(options, kept_preferences(history)),
-                    seed=checked_seed(options), dry_run=options.dry_run)
+                    seed=checked_seed(options), dry_run=options.dry_run, **_rules(options))
     say(options, report.as_dict(), _update_lines(report))
     return report.status or 0
 
@@ -159,16 +171,40 @@ def overruled_lines(entry):
     return [f"overruled by {told['by']}: {told['because']}", f"  advised was {instead}"]
 
 
+def _rules(options):
+    given = {name: getattr(options, name) for name in ("retries", "most_lost", "most_lost_by_class")}
+    return {name: value for name, value in given.items() if value is not None}
+
+
 def _plan_arguments(given):
     if "memory_limit" in given and given["memory_limit"].isdecimal():
         given["memory_limit"] = int(given["memory_limit"])
+    given.update({name: None for name in UPDATE_LIMITS if given.get(name) == "none"})
+    if given.get("time_limit") is not None:
+        text = given["time_limit"]
+        try:
+            given["time_limit"] = float(text)
+        except ValueError:
+            raise InputError("--time-limit", "must be a number of seconds, or none", repr(text)) from None
     return given
+
+
+def limits_lines(entry):
+    """Lines that say what an update of the history was planned to take, and what was given up for it."""
+    limits = entry["limits"]
+    if limits is None:
+        return []
+    return [f"Planned: {limits['passes']} passes over {limits['rows']} rows in {limits['seconds_planned']:.2g} s, at "
+            f"{limits['speed']:.2g} operations a second as measured in "
+            f"{'earlier updates' if limits['speed_from'] == 'updates' else 'a short training'}",
+            *(f"  given up: {one}" for one in limits["given_up"])]
 
 
 def _update_lines(report):
     entry = report.entry
     lines = [] if report.advice is None else _advice_lines(report.advice)[:-1]
     lines += overruled_lines(entry)
+    lines += limits_lines(entry)
     if report.status is None:
         return [*lines, "Dry run: nothing was trained or stored."]
     lines += ["Trained with", *(f"  {name:<18} {value:.4g}" for name, value in entry["settings"].items())]
@@ -178,6 +214,8 @@ def _update_lines(report):
               if achieved[name] is not None]
     if entry["acceptance"] is not None:
         lines.append(f"  on {entry['acceptance']['rows']} acceptance rows {number(entry['acceptance']['all'])}")
+    if entry["limits"] is not None:
+        lines.append(f"Took {entry['training_seconds']:.2g} s of training, {entry['seconds']:.2g} s in all")
     lines += [f"  rolled back: {reason}" for one in [*entry["earlier_tries"], entry] for reason in one["reasons"]]
     kept = "Kept" if entry["kept"] else "ROLLED BACK"
     if entry["overruled"] and entry["expected"]:
@@ -205,6 +243,8 @@ def _history(options):
     lines = [table(names, rows)]
     lines += [f"update {one['number']}: {reason}" for one in generation.history for reason in one["reasons"]]
     lines += [f"update {one['number']}: {line}" for one in generation.history for line in overruled_lines(one)[:1]]
+    lines += [f"update {one['number']}: {words}" for one in generation.history for words in
+              (one.get("limits") or {"given_up": ()})["given_up"]]
     lines += [f"update {one['number']}: later {number(outcome['all'])} on {outcome['rows']} rows"
               for one in generation.history for outcome in one.get("outcomes", ())]
     steps = generation.care.steps

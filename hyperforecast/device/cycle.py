@@ -16,14 +16,18 @@ An entry of the history, a JSON-able dict, tells of one update:
                             them unless it is told otherwise
     overruled               null, or {"by", "because"} where settings were given, whatever was advised: who decided so
                             and why, in their words; what was advised instead stands in `advice`
-    settings, expected, diverged, achieved, acceptance, by_class, operations, reasons
+    settings, expected, diverged, stopped, achieved, acceptance, by_class, operations, operations_planned,
+    training_seconds, reasons
                             of the last try: what it was trained with, forecast and achieved (see `update`), the same
-                            on the acceptance set or null, and why it was not kept, in words; by_class holds lists of
+                            on the acceptance set or null, what training took, and had been counted in advance if it
+                            went to the end, and why it was not kept, in words; by_class holds lists of
                             one length, one place for each class known: `class` (its label), `arrived` (rows of the
                             increment), `check_rows`, and its accuracy on these `before` and `after` the try (null
                             without check rows, and before it was known)
-    earlier_tries           the tries before it, each with the same eight
+    earlier_tries           the tries before it, each with the same eleven
     kept                    whether the last try was kept; otherwise the device carries on as before
+    limits                  null without a time limit; else what was planned (`hyperforecast.device.limits.Allowance`),
+                            its `given_up` in words
     seconds                 spent on the update
     outcomes                only where labels came later: see `hyperforecast.device.use.record_outcome`
     undone                  only where it was undone by hand: when; see `hyperforecast.device.use.roll_back`
@@ -43,11 +47,12 @@ from hyperforecast.checks import InputError, check_number, check_whole
 from hyperforecast.describing import describe
 from hyperforecast.device.care import Care
 from hyperforecast.device.folder import DeviceFolder
+from hyperforecast.device.limits import Stopwatch, allowance, calibrated_speed, measured_speed
 from hyperforecast.device.pin import forecaster_for
 from hyperforecast.device.status import UpdateStatus
 from hyperforecast.forecasting import Advice, Preferences, advise_settings, opening_settings
 from hyperforecast.learning import (
-    Carryover, HeadTrainer, accuracies, boundary_seed, close_boundary, open_boundary, standardize, try_settings,
+    Carryover, HeadTrainer, Job, accuracies, boundary_seed, close_boundary, open_boundary, standardize, try_settings,
 )
 from hyperforecast.settings import SettingsBox, completed
 
@@ -95,7 +100,8 @@ class UpdateReport:
 
 
 def update(folder, increment, *, plan=None, forecaster=None, trainer=None, settings=None, by=None, because=None,
-           preferences=None, retries=1, most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0, dry_run=False):
+           preferences=None, retries=1, most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0,
+           dry_run=False, clock=time.perf_counter):
     """Learn an increment on a device, in one new generation of its folder; return an `UpdateReport`.
 
     Parameters
@@ -104,7 +110,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         Made by the first update.
     increment : Increment
     plan : Plan, optional
-        Needed at the first update, and fixed by it.
+        Needed at the first update, and fixed by it, except for its `UPDATE_LIMITS`.
     forecaster : Forecaster, optional
         By default the one that the device is pinned to, or the one that ships for the plan's method, which knows the
         built-in trainer alone.
@@ -125,6 +131,8 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         With the same seed, settings and data, a `GrowingClassifier` learns the same.
     dry_run : bool
         Stop after the advice: nothing is trained or stored, and the folder may be read-only.
+    clock : callable
+        Seconds from anywhere, for the time limit and for what the history says of time.
 
     Raises
     ------
@@ -150,11 +158,14 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
     of its own (`hyperforecast.device.care`) the accuracy over its check rows and acceptance rows together may not come
     to lie below the floor, nor fall further where it lay below before; here no allowance is made for few rows.
 
+    Under a time limit the passes are planned, and advised for, that will fit; a try that is late all the same is
+    stopped, or found late afterwards, and not kept, and none is begun that would not fit.
+
     At the first update, which has no old classes and no forecast, only the first rule can apply. An update that is
     rolled back stores a generation too, in place of the current one: its history tells of it, its carryover is that of
     before. Where there is none before, nothing is stored.
     """
-    started = time.perf_counter()
+    started = clock()
     folder = folder if isinstance(folder, DeviceFolder) else DeviceFolder(folder)
     check_whole("retries", retries)
     overruled = _overruled(settings, by, because)
@@ -166,23 +177,50 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
     with nullcontext() if dry_run else folder.locked(create=plan is not None):
         before = folder.read() if plan is None or folder.numbers() else None
         carryover = None if before is None else before.carryover
+        history = [] if before is None else before.history
         plan = _agreed_plan(plan, carryover, increment)
+        watch = Stopwatch(clock, plan.time_limit, started)
         seed = boundary_seed(seed, carryover)
         boundary = open_boundary(plan, carryover, increment, seed=seed)
         trainer = HeadTrainer() if trainer is None else trainer
         _check_head(folder, trainer, carryover)
-        history = [] if before is None else before.history
         preferences = kept_preferences(history) if preferences is None else preferences.checked()
-        advice = None if carryover is None else _advise(folder, before, trainer, boundary, forecaster, preferences, seed)
+
+        def advised(boundary):
+            return None if carryover is None else \
+                _advise(folder, before, trainer, boundary, forecaster, preferences, seed)
+
+        spent = watch.spent
+        advice, allowed = advised(boundary), None
+        if plan.time_limit is not None:
+            spent = watch.spent - spent
+            allowed = _allowed(trainer, boundary, increment, history, watch, spent, seed)
+            if allowed.given_up:
+                boundary = open_boundary(replace(plan, passes=allowed.passes), carryover, increment, seed=seed,
+                                         most_rows=allowed.rows)
+                advice = advised(boundary)
         candidates = _candidates(plan, advice, settings, retries)
         care = Care() if before is None else before.care
-        check = _Check(trainer, boundary, advice, most_lost, most_lost_by_class, care)
+        check = _Check(trainer, boundary, increment, advice, most_lost, most_lost_by_class, care)
         tries = []
         for candidate in () if dry_run else candidates:
-            attempt = try_settings(trainer, boundary, [candidate], seed=seed)[0]
-            tries.append(check.judged(attempt))
-            if not tries[-1]["reasons"]:
-                carryover = close_boundary(trainer, boundary, attempt, seed=seed)
+            if tries and allowed is not None and watch.left < allowed.seconds_planned:
+                if not watch.is_over():
+                    tries[-1]["reasons"].append(f"{watch.left:.2g} s are left, too little for another try, which takes "
+                                                f"{allowed.seconds_planned:.2g} s")
+                break
+            spent = watch.spent
+            attempt = try_settings(trainer, boundary, [candidate], seed=seed, stop=watch.stop)[0]
+            told = check.judged(attempt, watch.spent - spent)
+            tries.append(told)
+            closed = None if told["reasons"] else close_boundary(trainer, boundary, attempt, seed=seed)
+            if watch.is_over():
+                when = f"when training had ended, by {-watch.left:.2g} s"
+                if attempt.stopped:
+                    when = f"after {told['operations'] / max(told['operations_planned'], 1):.0%} of training"
+                told["reasons"].insert(0, f"the time limit of {plan.time_limit:g} s was over {when}")
+            if not told["reasons"]:
+                carryover = replace(closed, plan=plan)
                 break
         entry = {
             "number": history[-1]["number"] + 1 if history else 1,
@@ -190,7 +228,8 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
             **_arrived(boundary, increment), **_advised(advice),
             "preferences": preferences.as_dict(), "overruled": overruled,
             **(tries[-1] if tries else {"settings": candidates[0].as_dict()}), "earlier_tries": tries[:-1],
-            "kept": bool(tries) and not tries[-1]["reasons"], "seconds": round(time.perf_counter() - started, 4),
+            "kept": bool(tries) and not tries[-1]["reasons"],
+            "limits": allowed and allowed.as_dict(), "seconds": round(watch.spent, 4),
         }
         stored = not dry_run and carryover is not None
         generation = folder.store(carryover, [*history, entry], care, in_place=not entry["kept"]) if stored else None
@@ -212,11 +251,20 @@ def _identity(history):
 def _agreed_plan(plan, carryover, increment):
     if carryover is None:
         return plan
-    if plan is not None and plan != carryover.plan:
+    if plan is not None and plan.without_limits() != carryover.plan.without_limits():
         raise InputError("plan", f"must stay as the first update fixed it, {carryover.plan}", plan, "leave it out")
     if increment.n_features != carryover.n_features:
         raise InputError("increment", f"must have {carryover.n_features} features as before", increment.n_features)
-    return carryover.plan
+    return carryover.plan if plan is None else plan
+
+
+def _allowed(trainer, boundary, increment, history, watch, advising, seed):
+    """Return what a try may take, if advice, which took `advising` seconds, is taken once more."""
+    speed, source = measured_speed(history), "updates"
+    if speed is None:
+        speed, source = calibrated_speed(trainer, boundary.plan, boundary.carryover, increment, seed=seed,
+                                         clock=watch.clock), "calibration"
+    return allowance(trainer, boundary, seconds=watch.left - advising, speed=speed, speed_from=source)
 
 
 def _check_head(folder, trainer, carryover):
@@ -275,7 +323,9 @@ def _candidates(plan, advice, settings, retries):
 class _Check:
     """Judges attempts at a boundary by the rules of `update`."""
 
-    def __init__(self, trainer, boundary, advice, most_lost, most_lost_by_class, care):
+    def __init__(self, trainer, boundary, increment, advice, most_lost, most_lost_by_class, care):
+        labels, count = np.unique(increment.y, return_counts=True)
+        self.arrived = dict(zip(labels.tolist(), count.tolist()))
         self.trainer, self.boundary, self.advice = trainer, boundary, advice
         self.most_lost, self.most_lost_by_class = most_lost, most_lost_by_class
         self.new = np.arange(boundary.n_old, boundary.n_classes) if boundary.n_old < boundary.n_classes \
@@ -285,8 +335,8 @@ class _Check:
         self.floors = {code: care.floors[label] for code, label in enumerate(boundary.classes.tolist())
                        if label in care.floors}
 
-    def judged(self, attempt):
-        """Return what the history tells of an attempt."""
+    def judged(self, attempt, seconds):
+        """Return what the history tells of an attempt that took so many seconds to train."""
         after, accepted = (rows.accuracies(attempt.head) for rows in (self.rows, self.acceptance))
         achieved = self._achieved(self.rows, after)
         expected = None
@@ -294,8 +344,11 @@ class _Check:
             forecast = self.advice.forecaster.at(self.advice.descriptors).expected([attempt.settings])
             expected = {name: one.at(0).as_dict() for name, one in forecast.items()}
         return {"settings": attempt.settings.as_dict(), "expected": expected, "diverged": attempt.diverged,
-                "achieved": achieved, "acceptance": self._achieved(self.acceptance, accepted) if len(self.acceptance)
-                else None, "by_class": self._by_class(after), "operations": attempt.operations,
+                "stopped": attempt.stopped, "achieved": achieved,
+                "acceptance": self._achieved(self.acceptance, accepted) if len(self.acceptance) else None,
+                "by_class": self._by_class(after), "operations": attempt.operations,
+                "operations_planned": self.trainer.operations_of(Job(self.boundary, attempt.settings)),
+                "training_seconds": round(seconds, 6),
                 "reasons": list(self._reasons(attempt, after, accepted, achieved, expected))}
 
     def _achieved(self, rows, after):
@@ -304,15 +357,16 @@ class _Check:
 
     def _by_class(self, after):
         boundary = self.boundary
-        arrived = np.bincount(np.concatenate([boundary.y, boundary.held_back.y]), minlength=boundary.n_classes)
         before = np.concatenate([self.rows.before, np.full(boundary.n_classes - boundary.n_old, np.nan)])
-        return {"class": boundary.classes.tolist(), "arrived": arrived.tolist(),
+        labels = boundary.classes.tolist()
+        return {"class": labels, "arrived": [self.arrived.get(label, 0) for label in labels],
                 "check_rows": self.rows.count.tolist(), "before": _rounded(before), "after": _rounded(after)}
 
     def _reasons(self, attempt, after, accepted, achieved, expected):
         """Yield why the attempt is not to be kept."""
         if attempt.diverged:
             yield "training diverged"
+        if attempt.diverged or attempt.stopped:
             return
         yield from self._losses(self.rows, after)
         yield from self._losses(self.acceptance, accepted)

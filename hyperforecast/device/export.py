@@ -4,13 +4,14 @@ The file is one JSON document (`schemas/history.schema.json`):
 
     kind, version   "device history", 1
     device          the device's identity: random, made at its first update
-    plan            as the first update fixed it
+    plan            as the first update fixed it, without the limits that may change
     updates         each with `number`, `classes_old`, `classes_new` (counts), `descriptors` by name (null: not to be
                     had), `kept`, and `tries`: the settings that were trained with, in order, whether training
                     `diverged`, the accuracies `achieved` (see `hyperforecast.device.update`) and the `operations` spent
 
-An update without descriptors, as a device's first, is left out: nothing can be learned from it. Nothing else leaves the
-device unless it is asked for: no rows, no times, no words, and labels only as `class_names`.
+An update without descriptors, as a device's first, is left out, as are tries that the time limit stopped: nothing can
+be learned from them. Nothing else leaves the device unless it is asked for: no rows, no times, no words, and labels
+only as `class_names`.
 """
 
 import re
@@ -80,21 +81,23 @@ def export_history(path, generation, *, class_names=False):
     InputError
         If there is no update with descriptors, or the file cannot be written.
     """
-    told = [one for one in generation.history if one["descriptors"] is not None and one.get("device")]
+    told = [(one, tries) for one in generation.history if one["descriptors"] is not None and one.get("device")
+            if (tries := [each for each in (*one["earlier_tries"], one) if not each.get("stopped")])]
     if not told:
         raise InputError("history", "must tell of an update after the first", f"{len(generation.history)} updates",
                          "export after the next one")
     updates = []
-    for one in told:
+    for one, tries in told:
         names = {"class_names": {"new": one["classes_new"], "again": one["classes_again"]}} if class_names else {}
         updates.append({
             "number": one["number"], "classes_old": one["classes_old"], "classes_new": len(one["classes_new"]),
             "descriptors": one["descriptors"], "kept": one["kept"], **names,
             "tries": [{"settings": each["settings"], "diverged": each["diverged"], "operations": each["operations"],
                        "achieved": {name: each["achieved"][name] for name in (*ACHIEVED, "rows")}}
-                      for each in (*one["earlier_tries"], one)]})
-    write_atomically(path, dump_json({"kind": KIND, "version": VERSION, "device": told[-1]["device"],
-                                      "plan": generation.carryover.plan.as_dict(), "updates": updates}))
+                      for each in tries]})
+    plan = generation.carryover.plan.without_limits().as_dict()
+    write_atomically(path, dump_json({"kind": KIND, "version": VERSION, "device": told[-1][0]["device"], "plan": plan,
+                                      "updates": updates}))
     return len(updates)
 
 

@@ -26,7 +26,7 @@ from hyperforecast.checks import InputError, check_whole
 from hyperforecast.device.care import Care, care_from, care_parts
 from hyperforecast.device.status import FolderBusy, FolderDamaged, FolderNotWritable
 from hyperforecast.learning import Carryover, ClassSummaries, Exemplars
-from hyperforecast.settings import Plan
+from hyperforecast.settings import UPDATE_LIMITS, Plan
 from hyperforecast.storage import (
     Bundle, VersionError, read_bundle_folder, stored_array, sync_folder, write_bundle_folder,
 )
@@ -346,7 +346,8 @@ def _classes(listed):
 
 
 def _plan(listed):
-    if not isinstance(listed, dict) or set(listed) != set(Plan().as_dict()):
+    needed = set(Plan().as_dict())
+    if not isinstance(listed, dict) or not needed <= set(listed) <= needed | set(UPDATE_LIMITS):
         raise InputError("plan", f"must hold {', '.join(Plan().as_dict())}", "others")
     return Plan(**listed).checked()
 

@@ -13,9 +13,9 @@ from hyperforecast.metrics import class_accuracies
 CHUNK_ROWS = 8192
 
 
-def try_settings(trainer, boundary, settings, *, seed):
-    """Return one `Attempt` for each of a list of `Settings`, all from the same boundary."""
-    return trainer.learn([Job(boundary, one) for one in settings], seed=seed)
+def try_settings(trainer, boundary, settings, *, seed, stop=None):
+    """Return one `Attempt` for each of a list of `Settings`, all from the same boundary; `stop` as in `Job`."""
+    return trainer.learn([Job(boundary, one, stop) for one in settings], seed=seed)
 
 
 def predict_codes(trainer, head, Z):

@@ -196,10 +196,11 @@ def class_limits(plan, n_features, n_classes):
     return check_rows, min(rows - check_rows, KEPT_PER_CLASS[1])
 
 
-def open_boundary(plan, carryover, increment, *, seed=0):
+def open_boundary(plan, carryover, increment, *, seed=0, most_rows=None):
     """Return the `Boundary` at which `increment` meets `carryover` (None: it is the first increment).
 
-    A few rows of each class, at most 8 and at most a fifth, drawn with `seed`, are held back from training.
+    A few rows of each class, at most 8 and at most a fifth, drawn with `seed`, are held back from training. With
+    `most_rows` (at least one for each class) the same share of every class, that many rows at most, is trained on.
 
     Raises
     ------
@@ -216,19 +217,26 @@ def open_boundary(plan, carryover, increment, *, seed=0):
     check_per_class, most_kept = class_limits(plan, increment.n_features, len(classes))
     center, scale = fit_scaling(increment.X) if carryover is None else (carryover.center, carryover.scale)
     Z = standardize(increment.X, center, scale)
-    training, held_back = _hold_back(Z, y, check_per_class, np.random.default_rng([seed, 0x6368]))
+    training, held_back = _hold_back(Z, y, check_per_class, most_rows, np.random.default_rng([seed, 0x6368]))
     return Boundary(
         plan=plan, carryover=carryover, classes=classes, n_old=len(old), center=center, scale=scale,
         Z=Z[training], y=y[training], held_back=held_back, check_per_class=check_per_class, most_kept=most_kept,
     )
 
 
-def _hold_back(Z, y, per_class, rng):
+def _hold_back(Z, y, per_class, most_rows, rng):
     shuffled = rng.permutation(len(y))
     order = shuffled[np.argsort(y[shuffled], kind="stable")]
     codes, start, count = np.unique(y[order], return_index=True, return_counts=True)
     rank = np.arange(len(y)) - np.repeat(start, count)
-    held = rank < np.repeat(np.minimum(per_class, count // 5), count)
+    per_class = np.minimum(per_class, count // 5)
+    held = rank < np.repeat(per_class, count)
     by_rank = np.argsort(rank[held], kind="stable")
     rows = order[held][by_rank]
-    return np.sort(order[~held]), Exemplars(Z[rows], y[rows], rank[held][by_rank])
+    trains = ~held
+    rest = count - per_class
+    if most_rows is not None and most_rows < rest.sum():
+        # One row of each class, and the same share of its others.
+        share = max(most_rows - len(codes), 0) / max(rest.sum() - len(codes), 1)
+        trains &= rank < np.repeat(per_class + 1 + ((rest - 1) * share).astype(np.int64), count)
+    return np.sort(order[trains]), Exemplars(Z[rows], y[rows], rank[held][by_rank])

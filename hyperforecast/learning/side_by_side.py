@@ -42,14 +42,15 @@ class Regimen:
 
 @dataclass(frozen=True)
 class TrainedHead:
-    """Flat parameters (P,) after training, whether it diverged, and the steps it took."""
+    """Flat parameters (P,) after training, whether it diverged, the steps it took, and whether it was stopped early."""
 
     flat: np.ndarray
     diverged: bool
     steps: int
+    stopped: bool
 
 
-def train_side_by_side(layout, objective, regimens, *, Z, y, targets, passes, batch_size, seed):
+def train_side_by_side(layout, objective, regimens, *, Z, y, targets, passes, batch_size, seed, stop=None):
     """Train one head per regimen; return a list of `TrainedHead` in the same order.
 
     Parameters
@@ -64,6 +65,8 @@ def train_side_by_side(layout, objective, regimens, *, Z, y, targets, passes, ba
     targets : ndarray of shape (R, n_old), or None
         What the objective wants of the old outputs.
     passes, batch_size, seed : int
+    stop : callable, optional
+        Asked every few steps; all heads are left as they are once it returns True.
 
     Notes
     -----
@@ -79,7 +82,7 @@ def train_side_by_side(layout, objective, regimens, *, Z, y, targets, passes, ba
         for at in range(0, len(order), size):
             members = order[at:at + size]
             block = _Block(layout, objective, [regimens[k] for k in members], Z, y, targets, passes, batch_size, seed)
-            for k, head in zip(members, block.train()):
+            for k, head in zip(members, block.train(stop)):
                 trained[k] = head
     return trained
 
@@ -132,13 +135,14 @@ class _Block:
             self.origin = self.flat.copy()
         self.trained = [None] * len(regimens)
 
-    def train(self):
+    def train(self, stop):
         self._lay_out()
         step = 0
         while len(self.member):
             self._leave(self.steps == step, diverged=False, steps=step)
-            n_active = len(self.member)
-            if not n_active:
+            if stop is not None and step % LOOK_EVERY == 0 and len(self.member) and stop():
+                self._leave(np.ones(len(self.member), bool), diverged=False, steps=step, stopped=True)
+            if not len(self.member):
                 break
             largest = self._advance(step)
             step += 1
@@ -146,14 +150,14 @@ class _Block:
                 self._leave(~(largest < LARGEST_LOGIT), diverged=True, steps=step)
         return self.trained
 
-    def _leave(self, leaves, *, diverged, steps):
+    def _leave(self, leaves, *, diverged, steps, stopped=False):
         """Store the heads in the mask `leaves` and go on with the others."""
         if not leaves.any():
             return
         for k in np.flatnonzero(leaves):
             flat = self.flat[k].copy()
             gone = diverged or not np.isfinite(flat).all()
-            self.trained[self.member[k]] = TrainedHead(flat, bool(gone), steps)
+            self.trained[self.member[k]] = TrainedHead(flat, bool(gone), steps, stopped)
         stays = ~leaves
         names = ["member", "set_of", "steps", "flat", "velocity", "rate", "strength"]
         for name in names + (["stiffness", "origin"] if self.anchored else []):

@@ -4,6 +4,7 @@
 """
 
 from abc import abstractmethod
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -28,10 +29,20 @@ RIDGE = 1e-3
 
 @dataclass(frozen=True)
 class Job:
-    """One attempt to make: a boundary and settings."""
+    """One attempt to make.
+
+    Attributes
+    ----------
+    boundary : Boundary
+    settings : Settings
+    stop : callable, optional
+        To be asked now and then while training: once it returns True, the time is over, and what has been learned so
+        far is the attempt. Jobs that are learned together share it.
+    """
 
     boundary: Boundary
     settings: Settings
+    stop: Callable[[], bool] | None = None
 
     @property
     def kept(self):
@@ -58,15 +69,19 @@ class Attempt:
     diverged : bool
     operations : float
         Floating-point operations spent.
+    stopped : bool
+        Whether it ended early because the time was over.
     """
 
     settings: Settings
     head: dict
     diverged: bool
     operations: float
+    stopped: bool = False
 
     def __post_init__(self):
         # Numpy's own numbers would not go into JSON.
+        object.__setattr__(self, "stopped", bool(self.stopped))
         object.__setattr__(self, "diverged", bool(self.diverged))
         object.__setattr__(self, "operations", float(self.operations))
 
@@ -128,8 +143,19 @@ class Trainer(Protocol):
 
         Start from `boundary.carryover.head`, or afresh at the first increment, where `boundary.carryover` is None.
         Train on the rows `boundary.Z` of classes `boundary.y` and on `job.exemplars`. An attempt must come out the
-        same whatever jobs are beside it. Report numbers that run away as `diverged`, rather than raise.
+        same whatever jobs are beside it. Report numbers that run away as `diverged`, rather than raise. Ask `job.stop`
+        between minibatches or passes, where there is one; a trainer that does not is found to be late afterwards.
         """
+
+    def operations_of(self, job):
+        """Return the floating-point operations that a job takes if it goes to the end, for planning ahead.
+
+        By default those of a linear model. Only the proportions matter: the speed that they are turned into seconds
+        with is measured in the same count.
+        """
+        boundary = job.boundary
+        n_rows = len(boundary.y) + len(job.exemplars)
+        return 4.0 * boundary.plan.passes * n_rows * boundary.n_features * boundary.n_classes
 
     @abstractmethod
     def class_scores(self, head, Z):
@@ -179,17 +205,24 @@ class HeadTrainer(Trainer):
         regimens = [pool.regimen(job) for job in jobs]
         Z, y, targets = pool.gathered()
         heads = train_side_by_side(layout, objective, regimens, Z=Z, y=y, targets=targets,
-                                   passes=plan.passes, batch_size=plan.batch_size, seed=seed)
+                                   passes=plan.passes, batch_size=plan.batch_size, seed=seed, stop=jobs[0].stop)
         attempts = []
         for job, trained in zip(jobs, heads):
             head = {name: part[0] for name, part in layout.parts(trained.flat[None]).items()}
             if plan.method == "wa" and boundary.n_old and not trained.diverged:
                 head = align_weights(head, boundary.n_old)
             operations = trained.steps * plan.batch_size * layout.operations_per_row
-            attempts.append(Attempt(job.settings, head, trained.diverged, operations))
-        if plan.method == "icarl":
+            attempts.append(Attempt(job.settings, head, trained.diverged, operations, trained.stopped))
+        if plan.method == "icarl" and not any(one.stopped for one in attempts):
             _add_class_means(jobs, attempts)
         return attempts
+
+    def operations_of(self, job):
+        """Return what `learn` counts: all minibatches of all passes."""
+        boundary, plan = job.boundary, job.boundary.plan
+        layout = HeadLayout(boundary.n_features, plan.hidden_units, boundary.n_classes)
+        steps = plan.passes * -(-(len(boundary.y) + len(job.exemplars)) // plan.batch_size)
+        return float(steps * plan.batch_size * layout.operations_per_row)
 
     def class_scores(self, head, Z):
         """Return scores (n, C): logits, or with class means minus the squared distance to each on the unit sphere."""
