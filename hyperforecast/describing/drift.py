@@ -100,6 +100,33 @@ def kernel_accuracy_old(view):
 
 
 @descriptor("drift")
+def ridge_accuracy_all(view):
+    """The linear probe's accuracy on old and new classes, every class alike. Unit: share."""
+    return _over_all(view, *reversed(view.linear_probe))
+
+
+@descriptor("drift")
+def kernel_accuracy_all(view):
+    """The bent probe's accuracy on old and new classes, every class alike. Unit: share."""
+    return _over_all(view, *reversed(view.kernel_probe))
+
+
+@descriptor("drift")
+def accuracy_in_reach(view):
+    """Accuracy now on old check rows and the bent probe's on new rows, every class alike. Unit: share.
+
+    What would be had if nothing were forgotten.
+    """
+    known = view.check_accuracy[np.isfinite(view.check_accuracy)]
+    return _over_all(view, known.mean() if len(known) else np.nan, view.kernel_probe[0])
+
+
+def _over_all(view, old, new):
+    boundary = view.boundary
+    return (boundary.n_old * old + (boundary.n_classes - boundary.n_old) * new) / boundary.n_classes
+
+
+@descriptor("drift")
 def shift_of_returning(view):
     """Mean squared distance of returning classes' new means from their carried ones, over the variance within.
 

@@ -16,8 +16,8 @@ CENTERS, AROUND_EACH = 6, 16
 # Width of the neighbourhood, in unit-cube distance, over which expected outcomes are averaged: the edge of the good
 # region is steep, and a candidate among good neighbours is the safer one.
 NEIGHBOURHOOD = 0.05
-# Candidates more likely to diverge than this are left out while there are others.
-MOST_DIVERGENCE = 0.1
+# What the probability of divergence costs, in accuracy: the advice keeps a margin from the cliff.
+DIVERGENCE_PRICE = 0.3
 ALTERNATIVES = 8
 # Alternatives differ from better ranked ones by at least this much, in unit-cube distance.
 FEWEST_APART = 0.08
@@ -213,7 +213,7 @@ def _scores(forecast, settings, box, preferences):
 
 
 def _objective(forecast, settings, preferences):
-    """Return the expected outcome (n,), now and later, from the best; candidates that may well diverge come last."""
+    """Return the expected outcome (n,), now and later, from the best, less the price of perhaps diverging."""
     now = preferences.now_weight
     value = now * forecast.shortfall(settings)
     if now < 1:
@@ -223,7 +223,7 @@ def _objective(forecast, settings, preferences):
         # old and new classes, what is won now is taken to last.
         outcome = forecast.outcome(settings)
         value = value + (preferences.old_weight - old_share(forecast.descriptors)) * (outcome["old"] - outcome["new"])
-    return value - (forecast.divergence(settings) > MOST_DIVERGENCE)
+    return value - DIVERGENCE_PRICE * forecast.divergence(settings)
 
 
 def _smooth(points, scores):

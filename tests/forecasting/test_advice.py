@@ -135,9 +135,9 @@ def test_the_advice_lies_where_the_model_says_and_not_at_the_edge(made, here):
     assert ((LOW < logs) & (logs <= LOW + 1)).sum() >= 4 and (np.abs(logs - LOW - 0.5) < 1.6).all()
 
 
-def test_settings_that_may_well_diverge_are_left_out(made, here):
+def test_settings_that_may_well_diverge_have_their_price(made, here):
     """Higher learning rates promise more, and diverge beyond a hundredth with probability 0.95."""
-    greedy = ensemble(*(split("log_learning_rate", t, leaf(-0.1), leaf(0.0)) for t in np.arange(-5, 0, 0.25)))
+    greedy = ensemble(*(split("log_learning_rate", t, leaf(-0.01), leaf(0.0)) for t in np.arange(-5, 0, 0.25)))
     diverges = ensemble(split("log_learning_rate", -2.0, leaf(-3.0), leaf(3.0)))
     box = SettingsBox("wa", 40)
     assert advise_settings(made(shortfall=greedy), here, box).settings.learning_rate > 0.1
@@ -303,7 +303,7 @@ def test_reasons_agree_with_advice_taken_anew(forecasters, datasets):
 
     def best(descriptors):
         at = forecaster.at(descriptors)
-        scores = at.shortfall(candidates) / 3 + 2 / 3 * at.later(candidates) - (at.divergence(candidates) > 0.1)
+        scores = at.shortfall(candidates) / 3 + 2 / 3 * at.later(candidates) - 0.3 * at.divergence(candidates)
         return candidates[int(np.argmax(np.round((weights * scores).sum(axis=1) / weights.sum(axis=1), 9)))]
 
     typical, told = dict(zip(DESCRIPTORS, forecaster.typical)), 0

@@ -126,8 +126,8 @@ def test_every_attempt_is_forecast_and_figures_are_of_recorded_attempts(dataset)
         assert one.boundaries == len(own) and one.best == pytest.approx(np.mean(best), rel=1e-12)
         for way in (one.outcome, one.direct, one.constant):
             assert np.mean(worst) <= way <= one.best + 1e-12
-        # Of the attempts that should not diverge, the one that is expected to stay least behind the best.
-        safe = held.forecast["shortfall"] - (held.divergence > 0.1)
+        # The attempt that is expected to stay least behind the best, a price put on perhaps diverging.
+        safe = held.forecast["shortfall"] - 0.3 * held.divergence
         chosen = [dataset.all[np.where(dataset.boundary == b, safe, -np.inf).argmax()] for b in own]
         assert one.outcome == pytest.approx(np.mean(chosen), rel=1e-12)
     gained = sum(one.outcome - one.constant for one in seen)
@@ -173,22 +173,26 @@ def test_updates_of_devices_count_for_what_to_expect_and_not_for_what_is_best(da
         assert expected[0] > expected[1] + 0.02
 
 
-@pytest.mark.parametrize("folds", [None, 2, 4])
-def test_a_device_is_a_source_that_is_held_out_and_never_judged(folds, dataset):
-    """A spy as above; and with any number of folds every model has searched boundaries to learn from."""
+def test_a_device_is_never_judged_and_always_learned_from(dataset):
     good, bad = with_updates(dataset, 1.0), with_updates(dataset, 0.0)
-    held, spied = (hold_out(one, folds=folds, seed=0) for one in (good, bad))
+    held, spied = (hold_out(one, seed=0) for one in (good, bad))
     assert [one.source for one in held.figures] == sorted(set(dataset.sources))
     assert [one.boundaries for one in held.figures] == np.unique(dataset.sources, return_counts=True)[1].tolist()
-    own = np.isin(good.sources, ["device:a"])[good.boundary]
-    assert all(np.isfinite(values).all() for values in held.forecast.values())
-    if folds is None:
-        others = good.sources[good.boundary] == "device:b"
-        nothing = with_updates(dataset, np.where(own[-9:], 0.0, 1.0))
-        alone = hold_out(nothing, seed=0)
-        np.testing.assert_array_equal(held.forecast["old"][own], alone.forecast["old"][own])
-        assert not np.array_equal(held.forecast["old"][others], alone.forecast["old"][others])
-    assert not np.array_equal(held.forecast["old"][own], spied.forecast["old"][own])
+    devices = np.char.startswith(good.sources[good.boundary], "device:")
+    assert np.isnan(held.forecast["old"][devices]).all() and np.isfinite(held.forecast["old"][~devices]).all()
+    assert not np.array_equal(held.forecast["old"][~devices], spied.forecast["old"][~devices])
+
+
+def test_measured_sources_are_judged_where_there_are_enough(dataset):
+    """Invented ones are learned from only: what is forecast for them is nobody's error."""
+    names = {"synthetic_gaussian": "scale", "synthetic_drifting": "recorder", "synthetic_rectified": "sorter"}
+    renamed = replace(dataset, sources=np.array([names[name] if b % 2 else name
+                                                 for b, name in enumerate(dataset.sources)]))
+    invented = np.char.startswith(renamed.sources, "synthetic_")
+    assert invented.any()
+    held = hold_out(renamed, seed=0)
+    assert [one.source for one in held.figures] == sorted(names.values())
+    np.testing.assert_array_equal(np.isnan(held.divergence), invented[renamed.boundary])
 
 
 def test_records_of_devices_make_another_forecaster_that_knows_them(datasets):

@@ -9,16 +9,20 @@ import numpy as np
 from hyperforecast.checks import check_whole
 from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.forecasting import (
-    MOST_DIVERGENCE, RANGES, Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
+    DIVERGENCE_PRICE, RANGES, Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
 )
 from hyperforecast.workshop.fitting.constants import constant_outcome, fit_constants
 from hyperforecast.workshop.fitting.models import (
     SMALL, source_weights, train, train_direct, train_later, train_outcomes,
 )
+from hyperforecast.workshop.streams import FAMILIES
 
 MISS_RATE = 0.1
-# Attempts of each boundary, best forecast first, whose errors calibrate the intervals: advice falls among them.
+# Attempts of each boundary whose errors calibrate the intervals: as many of the best forecast, where advice falls, as
+# of the others, where settings of the user's own may fall.
 CALIBRATED = 4
+# With fewer measured sources than this, invented ones are held out and calibrated on too.
+FEWEST_MEASURED = 3
 # Errors smaller than this do not make an interval narrower.
 SMALLEST_ERROR = 0.005
 
@@ -27,8 +31,8 @@ SMALLEST_ERROR = 0.005
 class SourceFigures:
     """What each way of choosing reached on the recorded attempts of one source that it was not fitted on.
 
-    Mean accuracy on all classes over `boundaries` searched boundaries: of the constant (estimated), of the attempts that the
-    outcome models and the direct regressors would choose, of the best attempt.
+    Mean accuracy on all classes over `boundaries` searched boundaries: of the constant (estimated), of the attempts
+    that the outcome models and the direct regressors would choose, of the best attempt.
     """
 
     source: str
@@ -45,7 +49,7 @@ class SourceFigures:
 
 @dataclass(frozen=True)
 class HeldOut:
-    """Forecasts of every attempt by models that were fitted without its source.
+    """Forecasts of the attempts of judged sources (see `judged_sources`) by models fitted without them; NaN elsewhere.
 
     Attributes
     ----------
@@ -64,29 +68,42 @@ class HeldOut:
     constant: np.ndarray
     figures: list
 
+    @property
+    def objective(self):
+        """What orders attempts, (N,): the forecast outcome from the best, less the price of perhaps diverging."""
+        return self.forecast["shortfall"] - DIVERGENCE_PRICE * self.divergence
+
     def gap_closed(self, way):
         """Return sum(way - constant) / sum(best - constant) over sources, each counting alike."""
         gained = sum(getattr(one, way) - one.constant for one in self.figures)
         return gained / sum(one.best - one.constant for one in self.figures)
 
 
+def judged_sources(dataset):
+    """Return the searched sources that are held out to judge and calibrate: measured ones, if there are enough.
+
+    A user's stream is more like another measured one than like those of a synthetic family, which are drawn wider.
+    """
+    searched = np.unique(dataset.sources[dataset.compared])
+    measured = searched[~np.isin(searched, list(FAMILIES))]
+    return measured if len(measured) >= FEWEST_MEASURED else searched
+
+
 def hold_out(dataset, *, folds=None, seed, workers=1, progress=None):
-    """Return `HeldOut`: leave sources out in turn, fit on the others, forecast their attempts.
+    """Return `HeldOut`: leave judged sources out in turn, fit on all others, forecast their attempts.
 
     Parameters
     ----------
     dataset : Dataset
     folds : int, optional
-        Groups of sources that are left out together; by default every source is left out alone.
+        Groups of judged sources that are left out together; by default every one is left out alone.
     seed : int
     workers : int
         Processes of the joblib backend that is active, for folds in parallel.
     progress : callable, optional
         Called with the `SourceFigures` of each source that was left out.
     """
-    searched = np.unique(dataset.sources[dataset.compared])
-    # Searched ones are dealt first, so that no group holds all of them.
-    sources = np.concatenate([searched, np.setdiff1d(dataset.sources, searched)])
+    sources = judged_sources(dataset)
     folds = min(len(sources) if folds is None else check_whole("folds", folds, low=2), len(sources))
     n = len(dataset.all)
     forecast = {name: np.full(n, np.nan) for name in (*RANGES, "shortfall")}
@@ -101,7 +118,7 @@ def hold_out(dataset, *, folds=None, seed, workers=1, progress=None):
         for name, values in told.items():
             forecast[name][attempts] = values
         divergence[attempts], direct[own], constant[own] = diverges, settings, outcome
-        for source in np.intersect1d(sources[k::folds], searched):
+        for source in sources[k::folds]:
             figures.append(_figures(dataset, source, held))
             if progress:
                 progress(figures[-1])
@@ -188,7 +205,7 @@ def _figures(dataset, source, held):
     own = (dataset.sources == source) & dataset.compared
     rows = np.flatnonzero(own[dataset.boundary])
     b = dataset.boundary[rows]
-    safe = held.forecast["shortfall"][rows] - (held.divergence[rows] > MOST_DIVERGENCE)
+    safe = held.objective[rows]
     distance = -np.linalg.norm(dataset.points[rows] - held.direct[b], axis=1)
 
     def reached(scores):
@@ -202,13 +219,12 @@ def _figures(dataset, source, held):
 def _calibrate(dataset, held, name, *, seed):
     """Return (Booster of the logarithm of the error, conformal threshold of error over that) for one outcome.
 
-    The threshold comes from errors of spread models that were fitted on the other half of the sources. It holds
-    1 - MISS_RATE of the weight of all m sources, which guarantees a new source m / (m + 1) of that.
+    Scores come from spread models that were fitted without their source. The threshold holds 1 - MISS_RATE of the
+    weight of all m sources, which guarantees a new source m / (m + 1) of that; it does so for the attempts where advice
+    falls and for others alike.
     """
-    forecast = held.forecast["shortfall"] - (held.divergence > MOST_DIVERGENCE)
-    order = np.lexsort((-forecast, dataset.boundary))
-    rank = np.arange(len(order)) - np.searchsorted(dataset.boundary[order], dataset.boundary[order])
-    rows = np.sort(order[rank < CALIBRATED])
+    best, others = _calibrated(dataset, held, np.random.default_rng(seed))
+    rows = np.concatenate([best, others])
     error = np.abs(getattr(dataset, name)[rows] - held.forecast[name][rows])
     target = np.log(np.maximum(error, SMALLEST_ERROR))
     inputs, sources = dataset.inputs(rows), dataset.sources[dataset.boundary[rows]]
@@ -217,10 +233,26 @@ def _calibrate(dataset, held, name, *, seed):
     def spread_of(mask):
         return train(inputs[mask], target[mask], weights[mask], size=SMALL, seed=seed)
 
-    unique = np.random.default_rng(seed).permutation(np.unique(sources))
-    first = np.isin(sources, unique[::2])
+    unique = np.unique(sources)
     scores = np.empty(len(rows))
-    for half in (first, ~first):
-        scores[half] = error[half] / np.exp(spread_of(~half).predict(inputs[half]))
+    for source in unique:
+        own = sources == source
+        scores[own] = error[own] / np.exp(spread_of(~own).predict(inputs[own]))
     alpha = 1 - (1 - MISS_RATE) * len(unique) / (len(unique) + 1)
-    return spread_of(np.ones(len(rows), bool)), grouped_conformal_threshold(scores, sources, alpha)
+    threshold = max(grouped_conformal_threshold(scores[part], sources[part], alpha)
+                    for part in (slice(len(best)), slice(len(best), None)))
+    return spread_of(np.ones(len(rows), bool)), threshold
+
+
+def _calibrated(dataset, held, rng):
+    """Return places of attempts of judged sources: the best forecast of each boundary, and as many of the others."""
+    known = np.flatnonzero(~np.isnan(held.divergence))
+    b = dataset.boundary[known]
+
+    def first(order):
+        rank = np.arange(len(order)) - np.searchsorted(b[order], b[order])
+        return order[rank < CALIBRATED]
+
+    best = first(np.lexsort((-held.objective[known], b)))
+    others = np.lexsort((rng.random(len(known)), b))
+    return known[best], known[first(others[~np.isin(others, best)])]
