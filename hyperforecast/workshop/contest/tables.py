@@ -136,7 +136,7 @@ def _one_step_table(rows):
         "sources": {source: _source_table(rows.of(source)) for source in sorted(set(rows.sources))},
         "noise": {"deviation": float(np.sqrt(rows.by_source(rows["noise"]).mean())),
                   "ceiling_again": float(rows.by_source(rows["again"]).mean())},
-        "interval": {"coverage": rows.mean(rows["covered"]), "median_width": float(np.median(rows["width"]))},
+        "interval": _interval(rows),
         "advising_seconds": float(rows.by_source(rows["advising"]).mean()),
         "tests": _tests(rows, one_step.ENTRANTS),
     }
@@ -144,10 +144,14 @@ def _one_step_table(rows):
 
 def _source_table(rows):
     """Return one source's table; "worst" is the least difference from the constant at any boundary."""
-    return {**rows.counts, "policies": {
+    return {**rows.counts, "interval": _interval(rows), "policies": {
         name: {"accuracy": float(rows.by_source(rows[name])[0]), **_against_ends(rows, name),
                "worst": float((rows[name] - rows[FLOOR]).min())}
         for name in one_step.ENTRANTS}}
+
+
+def _interval(rows):
+    return {"coverage": rows.mean(rows["covered"]), "median_width": float(np.median(rows["width"]))}
 
 
 def _against_ends(rows, name):
@@ -196,13 +200,16 @@ def _one_step_text(method, table):
     sources = [(source, one["n_streams"], *(f"{one['policies'][name]['accuracy']:.3f}"
                                             for name in (FLOOR, *shown, CEILING)),
                 *(ranged(one["policies"][name]["gap_closed"], digits=2) for name in shown),
-                f"{one['policies']['advice']['worst']:+.3f}") for source, one in table["sources"].items()]
+                f"{one['policies']['advice']['worst']:+.3f}", f"{one['interval']['coverage']['estimate']:.2f}",
+                f"{one['interval']['median_width']:.2f}") for source, one in table["sources"].items()]
     return "\n".join([
         f"One step, {method}: {_counts(table, 'boundaries')}.",
         _aligned(("policy", "attempts", "accuracy", f"over {FLOOR}", "gap closed", "operations", "CPU s"), policies),
         "",
-        _aligned(("source", "streams", FLOOR, *shown, CEILING, *(f"gap: {name}" for name in shown), "worst"), sources),
-        "Worst: advice's least difference from the constant at a boundary.",
+        _aligned(("source", "streams", FLOOR, *shown, CEILING, *(f"gap: {name}" for name in shown), "worst", "held",
+                  "width"), sources),
+        "Worst: advice's least difference from the constant at a boundary. Held: share of outcomes within the 90% interval,"
+        " and its median width.",
         f"Noise floor: with other seeds the same settings vary by {noise['deviation']:.3f} (standard deviation);"
         f" {CEILING}'s settings then reach {noise['ceiling_again']:.3f}.",
         f"Advice's 90% interval held the accuracy reached in {ranged(table['interval']['coverage'])} of cases;"
