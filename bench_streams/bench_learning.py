@@ -30,7 +30,7 @@ from hyperforecast.describing import describe
 from hyperforecast.forecasting import advise_settings, load_forecaster
 from hyperforecast.increments import Increment
 from hyperforecast.learning import HeadTrainer, close_boundary, open_boundary, try_settings
-from hyperforecast.settings import Plan, Settings, SettingsBox
+from hyperforecast.settings import REHEARSAL_METHODS, Plan, Settings, SettingsBox
 
 OLD, NEW, FEATURES, HIDDEN, PASSES, BATCH, ATTEMPTS = 16, 10, 64, 64, 10, 32, 64
 ROWS_PER_CLASS = 45
@@ -74,11 +74,11 @@ def in_turns(jobs, turns=TURNS, clock=time.process_time):
     return best
 
 
-def second_boundary(rows_per_class=ROWS_PER_CLASS, *, features=FEATURES, passes=PASSES):
+def second_boundary(rows_per_class=ROWS_PER_CLASS, *, features=FEATURES, passes=PASSES, method="wa"):
     """The boundary that learning is measured at, with `rows_per_class` rows of each new class to train on."""
     rng = np.random.default_rng(0)
     centers = rng.standard_normal((OLD + NEW, features), dtype=np.float32)
-    plan, trainer = Plan("wa", HIDDEN, passes, BATCH, 2000), HeadTrainer()
+    plan, trainer = Plan(method, HIDDEN, passes, BATCH, 2000), HeadTrainer()
 
     def increment(classes, rows):
         # A fifth of each class is held back, at most 8 rows.
@@ -88,7 +88,7 @@ def second_boundary(rows_per_class=ROWS_PER_CLASS, *, features=FEATURES, passes=
         return Increment(X, y)
 
     opening = open_boundary(plan, None, increment(np.arange(OLD), ROWS_PER_CLASS))
-    attempt = learned(opening, [Settings(0.02, 1.0, 60)])[0]
+    attempt = learned(opening, [Settings(0.02, 1.0, 60 if method in REHEARSAL_METHODS else None)])[0]
     carryover = close_boundary(trainer, opening, attempt, seed=0)
     return open_boundary(plan, carryover, increment(np.arange(OLD, OLD + NEW), rows_per_class))
 
