@@ -3,10 +3,12 @@
 import json
 import pathlib
 
+import jsonschema
 import numpy as np
 import pytest
 
 from hyperforecast.cli import main
+from hyperforecast.device.documents import schema
 from hyperforecast.forecasting import load_forecaster
 
 STREAMS = """
@@ -185,6 +187,25 @@ def test_advice_is_overruled_with_who_and_why_or_not_at_all(capsys, device, deli
     assert entry["settings"]["regularization"] == entry["advice"]["settings"]["regularization"]
     assert main(["history", "--device", device]) == 0
     assert "update 3: overruled by shift 2: a trial" in capsys.readouterr().out
+
+
+def test_weigh_tells_what_to_expect_and_writes_a_page(capsys, device, deliveries, tmp_path):
+    weigh = ["weigh", "--increment", deliveries[2], "--device", device, "--settings", "kept_per_class=3"]
+    told = run(capsys, *weigh)
+    advised = run(capsys, "advise", "--increment", deliveries[2], "--device", device)
+    assert told["advice"]["settings"] == told["beside"][0]["settings"] == advised["settings"]
+    assert told["own"]["settings"] == {**advised["settings"], "kept_per_class": 3}
+    jsonschema.validate(advised, schema("advice"))
+    assert told["waiting"] == advised["waiting"] and told["limits"]["kept_per_class"] > 3
+    path = tmp_path / "page.html"
+    assert main([*weigh, "--html", str(path)]) == 0
+    text = capsys.readouterr().out
+    for part in ("yours", "Along learning rate", "Good region", "Methods", "One more megabyte", "rows collected first"):
+        assert part in text
+    page = path.read_text()
+    assert page.startswith("<!DOCTYPE html>") and page.count("<svg") == 4 and "src=\"http" not in page
+    assert "--least-gain" in refused(capsys, *weigh, "--least-gain", "3")
+    assert "all three" not in refused(capsys, *weigh[:-1], "kept_per_class=none")
 
 
 @pytest.mark.parametrize("arguments", [["bogus"], ["advise", "--schema", "none"], ["gather", "--streams"], ["update", "--method", "none"]])

@@ -18,7 +18,7 @@ import argparse  # noqa: E402
 import sys  # noqa: E402
 
 from hyperforecast.checks import InputError  # noqa: E402
-from hyperforecast.cli import base, care, classes, field, trust  # noqa: E402
+from hyperforecast.cli import base, care, classes, field, question, trust  # noqa: E402
 from hyperforecast.cli.text import CAUTION  # noqa: E402
 
 BAD_INPUT = 2
@@ -60,6 +60,7 @@ def _parser():
         return sub
 
     field.add_commands(command)
+    question.add_commands(command)
     care.add_commands(command)
     classes.add_commands(command)
     trust.add_commands(command)

@@ -7,6 +7,7 @@ import numpy as np
 from hyperforecast.checks import InputError
 from hyperforecast.cli.options import (
     add_device, add_forecaster, add_streams, add_workers, checked_seed, checked_workers, chosen_forecaster, definitions,
+    forecasters_by_method,
 )
 from hyperforecast.cli.text import CAUTION, progress, say, settings_lines, table
 from hyperforecast.settings import METHODS
@@ -103,7 +104,7 @@ def _settings_cells(settings):
 def _gather(options):
     from hyperforecast.workshop.gathering import RecordsFile, gather
 
-    streams, forecasters = definitions(options.streams), _by_method(options.forecaster)
+    streams, forecasters = definitions(options.streams), forecasters_by_method(options.forecaster)
     if forecasters and set(options.method) - set(forecasters):
         raise InputError("--forecaster", "must name one for each method", ", ".join(forecasters), "or name --method")
     n_run = gather(streams, options.records, methods=options.method, seed=checked_seed(options),
@@ -178,23 +179,10 @@ def _search(options):
 def _contest(options):
     from hyperforecast.workshop.contest import as_text, run_contest, summarize
 
-    contest = run_contest(definitions(options.streams), _by_method(options.forecaster), options.result, kind=options.kind,
+    contest = run_contest(definitions(options.streams), forecasters_by_method(options.forecaster), options.result, kind=options.kind,
                           workers=checked_workers(options), progress=progress)
     summary = summarize(contest)
     say(options, summary, [as_text(summary), f"Result file: {options.result}"])
-
-
-def _by_method(paths):
-    """Return {method: Forecaster} of forecaster files."""
-    from hyperforecast.forecasting import load_forecaster
-
-    forecasters = {}
-    for path in paths:
-        forecaster = load_forecaster(path)
-        if forecaster.method in forecasters:
-            raise InputError("--forecaster", "must name one file for each method", f"two for {forecaster.method}")
-        forecasters[forecaster.method] = forecaster
-    return forecasters
 
 
 def _report(options):

@@ -4,10 +4,10 @@ from dataclasses import asdict, replace
 
 from hyperforecast.checks import InputError
 from hyperforecast.cli.options import (
-    add_device, add_forecaster, add_preferences, add_settings, checked_seed, chosen_forecaster, chosen_preferences,
-    chosen_settings,
+    add_device, add_forecaster, add_least_gain, add_preferences, add_settings, checked_seed, chosen_forecaster,
+    chosen_preferences, chosen_settings, least_gain,
 )
-from hyperforecast.cli.text import CAUTION, expected, listed, number, say, settings_lines, short, table
+from hyperforecast.cli.text import CAUTION, expected, listed, number, say, settings_lines, short, table, when_lines
 from hyperforecast.settings import METHODS, UPDATE_LIMITS, Plan
 
 PLAN_HELP = {
@@ -31,6 +31,7 @@ def add_commands(command):
                         "the answer to --json, and stop")
     add_forecaster(advise)
     add_preferences(advise)
+    add_least_gain(advise)
 
     update = command("update", _update, "Advise, learn, check, keep or roll back; the first one makes the device folder.")
     add_device(update)
@@ -71,13 +72,24 @@ def _advise(options):
         return
     named = [name for name in ("increment", "device", "descriptors") if getattr(options, name) is not None]
     if named == ["descriptors"]:
-        advice = _answer(options)
+        advice, document, lines = _answer(options), {}, []
     elif named == ["increment", "device"]:
-        advice = _dry_run(options).advice
+        advice, document, lines = _with_timing(options)
     else:
         raise InputError("--increment and --device", "must be named, or --descriptors instead",
                          ", ".join(f"--{name}" for name in named) or "nothing", "see hyperforecast advise --help")
-    say(options, advice.as_dict(), _advice_lines(advice))
+    say(options, {**advice.as_dict(), **document}, [*_advice_lines(advice)[:-1], *lines, CAUTION])
+
+
+def _with_timing(options):
+    """Return the advice, and whether to update now as a dict and as lines."""
+    from hyperforecast.device import when
+    from hyperforecast.forecasting import retraining_signs
+
+    increment, report = _dry_run(options)
+    timing = when(report.advice, increment, report.carryover.classes, **least_gain(options))
+    signs = retraining_signs(report.advice)
+    return report.advice, {"waiting": timing.as_dict(), "retrain": signs}, when_lines(timing, signs)
 
 
 def _print_schema(name):
@@ -103,8 +115,8 @@ def _dry_run(options):
     folder = DeviceFolder(options.device)
     generation = folder.read()
     increment = read_increment(options.increment, n_features=generation.carryover.n_features)
-    return update(folder, increment, forecaster=chosen_forecaster(options, folder, generation), dry_run=True,
-                  preferences=chosen_preferences(options, kept_preferences(generation.history)))
+    return increment, update(folder, increment, forecaster=chosen_forecaster(options, folder, generation), dry_run=True,
+                             preferences=chosen_preferences(options, kept_preferences(generation.history)))
 
 
 def _advice_lines(advice):

@@ -3,7 +3,7 @@
 import os
 from dataclasses import replace
 
-from hyperforecast.checks import InputError, check_keys, check_whole
+from hyperforecast.checks import InputError, check_keys, check_number, check_whole
 
 
 def add_device(parser, *, required=True):
@@ -34,6 +34,19 @@ def chosen_forecaster(options, folder, generation):
     from hyperforecast.forecasting import load_forecaster
 
     return forecaster_for(folder, generation, given=load_forecaster(options.forecaster) if options.forecaster else None)
+
+
+def forecasters_by_method(paths):
+    """Return {method: Forecaster} of forecaster files."""
+    from hyperforecast.forecasting import load_forecaster
+
+    forecasters = {}
+    for path in paths:
+        forecaster = load_forecaster(path)
+        if forecaster.method in forecasters:
+            raise InputError("--forecaster", "must name one file for each method", f"two for {forecaster.method}")
+        forecasters[forecaster.method] = forecaster
+    return forecasters
 
 
 def add_settings(parser, then):
@@ -78,6 +91,19 @@ def chosen_preferences(options, kept):
             raise InputError("--old-weight", 'must be a number from 0 to 1, or "count"',
                              repr(given["old_weight"])) from None
     return replace(kept, **given).checked()
+
+
+def add_least_gain(parser):
+    """What counts as a gain."""
+    parser.add_argument("--least-gain", type=float, metavar="SHARE",
+                        help="gain in accuracy on all classes that is worth waiting or updating for (2 points)")
+
+
+def least_gain(options):
+    """Return --least-gain as an argument by name, none where it was not given."""
+    if options.least_gain is None:
+        return {}
+    return {"least_gain": check_number("--least-gain", options.least_gain, low=0, high=1)}
 
 
 def definitions(paths):

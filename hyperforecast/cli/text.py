@@ -56,3 +56,9 @@ def expected(expected):
 def number(value):
     """An accuracy, or a dash for None."""
     return "-" if value is None else f"{value:.2f}"
+
+
+def when_lines(timing, signs):
+    """Whether to update now, where there is something to say: more rows first, nothing new, or retraining at base."""
+    lines = [str(timing)] if getattr(timing, "needed", None) is None or timing.pays else []
+    return lines + [f"Time to retrain at base: {sign}" for sign in signs]

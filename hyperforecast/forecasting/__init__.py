@@ -1,6 +1,6 @@
 """Forecasts and advice with numpy alone.
 
-Read trees, intervals, familiarity, forecaster, preferences, advice, in this order.
+Read trees, intervals, familiarity, forecaster, preferences, advice, weighing, waiting, in this order.
 """
 
 from hyperforecast.forecasting.advice import DIVERGENCE_PRICE, Advice, Reason, advise_settings, explain
@@ -12,7 +12,13 @@ from hyperforecast.forecasting.intervals import grouped_conformal_threshold
 from hyperforecast.forecasting.opening import opening_settings
 from hyperforecast.forecasting.preferences import Preferences
 from hyperforecast.forecasting.trees import TreeEnsemble
+from hyperforecast.forecasting.waiting import (
+    LEAST_GAIN, NothingNew, Waiting, await_rows, nothing_new, retraining_signs,
+)
+from hyperforecast.forecasting.weighing import RIDGE, RISKY, Outlook, Ridge, along, outlook, ridge
 
-__all__ = ["Advice", "Constant", "Expected", "Familiarity", "FamiliarityVerdict", "Forecaster", "DIVERGENCE_PRICE",
-           "Preferences", "RANGES", "Reason", "TreeEnsemble", "advise_settings", "combined", "explain", "forecaster_bytes",
-           "grouped_conformal_threshold", "load_forecaster", "opening_settings", "save_forecaster", "with_checksum"]
+__all__ = ["Advice", "Constant", "DIVERGENCE_PRICE", "Expected", "Familiarity", "FamiliarityVerdict", "Forecaster",
+           "LEAST_GAIN", "NothingNew", "Outlook", "Preferences", "RANGES", "RIDGE", "RISKY", "Reason", "Ridge",
+           "TreeEnsemble", "Waiting", "advise_settings", "along", "await_rows", "combined", "explain", "forecaster_bytes",
+           "grouped_conformal_threshold", "load_forecaster", "nothing_new", "opening_settings", "outlook",
+           "retraining_signs", "ridge", "save_forecaster", "with_checksum"]

@@ -5,14 +5,14 @@
 
 from abc import abstractmethod
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Protocol
 
 import numpy as np
 
 from hyperforecast.checks import InputError
 from hyperforecast.learning.boundary import Boundary
-from hyperforecast.learning.exemplars import herd, unit_rows
+from hyperforecast.learning.exemplars import Exemplars, herd, unit_rows
 from hyperforecast.learning.head import (
     HeadLayout, backpropagate, fisher_diagonal, head_logits, hidden_features, new_head, softmax, top_curvature,
 )
@@ -256,6 +256,24 @@ class HeadTrainer(Trainer):
                 part[:, :old.shape[1]] += np.float32(1 - share) * old
             head[f"importance_{name}"] = np.nan_to_num(part, posinf=0, neginf=0).astype(np.float32)
         return head
+
+    def with_method(self, carryover, method):
+        """Return the carryover as it would be if the device went on with another method.
+
+        Exemplars are the rows that are held: check rows where there are no exemplars. Importance (EWC) is that of the
+        rows held, where training would have used all rows; iCaRL's class means go, its logits stay.
+        """
+        plan = replace(carryover.plan, method=method)
+        held = carryover.exemplars if len(carryover.exemplars) else carryover.check_rows
+        head = {name: part for name, part in carryover.head.items()
+                if name != "class_means" and not name.startswith("importance_")}
+        if method == "ewc":
+            with np.errstate(all="ignore"):
+                fisher = fisher_diagonal(head, held.Z) if len(held) else {name: 0 * part for name, part in head.items()}
+            for name, part in fisher.items():
+                head[f"importance_{name}"] = np.nan_to_num(part, posinf=0, neginf=0)
+        exemplars = held if plan.rehearses else Exemplars.none(carryover.n_features)
+        return replace(carryover, plan=plan, head=head, exemplars=exemplars)
 
     def facts(self, boundary, *, seed):
         """Return facts about the old head with its outputs for the new classes added, before training.

@@ -55,6 +55,11 @@ def _every_chart(name):
         charts.expected_and_achieved(name, {name: points, "new classes": points[:0]}),
         charts.interval_chart(name, [name] * 5, {name: points[:, :3], "other": points[:, :3] - 1}, x_label=name),
         charts.search_curve(name, {name: [0.2, np.nan, 0.6, 0.4]}, {name + "2": 0.5}, y_label=name),
+        charts.outlook_chart(name, [1, 3, 9, 27, 80], {name: shares, "old": shares - 0.1}, low=shares - 0.2,
+                             high=shares + 0.1, marks={name: 12.0}, x_label=name, limit=80),
+        charts.plane_chart(name, np.geomspace(1e-3, 1, 5), np.geomspace(1, 100, 5), np.tile(shares, (5, 1)) - 0.5,
+                           good=np.eye(5) > 0, shut=np.eye(5)[::-1] > 0, marks={name: (0.1, 10.0), "constant": (0.01, 2.0)},
+                           x_label=name, y_label=name),
     ]
 
 
@@ -111,7 +116,7 @@ def test_hostile_labels_arrive_as_text(hostile_page):
 def test_labels_in_any_script_and_of_any_length_are_drawn():
     for name in ("螺母", "шайба", "🔩" * 40, "x" * 500, "_hidden", "", "$x$"):
         reader = Reader(_full_page(name).html())
-        assert [tag for tag, _ in reader.elements].count("svg") == 5
+        assert [tag for tag, _ in reader.elements].count("svg") == 7
         assert not name or any(plain(name)[:20] in text for text in reader.texts)
 
 
@@ -172,6 +177,19 @@ def test_points_outside_their_interval_are_ringed():
 def test_search_curve_keeps_the_best():
     _, y = _points(charts.search_curve("t", {"a": [0.3, 0.1, np.nan, 0.6]}, y_label="y").drawing).T
     assert (np.diff(y) <= 0).all() and y[-1] < y[0]
+
+
+def test_a_plane_outlines_and_hatches_what_it_is_told_to():
+    def drawn(good, shut):
+        plain_plane = {"x": np.geomspace(0.01, 1, 6), "y": np.geomspace(1, 100, 6), "behind": np.zeros((6, 6))}
+        chart = charts.plane_chart("plane", **plain_plane, good=good, shut=shut, marks={"advised": (0.1, 10.0)},
+                                   x_label="rate", y_label="strength")
+        return chart.markup("")
+
+    none, square = np.zeros((6, 6), bool), np.zeros((6, 6), bool)
+    square[2:4, 2:4] = True
+    assert "<pattern" in drawn(none, square) and "<pattern" not in drawn(square, none)
+    assert "stroke-width: 1.8" in drawn(square, none) and "stroke-width: 1.8" not in drawn(none, none)
 
 
 def test_lines_differ_without_colour():

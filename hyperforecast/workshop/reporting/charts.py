@@ -30,6 +30,8 @@ _WIDTH, _HEIGHT = 360, 225  # points; a phone's width, so that text keeps its si
 _LONGEST_LABEL = 26
 _MOST_MARKERS = 12
 _CROWD = 60
+# Farther behind the best than this is all one shade.
+_MOST_BEHIND = 0.2
 
 # Colour, line style and marker of the first, second, ... series.
 _LOOKS = (
@@ -238,6 +240,89 @@ def change_chart(title, names, before, after, notes):
         return _finished(figure, title)
 
 
+def outlook_chart(title, values, lines, *, low, high, marks, x_label, y_label="expected accuracy", limit=None):
+    """Return expected accuracies along a setting, with the interval of the first of them as a band.
+
+    Parameters
+    ----------
+    title : str
+    values : sequence of float
+        Of the setting, ascending, above 0; the axis is logarithmic.
+    lines : mapping of str to sequence of float
+        Shares from 0 to 1.
+    low, high : sequence of float
+        The band around the first line.
+    marks : mapping of str to float
+        Named values of the setting, drawn as upright lines.
+    x_label, y_label : str
+    limit : float, optional
+        The largest value that is allowed; the end of the axis is marked with it.
+    """
+    with matplotlib.rc_context(_STYLE):
+        figure, axes = _panel(x_label, y_label)
+        axes.fill_between(values, low, high, color=_SOFT, alpha=0.25, linewidth=0)
+        handles = []
+        for number, line in enumerate(lines.values()):
+            handles += axes.plot(values, line, **{**_look(number), "markevery": 0.15})
+        for number, value in enumerate(marks.values(), len(lines)):
+            handles.append(axes.axvline(value, **{**_look(number), "marker": "none", "color": _INK, "linewidth": 1.2}))
+        names = [*lines, *marks]
+        if limit is not None:
+            handles.append(axes.axvspan(limit, 1.25 * limit, facecolor="none", edgecolor=_SOFT, hatch="///",
+                                        linewidth=0))
+            names.append("beyond the memory limit")
+        _logarithmic(axes.xaxis)
+        axes.yaxis.set_major_formatter(FuncFormatter(_percentage))
+        axes.set_ylim(0, 1.03)
+        _legend(figure, handles, names)
+        return _finished(figure, title)
+
+
+def plane_chart(title, x, y, behind, *, good, shut, marks, x_label, y_label):
+    """Return how far settings stay behind the best over the plane of two of them.
+
+    The darker, the farther behind; the good region is outlined, what should not be taken is hatched.
+
+    Parameters
+    ----------
+    title : str
+    x, y : sequences of float, of length n and m
+        Above 0 and evenly spaced on a logarithmic scale.
+    behind : array of shape (m, n)
+        Points of accuracy, shares from 0 to 1.
+    good, shut : arrays of shape (m, n), bool
+        The region to stay in, and settings that may well diverge.
+    marks : mapping of str to (float, float)
+        Named points (x, y).
+    x_label, y_label : str
+    """
+    behind = np.maximum(np.asarray(behind, dtype=np.float64), 0)
+    with matplotlib.rc_context({**_STYLE, "axes.grid": False, "hatch.linewidth": 0.6, "hatch.color": _INK}):
+        figure, axes = _panel(x_label, y_label, height=285)
+        # Eleven greys that black marks still stand out from, the last for all that lies beyond.
+        shades = axes.contourf(x, y, behind, levels=np.linspace(0, _MOST_BEHIND, 11), extend="max",
+                               colors=[str(grey) for grey in np.linspace(1, 0.5, 11)])
+        axes.set_xscale("log")
+        axes.set_yscale("log")
+        if np.any(shut):
+            axes.contourf(x, y, np.asarray(shut, dtype=float), levels=[0.5, 1.5], colors="none", hatches=["////"])
+        if np.any(good):
+            axes.contour(x, y, np.asarray(good, dtype=float), levels=[0.5], colors=[_INK], linewidths=1.8)
+        handles = []
+        for number, (across, up) in enumerate(marks.values()):
+            look = {**_look(number), "linestyle": "none", "markersize": 9, "markeredgecolor": "white"}
+            handles += axes.plot(across, up, **look)
+        for axis in (axes.xaxis, axes.yaxis):
+            axis.set_major_locator(LogLocator(numticks=7))
+            axis.set_major_formatter(FuncFormatter(_number))
+            axis.set_minor_formatter(NullFormatter())
+        bar = figure.colorbar(shades, ax=axes, shrink=0.9)
+        bar.ax.yaxis.set_major_formatter(FuncFormatter(_percentage))
+        bar.set_label("behind the best")
+        _legend(figure, handles, marks, lines=False)
+        return _finished(figure, title)
+
+
 def _panel(x_label, y_label, height=_HEIGHT):
     figure = Figure(figsize=(_WIDTH / 72, height / 72), layout="constrained")
     axes = figure.add_subplot()
@@ -281,7 +366,7 @@ def _whole_numbers(axis):
 
 
 def _logarithmic(axis):
-    axis.axes.set_yscale("log")
+    axis.axes.set(**{f"{axis.axis_name}scale": "log"})
     low, high = axis.get_data_interval()
     # Less than two decades need ticks between the powers of ten.
     axis.set_major_locator(LogLocator(subs=(1, 2, 5) if high < 100 * low else (1,), numticks=8))
