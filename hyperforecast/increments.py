@@ -2,23 +2,33 @@
 
 Files: .npz with the arrays X and y, a pair NAME.npy (features, memory-mapped)
 and NAME.labels.npy, .csv with a header line and a column named label, and
-.parquet with the same (needs pyarrow).
+.parquet with the same (needs pyarrow). Features in .npy and .npz that would
+take more than HELD_BYTES stay in their file, as `hyperforecast.rows.FileRows`;
+of a deflated .npz, in a temporary file.
 """
 
 import csv
 import io
 import math
+import shutil
+import struct
+import tempfile
+import zipfile
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 
 from hyperforecast.checks import InputError
+from hyperforecast.rows import FileRows
 from hyperforecast.storage import opened_zip, read_array_header
 
 LABEL_COLUMN = "label"
 LARGEST_TEXT_FILE = 2**31
 CHUNK_ROWS = 16_384
+# Features are held in memory up to this size, as they are or as float32.
+HELD_BYTES = 2**26
+BLOCK_BYTES = 2**20
 # All labels of an array take the room of the longest.
 LONGEST_LABEL = 1000
 
@@ -29,13 +39,13 @@ class Increment:
 
     Attributes
     ----------
-    X : ndarray of shape (n, d), float32
+    X : ndarray of shape (n, d), float32; or FileRows
         Features.
     y : ndarray of shape (n,), int64 or text
         Labels.
     """
 
-    X: np.ndarray
+    X: np.ndarray | FileRows
     y: np.ndarray
 
     def __len__(self):
@@ -48,7 +58,7 @@ class Increment:
 
 
 def check_features(X, *, name="X", n_features=None):
-    """Return features as a finite float32 array (n, d), a memory map as it is; or raise `InputError`.
+    """Return features as a finite float32 array (n, d), a memory map or `FileRows` as it is; or raise `InputError`.
 
     Parameters
     ----------
@@ -59,10 +69,10 @@ def check_features(X, *, name="X", n_features=None):
         The feature count it must have.
     """
     try:
-        X = X if isinstance(X, np.ndarray) else np.asarray(X)
+        X = X if isinstance(X, (np.ndarray, FileRows)) else np.asarray(X)
     except ValueError:
         raise InputError(name, "must be a table of numbers, every row of the same length", "ragged rows") from None
-    if np.ma.is_masked(X):
+    if isinstance(X, np.ma.MaskedArray) and np.ma.is_masked(X):
         raise InputError(name, "must hold no masked values", "a masked array", "drop or mend such rows")
     if X.dtype.kind == "O":
         try:
@@ -82,16 +92,19 @@ def check_features(X, *, name="X", n_features=None):
             f"{len(X)} row(s), {X.shape[1]} feature(s) (shape={X.shape}) while a minimum of 1 is required.")
     if n_features is not None and X.shape[1] != n_features:
         raise InputError(name, f"must have {n_features} features as before", f"{X.shape[1]}")
+    if isinstance(X, FileRows) and np.isfinite(X.moments).all():
+        # Nothing that is not finite leaves a mean finite.
+        return X
     for start in range(0, len(X), CHUNK_ROWS):
         with np.errstate(over="ignore"):
             chunk = X[start:start + CHUNK_ROWS].astype(np.float32, copy=False)
         finite = np.isfinite(chunk)
         if not finite.all():
             row, column = np.argwhere(~finite)[0]
-            value = "NaN" if np.isnan(chunk[row, column]) else X[start + row, column]
+            value = "NaN" if np.isnan(chunk[row, column]) else X[start + row:start + row + 1][0, column]
             raise InputError(name, "must hold finite numbers that fit float32",
                              f"{value} in row {start + row}, column {column}", "drop or mend such rows")
-    return X if isinstance(X, np.memmap) else X.astype(np.float32, copy=False)
+    return X if isinstance(X, (np.memmap, FileRows)) else X.astype(np.float32, copy=False)
 
 
 def check_labels(y, n_rows, *, name="y"):
@@ -192,12 +205,18 @@ def _read_npz(path, labelled):
         return _read_member(path, archive, "X.npy"), _read_member(path, archive, "y.npy") if labelled else None
 
 
+def _stays_in_file(shape, fortran, dtype):
+    """Whether an array is too large to hold, and can be read row by row."""
+    fits = math.prod(shape) * max(dtype.itemsize, 4) <= HELD_BYTES
+    return not fits and len(shape) == 2 and not fortran and dtype.kind in "fiub"
+
+
 def _read_member(path, archive, member):
     name = f"{path} ({member})"
     with archive.open(member) as stream:
         # The header is read through a small window: a hostile one cannot make us allocate.
         head = io.BytesIO(stream.read(12_000))
-        shape, _, dtype = read_array_header(name, head)
+        shape, fortran, dtype = read_array_header(name, head)
     expected = math.prod(shape) * dtype.itemsize
     present = archive.getinfo(member).file_size - head.tell()
     if expected != present:
@@ -206,15 +225,45 @@ def _read_member(path, archive, member):
     if present > 1100 * max(min(archive.getinfo(member).compress_size, path.stat().st_size), 1):
         raise InputError(name, "must not expand more than deflate can", f"{present} bytes")
     with archive.open(member) as stream:
+        if member == "X.npy" and _stays_in_file(shape, fortran, dtype):
+            file, start = _streamed(path, archive.getinfo(member), stream)
+            return FileRows(file, name, offset=start + head.tell(), shape=shape, dtype=dtype)
         return np.lib.format.read_array(stream, allow_pickle=False)
+
+
+def _streamed(path, info, stream):
+    """Read a member to its end, which checks it; return a file that holds it unpacked, and where it begins there."""
+    deflated = info.compress_type != zipfile.ZIP_STORED
+    if deflated and shutil.disk_usage(tempfile.gettempdir()).free < info.file_size:
+        raise InputError(path, f"must find room in {tempfile.gettempdir()} to be unpacked", f"{info.file_size} bytes",
+                         "set TMPDIR to a folder with room, or use .npy")
+    # Unlinked from the start, a temporary file goes with the last that reads it.
+    file, start = (tempfile.TemporaryFile(), 0) if deflated else (open(path, "rb"), 0)
+    try:
+        while block := stream.read(BLOCK_BYTES):
+            if deflated:
+                file.write(block)
+        if deflated:
+            file.flush()
+        else:
+            # A local header of 30 bytes, whose last two numbers are the lengths of the name and of what follows it.
+            file.seek(info.header_offset)
+            start = info.header_offset + 30 + sum(struct.unpack("<HH", file.read(30)[-4:]))
+    except BaseException:
+        file.close()
+        raise
+    return file, start
 
 
 def _map_npy(path):
     with open(path, "rb") as stream:
-        shape, _, dtype = read_array_header(path, stream)
-        expected = stream.tell() + math.prod(shape) * dtype.itemsize
+        shape, fortran, dtype = read_array_header(path, stream)
+        offset = stream.tell()
+    expected = offset + math.prod(shape) * dtype.itemsize
     if path.stat().st_size != expected:
         raise InputError(path, "must hold as many bytes as its header says", f"{path.stat().st_size}, not {expected}")
+    if _stays_in_file(shape, fortran, dtype):
+        return FileRows(open(path, "rb"), path, offset=offset, shape=shape, dtype=dtype)
     return np.load(path, mmap_mode="r", allow_pickle=False)
 
 

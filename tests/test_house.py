@@ -12,7 +12,7 @@ from hyperforecast.forecasting import save_forecaster
 ROOT = pathlib.Path(__file__).parents[1]
 PACKAGE = ROOT / "hyperforecast"
 # A room imports only rooms that come before it.
-ROOMS = ("checks", "storage", "settings", "increments", "metrics", "learning", "describing", "forecasting",
+ROOMS = ("checks", "storage", "rows", "settings", "increments", "metrics", "learning", "describing", "forecasting",
          "classifier", "device", "workshop", "cli")
 WORKSHOP = ("streams", "searching", "gathering", "fitting", "contest", "demo", "reporting")
 LOWER = ROOMS[:ROOMS.index("workshop")]

@@ -98,7 +98,7 @@ class BoundaryView:
         """(Z, y) of at most MOST_ROWS rows of the increment."""
         boundary = self.boundary
         if len(boundary.y) <= MOST_ROWS:
-            return boundary.Z, boundary.y
+            return boundary.Z[:], boundary.y
         rows = np.sort(self._rng.permutation(len(boundary.y))[:MOST_ROWS])
         return boundary.Z[rows], boundary.y[rows]
 

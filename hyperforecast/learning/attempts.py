@@ -8,6 +8,7 @@ from hyperforecast.learning.boundary import Carryover, ClassSummaries
 from hyperforecast.learning.exemplars import Exemplars, choose_exemplars
 from hyperforecast.learning.trainer import Job
 from hyperforecast.metrics import class_accuracies
+from hyperforecast.rows import chunks
 
 # Rows scored at a time, so that large sets need little memory.
 CHUNK_ROWS = 8192
@@ -54,8 +55,8 @@ def close_boundary(trainer, boundary, attempt, *, seed):
     exemplars = Exemplars.none(boundary.n_features)
     if job.kept:
         held = np.bincount(job.exemplars.y, minlength=boundary.n_classes)
-        features = np.nan_to_num(trainer.features(attempt.head, boundary.Z))
-        chosen = choose_exemplars(boundary.Z, boundary.y, features, job.kept)
+        Z, y = boundary.candidates()
+        chosen = choose_exemplars(Z, y, np.nan_to_num(trainer.features(attempt.head, Z)), job.kept)
         chosen = replace(chosen, rank=chosen.rank + held[chosen.y])
         fits = chosen.rank < job.kept
         exemplars = job.exemplars.joined(Exemplars(chosen.Z[fits], chosen.y[fits], chosen.rank[fits]))
@@ -68,9 +69,10 @@ def close_boundary(trainer, boundary, attempt, *, seed):
     else:
         summaries = before.summaries
         best[:boundary.n_old] = before.best_check_accuracy
+    for rows, Z in chunks(boundary.Z):
+        summaries = summaries.merged(Z, boundary.y[rows], boundary.n_classes)
     return Carryover(
         plan=boundary.plan, classes=boundary.classes, center=boundary.center, scale=boundary.scale, head=head,
-        exemplars=exemplars, check_rows=check_rows,
-        summaries=summaries.merged(boundary.Z, boundary.y, boundary.n_classes),
+        exemplars=exemplars, check_rows=check_rows, summaries=summaries,
         best_check_accuracy=np.fmax(best, now), n_boundaries=boundary.number + 1,
     )

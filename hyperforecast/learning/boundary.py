@@ -4,12 +4,15 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from hyperforecast.increments import check_labels_kind
+from hyperforecast.increments import HELD_BYTES, check_labels_kind
 from hyperforecast.learning.exemplars import Exemplars
+from hyperforecast.rows import chunk_rows, column_moments
 from hyperforecast.settings import KEPT_PER_CLASS, Plan
 
 # Rows of each class held back from training, for descriptors and checks.
 MOST_CHECK_ROWS = 8
+# Exemplars are chosen among so many bytes of rows, where the rows are not held in memory.
+CANDIDATE_BYTES = 2**25
 # Standardized features beyond this many standard deviations are cut to it.
 LARGEST_Z = 10.0
 
@@ -101,14 +104,51 @@ def standardize(X, center, scale):
     return np.clip(Z, -LARGEST_Z, LARGEST_Z, out=Z)
 
 
-def fit_scaling(X):
+class StandardizedRows:
+    """Standardized rows (n, d) that are read and made when asked for; they look like an array.
+
+    Parameters
+    ----------
+    X : table of shape (m, d)
+    places : ndarray of shape (n,), int
+        Which rows of X.
+    center, scale : ndarrays of shape (d,)
+    """
+
+    ndim, dtype = 2, np.dtype(np.float32)
+
+    def __init__(self, X, places, center, scale):
+        self.X, self.places, self.center, self.scale = X, places, center, scale
+        self.shape = (len(places), X.shape[1])
+
+    def __len__(self):
+        return len(self.places)
+
+    def __getitem__(self, rows):
+        """Return an array of the rows in a slice, a mask or an array of indices of any shape."""
+        return standardize(self.X[self.places[rows]], self.center, self.scale)
+
+    def __array__(self, dtype=None, copy=None):
+        return np.asarray(self[:], dtype)
+
+    def take(self, places, axis=0):
+        """Return the rows at `places`, an array of indices of any shape."""
+        return self[places]
+
+
+def fit_scaling(X, *, held=True):
     """Return (center, scale) of shape (d,), float32: mean and standard deviation of every feature.
+
+    In little memory if the rows X are not to be held as a whole.
 
     A feature that hardly varies gets a tenth of the root mean square deviation over all features instead of its
     own, so that its later changes are not blown up; where nothing varies the scale is 1.
     """
-    center = X.mean(axis=0, dtype=np.float64)
-    deviation = X.std(axis=0, dtype=np.float64)
+    if held:
+        center, deviation = X.mean(axis=0, dtype=np.float64), X.std(axis=0, dtype=np.float64)
+    else:
+        center, variance = column_moments(X)
+        deviation = np.sqrt(variance)
     typical = np.sqrt(np.mean(deviation**2))
     scale = np.maximum(deviation, 0.1 * typical) if typical > 1e-30 else np.ones_like(deviation)
     return center.astype(np.float32), scale.astype(np.float32)
@@ -129,7 +169,8 @@ class Boundary:
         Classes seen before.
     center, scale : ndarrays of shape (d,)
     Z, y : ndarrays of shape (n, d) and (n,)
-        Standardized rows to train on, and their class codes.
+        Standardized rows to train on, and their class codes. Where the rows are not held in memory Z is a
+        `StandardizedRows`, to be worked through in `hyperforecast.rows.chunks`, or to take rows of.
     held_back : Exemplars
         Rows of the increment held back from training.
     check_per_class, most_kept : int
@@ -178,6 +219,21 @@ class Boundary:
         """Check rows of old classes, as carried."""
         return Exemplars.none(self.n_features) if self.carryover is None else self.carryover.check_rows
 
+    def candidates(self):
+        """Return (Z, y), arrays of the rows that exemplars are chosen among: all, or as many as memory should hold.
+
+        These are spread evenly over each class's rows, and enough to choose from what may be kept.
+        """
+        if isinstance(self.Z, np.ndarray):
+            return self.Z, self.y
+        order = np.argsort(self.y, kind="stable")
+        _, start, count = np.unique(self.y[order], return_index=True, return_counts=True)
+        most = max(chunk_rows(self.Z, CANDIDATE_BYTES) // len(count), 2 * self.most_kept)
+        picked = [np.unique(np.linspace(first, first + n - 1, min(most, n)).astype(np.int64))
+                  for first, n in zip(start, count)]
+        rows = np.sort(order[np.concatenate(picked)])
+        return self.Z[rows], self.y[rows]
+
     def check_set(self):
         """Return the rows held back from training, of old classes (cut to what the memory allows) and of new ones."""
         old = self.old_check_rows.cut(self.check_per_class)
@@ -196,11 +252,13 @@ def class_limits(plan, n_features, n_classes):
     return check_rows, min(rows - check_rows, KEPT_PER_CLASS[1])
 
 
-def open_boundary(plan, carryover, increment, *, seed=0, most_rows=None):
+def open_boundary(plan, carryover, increment, *, seed=0, most_rows=None, held=None):
     """Return the `Boundary` at which `increment` meets `carryover` (None: it is the first increment).
 
     A few rows of each class, at most 8 and at most a fifth, drawn with `seed`, are held back from training. With
     `most_rows` (at least one for each class) the same share of every class, that many rows at most, is trained on.
+    Unless the standardized rows are to be `held` in memory they are made whenever they are asked for; by default they
+    are held where the increment is, or is small.
 
     Raises
     ------
@@ -215,16 +273,24 @@ def open_boundary(plan, carryover, increment, *, seed=0, most_rows=None):
     place = {label: code for code, label in enumerate(classes.tolist())}
     y = np.array([place[label] for label in labels.tolist()], np.int64)[codes]
     check_per_class, most_kept = class_limits(plan, increment.n_features, len(classes))
-    center, scale = fit_scaling(increment.X) if carryover is None else (carryover.center, carryover.scale)
-    Z = standardize(increment.X, center, scale)
-    training, held_back = _hold_back(Z, y, check_per_class, most_rows, np.random.default_rng([seed, 0x6368]))
+    held = is_held(increment.X) if held is None else held
+    center, scale = fit_scaling(increment.X, held=held) if carryover is None else (carryover.center, carryover.scale)
+    training, checked, rank = _hold_back(y, check_per_class, most_rows, np.random.default_rng([seed, 0x6368]))
+    Z = StandardizedRows(increment.X, training, center, scale)
+    held_back = Exemplars(StandardizedRows(increment.X, checked, center, scale)[:], y[checked], rank)
     return Boundary(
         plan=plan, carryover=carryover, classes=classes, n_old=len(old), center=center, scale=scale,
-        Z=Z[training], y=y[training], held_back=held_back, check_per_class=check_per_class, most_kept=most_kept,
+        Z=Z[:] if held else Z, y=y[training], held_back=held_back, check_per_class=check_per_class, most_kept=most_kept,
     )
 
 
-def _hold_back(Z, y, per_class, most_rows, rng):
+def is_held(X):
+    """Whether the rows X of an increment are held in memory; those of a file or of a large mapping are not."""
+    return isinstance(X, np.ndarray) and not (isinstance(X, np.memmap) and X.nbytes > HELD_BYTES)
+
+
+def _hold_back(y, per_class, most_rows, rng):
+    """Return the rows to train on in rising order, those held back, and the ranks of these."""
     shuffled = rng.permutation(len(y))
     order = shuffled[np.argsort(y[shuffled], kind="stable")]
     codes, start, count = np.unique(y[order], return_index=True, return_counts=True)
@@ -239,4 +305,4 @@ def _hold_back(Z, y, per_class, most_rows, rng):
         # One row of each class, and the same share of its others.
         share = max(most_rows - len(codes), 0) / max(rest.sum() - len(codes), 1)
         trains &= rank < np.repeat(per_class + 1 + ((rest - 1) * share).astype(np.int64), count)
-    return np.sort(order[trains]), Exemplars(Z[rows], y[rows], rank[held][by_rank])
+    return np.sort(order[trains]), rows, rank[held][by_rank]

@@ -18,6 +18,7 @@ from hyperforecast.learning.head import (
 )
 from hyperforecast.learning.objectives import Objective
 from hyperforecast.learning.side_by_side import Regimen, train_side_by_side
+from hyperforecast.rows import chunks, joined
 from hyperforecast.settings import Settings
 
 # Rows that facts about gradients and curvature are computed on.
@@ -142,7 +143,8 @@ class Trainer(Protocol):
         """Return one `Attempt` per `Job`; all jobs share plan and new rows, and differ in settings or carryover.
 
         Start from `boundary.carryover.head`, or afresh at the first increment, where `boundary.carryover` is None.
-        Train on the rows `boundary.Z` of classes `boundary.y` and on `job.exemplars`. An attempt must come out the
+        Train on the rows `boundary.Z` of classes `boundary.y` and on `job.exemplars`; `np.asarray` makes one array of
+        rows that are not held in memory, where there is room for it. An attempt must come out the
         same whatever jobs are beside it. Report numbers that run away as `diverged`, rather than raise. Ask `job.stop`
         between minibatches or passes, where there is one; a trainer that does not is found to be late afterwards.
         """
@@ -247,8 +249,12 @@ class HeadTrainer(Trainer):
         before = {} if boundary.carryover is None else boundary.carryover.head
         n_before = 0 if boundary.carryover is None else int(boundary.carryover.summaries.count.sum())
         share = len(boundary.y) / (n_before + len(boundary.y))
+        fisher = {}
         with np.errstate(all="ignore"):
-            fisher = fisher_diagonal(attempt.head, boundary.Z)
+            for _, Z in chunks(boundary.Z):
+                weight = np.float32(len(Z) / len(boundary.y))
+                for name, part in fisher_diagonal(attempt.head, Z).items():
+                    fisher[name] = weight * part + fisher.get(name, 0)
         for name, part in fisher.items():
             old = before.get(f"importance_{name}")
             part = np.float32(share) * part
@@ -396,20 +402,21 @@ class _Pool:
         else:
             arrays = boundary.carryover.head
         first = self.size
-        Z = np.concatenate([boundary.Z, exemplars.Z])
+        Z = joined([boundary.Z, exemplars.Z])
         self.Z.append(Z)
         self.y.append(np.concatenate([boundary.y, exemplars.y]))
         if self.objective.distils:
             # Once for all passes and all attempts: the old head does not change.
             with np.errstate(all="ignore"):
-                self.targets.append(self.objective.targets(head_logits(arrays, Z)))
+                self.targets.append(np.concatenate([self.objective.targets(head_logits(arrays, part))
+                                                    for _, part in chunks(Z)]))
         self.size += len(Z)
         importance = self.layout.flatten(arrays, "importance_")[0] if boundary.plan.method == "ewc" else None
         return first, self.layout.flatten(arrays)[0], importance
 
     def gathered(self):
         targets = np.concatenate(self.targets) if self.targets else None
-        return np.concatenate(self.Z), np.concatenate(self.y), targets
+        return joined(self.Z), np.concatenate(self.y), targets
 
 
 def _add_class_means(jobs, attempts):
@@ -419,9 +426,10 @@ def _add_class_means(jobs, attempts):
     that a class is herded for all attempts at once.
     """
     boundary = jobs[0].boundary
+    Z, y = boundary.candidates()
     kept = np.array([job.kept for job in jobs])
     with np.errstate(all="ignore"):
-        new = np.stack([np.nan_to_num(unit_rows(hidden_features(one.head, boundary.Z))) for one in attempts])
+        new = np.stack([np.nan_to_num(unit_rows(hidden_features(one.head, Z))) for one in attempts])
         means = np.zeros((len(jobs), boundary.n_classes, new.shape[2]), np.float32)
         for k, (job, attempt) in enumerate(zip(jobs, attempts)):
             if len(job.exemplars):
@@ -431,7 +439,7 @@ def _add_class_means(jobs, attempts):
         for k, job in enumerate(jobs):
             held[k] = np.bincount(job.exemplars.y, minlength=boundary.n_classes)
         for code in boundary.arrived:
-            rows = np.flatnonzero(boundary.y == code)
+            rows = np.flatnonzero(y == code)
             room = np.minimum(np.maximum(kept - held[:, code], 0), len(rows))
             if not room.max():
                 continue
