@@ -18,6 +18,7 @@ def add_commands(command):
     demo = command("demo", _demo, "Six deliveries to a salvage yard's sorting cell: advice next to the best constant.")
     demo.add_argument("--html", default="hyperforecast-demo.html", metavar="FILE", help="report to write (%(default)s)")
     demo.add_argument("--seed", type=int, default=0, help="of pictures and training (%(default)s)")
+    demo.add_argument("--deliveries", metavar="DIR", help="write the deliveries as files for the other commands, and stop")
 
     gather = command("gather", _gather, "Search at the boundaries of many streams, into a records file; resumes.")
     add_streams(gather)
@@ -72,10 +73,16 @@ def add_commands(command):
 
 
 def _demo(options):
+    progress("drawing parts ...")
+    if options.deliveries:
+        from hyperforecast.workshop.streams.salvage_yard import write_deliveries
+
+        paths = [str(path) for path in write_deliveries(options.deliveries, seed=checked_seed(options))]
+        say(options, {"files": paths}, paths)
+        return
     from hyperforecast.workshop.demo import run_demo
     from hyperforecast.workshop.reporting.demo_report import demo_page
 
-    progress("drawing parts ...")
     deliveries = run_demo(seed=checked_seed(options), progress=lambda one: progress(f"delivery {one.number} learned"))
     demo_page(deliveries, seed=options.seed).write(options.html)
     rows, document = [], []

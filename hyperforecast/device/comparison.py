@@ -1,6 +1,6 @@
 """Two forecasters side by side on a device's own past boundaries.
 
-The history holds the descriptors of each boundary, so that either can be asked again what it would have advised, and
+The history holds the descriptors of each boundary and what advice was to care for there, so that either can be asked again what it would have advised, and
 what it would have expected of the settings that were used. Where these were tried, what they achieved is known.
 """
 
@@ -96,7 +96,8 @@ def _compared(entry, method, sides):
     kept = descriptors.get("most_kept", np.nan)
     box = SettingsBox(method) if np.isnan(kept) else SettingsBox(method, int(kept))
     used = Settings(**entry["settings"])
-    advice = {side: advise_settings(forecaster, descriptors, box) for side, forecaster in sides.items()}
+    advice = {side: advise_settings(forecaster, descriptors, box, **entry.get("preferences", {}))
+              for side, forecaster in sides.items()}
     return Comparison(
         update=entry["number"], advised={side: one.settings for side, one in advice.items()},
         promised={side: one.expected_all for side, one in advice.items()}, used=used,

@@ -10,7 +10,7 @@ from hyperforecast.device import (
     DeviceFolder, compare_forecasters, forecaster_for, mean_errors, pin_forecaster, pinned_path, roll_back,
     unpin_forecaster, update, upgrade_forecaster, verify_pinned,
 )
-from hyperforecast.forecasting import TreeEnsemble, forecaster_bytes, load_forecaster, save_forecaster, with_checksum
+from hyperforecast.forecasting import Preferences, TreeEnsemble, forecaster_bytes, load_forecaster, save_forecaster, with_checksum
 from hyperforecast.forecasting.signature import make_key, read_public_key, sign_file
 from hyperforecast.increments import check_increment
 from hyperforecast.settings import Plan, Settings
@@ -47,7 +47,8 @@ def folder(tmp_path, files):
     one = load_forecaster(files["one"])
     update(folder, clouds(["nut", "bolt"], 0), plan=Plan("wa", 8, 4, 16, 120))
     update(folder, clouds(["hook"], 1), forecaster=one, **LENIENT)
-    update(folder, clouds(["rod", "pin"], 2), forecaster=one, settings=Settings(1e-5, 1.0, 4), **LENIENT)
+    update(folder, clouds(["rod", "pin"], 2), forecaster=one, settings=Settings(1e-5, 1.0, 4),
+           preferences=Preferences(old_weight=0.9, tolerance=0.1), **LENIENT)
     return folder
 
 

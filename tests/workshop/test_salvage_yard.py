@@ -4,8 +4,10 @@ import numpy as np
 import pytest
 
 from hyperforecast.checks import InputError
+from hyperforecast.increments import read_increment
 from hyperforecast.workshop.streams.salvage_yard import (
     DELIVERIES, FAMILIES, delivery_pictures, draw_parts, lamp_age_at, part_features, salvage_yard_stream,
+    write_deliveries,
 )
 
 
@@ -144,3 +146,16 @@ def test_held_out_parts_are_seen_under_the_lamp_of_the_time(stream):
     # The standard deviation of grey levels within regions, the last nine features, falls as the lamp dims.
     spreads = [spread_of_first_families(t) for t in range(6)]
     assert spreads == sorted(spreads, reverse=True) and spreads[5] < 0.9 * spreads[0]
+
+
+def test_the_deliveries_as_files(tmp_path):
+    paths = write_deliveries(tmp_path / "new" / "yard", seed=3)
+    stream = salvage_yard_stream(3)
+    assert sorted(path.name for path in paths) == sorted(path.name for path in (tmp_path / "new" / "yard").iterdir())
+    for t in range(6):
+        for name, expected in (("delivery", stream.training(t)), ("inspected", stream.selection(t))):
+            increment = read_increment(tmp_path / "new" / "yard" / f"{name}{t + 1}.npz")
+            np.testing.assert_array_equal(increment.X, expected.X)
+            np.testing.assert_array_equal(increment.y, expected.y)
+    with pytest.raises(InputError, match="must be a folder"):
+        write_deliveries(paths[0], seed=3)

@@ -32,7 +32,7 @@ def device_page(document):
     page = Page(f"Device {document['device']}", (
         f"{len(history)} updates{': ' * bool(counts)}{counts}; it knows {len(document['classes'])} classes and holds "
         f"{document['exemplars']} exemplars and {document['check_rows']} check rows."))
-    page.facts({**{name.replace("_", " "): value for name, value in document["plan"].items()},
+    page.facts({**{name.replace("_", " "): value for name, value in document["plan"].items() if value is not None},
                 "features": document["features"], "acceptance rows": document["acceptance_rows"],
                 "floors": ", ".join(f"{one['class']} {one['floor']:.0%}" for one in document["floors"]) or "none",
                 "forecaster": f"pinned, {document['pinned'][:16]}" if document["pinned"] else "not pinned",

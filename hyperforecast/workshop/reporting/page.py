@@ -63,6 +63,7 @@ footer { margin-top: 3rem; border-top: 1px solid var(--rule); color: var(--soft)
 @page { size: A4; margin: 12mm 10mm; }
 @media print { :root { font-size: 10pt; } body { max-width: none; padding: 0; } nav { display: none; }
   h2 { break-after: avoid; } .scroll { overflow: visible; } tr { break-inside: avoid; } a { color: inherit; }
+  caption, thead, tbody tr:first-child { break-after: avoid; } tbody tr:last-child { break-before: avoid; }
   table { font-size: .8rem; } th, td { padding: .2rem .35rem; } .panels { grid-template-columns: 1fr 1fr; }
   footer { margin-top: 1rem; }
   .sheet { font-size: .92rem; line-height: 1.35; } .sheet header { margin-bottom: .5rem; }

@@ -3,6 +3,7 @@
 import numpy as np
 
 from hyperforecast.checks import InputError
+from hyperforecast.forecasting import Preferences
 from hyperforecast.workshop.reporting.charts import change_chart, interval_chart
 from hyperforecast.workshop.reporting.page import Page, plain, shown
 
@@ -99,7 +100,8 @@ def _arrived(document):
     facts = {"when": f"{when(entry['time'])}, in {shown(entry['seconds'])} s", "rows": entry["rows"],
              "new classes": _named(entry["classes_new"]), "known classes again": _named(entry["classes_again"]),
              "classes known before": entry["classes_old"],
-             "plan": ", ".join(f"{name.replace('_', ' ')} {value}" for name, value in plan.items())}
+             "plan": ", ".join(f"{name.replace('_', ' ')} {value}" for name, value in plan.items()
+                               if value is not None)}
     if entry["forecaster"]:
         facts["forecaster"] = f"{entry['forecaster'][:16]}, version {entry.get('forecaster_version') or 'unknown'}"
     return facts
@@ -138,7 +140,12 @@ def _advised(page, entry):
             "the records know boundaries like this one." if familiarity["familiar"]
             else "not familiar, few records lie this far out; the advice is a guess.")
             + f" Probability of divergence {advice['divergence']:.3f}.")
+        cared = ", ".join(f"{name.replace('_', ' ')} {shown(value)}" for name, value in
+                          entry.get("preferences", {}).items() if value != getattr(Preferences(), name, None))
+        points += [f"Preferences: {cared}."] if cared else []
         points += [f"{reason}." for reason in advice["reasons"] or ["No descriptor moved the advice from the usual"]]
+    if entry.get("limits"):
+        points += [f"Given up: {_cut(one, LONGEST_TEXT)}." for one in entry["limits"]["given_up"]]
     page.items(points)
 
 

@@ -9,9 +9,13 @@ Read from the bottom: `salvage_yard_stream` deals the parts, `part_features` is 
 `draw_parts` poses, wears and lights the shapes that the small functions at the top define.
 """
 
+import io
+from pathlib import Path
+
 import numpy as np
 
-from hyperforecast.checks import check_choice, check_number, check_whole
+from hyperforecast.checks import InputError, check_choice, check_number, check_whole
+from hyperforecast.storage import write_atomically
 from hyperforecast.workshop.streams.stream import Collection, Stream, generator
 
 SIDE = 32
@@ -440,6 +444,38 @@ def salvage_yard_stream(seed):
         return part_features(_light(X.reshape(-1, 2, SIDE, SIDE), lamp_age_at(t), rng))
 
     return Stream(parts, DELIVERIES, name="salvage yard", source="salvage yard", seed=seed, sensor=camera)
+
+
+def write_deliveries(folder, *, seed):
+    """Write the scenario as files, for the commands of a device; return their paths.
+
+    delivery1.npz to delivery6.npz hold what arrives, inspected1.npz to inspected6.npz parts of all families so far that
+    were sorted by hand, seen under the lamp of that day, which no delivery brings. Each holds X (n, 90) and y (n,).
+
+    Parameters
+    ----------
+    folder : str or Path
+        Made if it does not exist.
+    seed : int, 0 or more
+        As of `salvage_yard_stream`.
+
+    Raises
+    ------
+    InputError
+        If a file cannot be written.
+    """
+    folder, stream, paths = Path(folder), salvage_yard_stream(seed), []
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise InputError(folder, "must be a folder, or the name of a new one", error.strerror) from None
+    for t in range(stream.n_boundaries):
+        for name, increment in (("delivery", stream.training(t)), ("inspected", stream.selection(t))):
+            written = io.BytesIO()
+            np.savez(written, X=increment.X, y=increment.y)
+            paths.append(folder / f"{name}{t + 1}.npz")
+            write_atomically(paths[-1], written.getvalue())
+    return paths
 
 
 def delivery_pictures(t, n, *, seed):
