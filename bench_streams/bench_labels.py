@@ -2,7 +2,7 @@
 
     OPENBLAS_NUM_THREADS=1 python bench_streams/bench_labels.py [--json]
 
-From each open set 1500 rows (or all, if there are fewer) with 5% of their labels changed to another class at random;
+From each open set 1500 rows (or all, if there are fewer) with 5% of their labels changed to another class, at random;
 "at once" judges them as one increment, "third increment" deals the classes into three increments, lets a device learn
 the first two (right labels) and judges the third beside the rows that the device holds, its labels changed to those of
 other classes of the increment or of old ones. Ten draws each. Precision: share of rows found that are wrong; recall:

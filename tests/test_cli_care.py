@@ -15,7 +15,7 @@ NAMES = np.array(["nut", "bolt", "hook", "ring", "pin", "clip"])
 def files(tmp_path):
     """Files of three increments of Gaussian classes, and judged rows of all classes."""
     rng = np.random.default_rng(0)
-    centers = rng.normal(size=(6, 8)) * 2
+    centers = rng.normal(size=(6, 8)) * 6
     paths = []
     for name, codes in (("a", [0, 1]), ("b", [2, 3]), ("c", [4, 5]), ("judged", range(6))):
         y = np.repeat(codes, 30)
@@ -114,3 +114,20 @@ def test_classes_are_listed_and_looked_after(capsys, device):
     assert steps == ["floor", "renamed", "merged", "retired", "erased"]
     assert "knows crane hook" in refused(capsys, "classes", "--device", device, "--retire", "nut")
     assert "--floor" in refused(capsys, "classes", "--device", device, "--floor", "crane hook", "high")
+
+
+def test_doubtful_names_and_labels_are_told_before_anything_is_learned(capsys, device, files, tmp_path):
+    with np.load(files[2], allow_pickle=False) as file:
+        X, y = file["X"], np.where(file["y"] == "pin", "Hook ", file["y"])
+    y[:3] = "nut"
+    np.savez(tmp_path / "doubtful.npz", X=X, y=y)
+    told = run(capsys, "check", "--increment", str(tmp_path / "doubtful.npz"), "--device", device)
+    assert told["similar_names"] == [["hook", "Hook "]]
+    assert {0, 1, 2} <= {one["row"] for one in told["suspicious"]["rows"]}
+    assert main(["check", "--increment", str(tmp_path / "doubtful.npz")]) == 0
+    assert "labels looked at are more likely wrong" in capsys.readouterr().out
+    for command in ("advise", "update"):
+        assert main([command, "--increment", str(tmp_path / "doubtful.npz"), "--device", device]) in (0, 3)
+        text = capsys.readouterr().out
+        assert "Doubtful: class Hook  is new" in text and "Doubtful: 3 of" in text
+    assert len(run(capsys, "history", "--device", device)["updates"][-1]["doubts"]) == 2

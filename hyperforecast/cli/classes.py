@@ -1,7 +1,10 @@
-"""Commands for the classes of a device: classes."""
+"""Commands for classes: those of a device, and those of an increment before it is learned."""
 
 from hyperforecast.checks import InputError
 from hyperforecast.cli.text import number, say, table
+
+# Suspicious rows in the table for people.
+MOST_SHOWN = 20
 
 
 def add_commands(command):
@@ -17,6 +20,36 @@ def add_commands(command):
                         help="predict it no longer and free its exemplars; it may come again")
     change.add_argument("--erase", metavar="NAME",
                         help="leave no trace of it in the folder's files; cannot be rolled back")
+
+    check = command("check", _check, "Doubt the labels of an increment before it is learned; nothing is changed.")
+    check.add_argument("--increment", required=True, metavar="FILE", help=".npz, .npy, .csv or .parquet")
+    check.add_argument("--device", metavar="DIR", help="judge it beside the classes and rows that a device holds")
+
+
+def _check(options):
+    from hyperforecast.describing import similar_names, suspicious_labels
+    from hyperforecast.device import DeviceFolder
+    from hyperforecast.increments import check_labels_kind, read_increment
+
+    carryover = None if options.device is None else DeviceFolder(options.device).read().carryover
+    increment = read_increment(options.increment, n_features=carryover and carryover.n_features)
+    known = []
+    if carryover is not None:
+        check_labels_kind(increment.y, carryover.classes)
+        known = carryover.classes.tolist()
+    names = similar_names(sorted(set(increment.y.tolist())), known)
+    found = suspicious_labels(increment, carryover)
+    lines = [f"class {new} is new and its name looks like that of class {other}" for other, new in names]
+    lines.append(f"{len(found)} of {found.looked_at} labels looked at are more likely wrong than right; nothing is "
+                 f"said about {len(increment) - found.looked_at} rows of very small classes.")
+    told = found.as_dict()
+    if len(found):
+        rows = [(one["row"], one["label"], one["likelier"], f"{one['probability']:.2f}")
+                for one in told["rows"][:MOST_SHOWN]]
+        lines.append(table(("row", "label", "more like", "probably wrong"), rows))
+    if len(found) > MOST_SHOWN:
+        lines.append(f"and {len(found) - MOST_SHOWN} more, with --json")
+    say(options, {"similar_names": [list(pair) for pair in names], "suspicious": told}, lines)
 
 
 def _classes(options):

@@ -82,14 +82,16 @@ def _advise(options):
 
 
 def _with_timing(options):
-    """Return the advice, and whether to update now as a dict and as lines."""
+    """Return the advice, and what is doubtful and whether to update now as a dict and as lines."""
     from hyperforecast.device import when
     from hyperforecast.forecasting import retraining_signs
 
     increment, report = _dry_run(options)
     timing = when(report.advice, increment, report.carryover.classes, **least_gain(options))
     signs = retraining_signs(report.advice)
-    return report.advice, {"waiting": timing.as_dict(), "retrain": signs}, when_lines(timing, signs)
+    doubts = report.entry["doubts"]
+    return (report.advice, {"doubts": doubts, "waiting": timing.as_dict(), "retrain": signs},
+            [*doubt_lines(doubts), *when_lines(timing, signs)])
 
 
 def _print_schema(name):
@@ -173,6 +175,11 @@ def _update(options):
     return report.status or 0
 
 
+def doubt_lines(doubts):
+    """Lines of what is doubtful about an increment."""
+    return [f"Doubtful: {doubt}" for doubt in doubts]
+
+
 def overruled_lines(entry):
     """Lines that say who overruled the advice of a history entry, why, and what was advised; none if it stood."""
     told = entry["overruled"]
@@ -214,7 +221,8 @@ def limits_lines(entry):
 
 def _update_lines(report):
     entry = report.entry
-    lines = [] if report.advice is None else _advice_lines(report.advice)[:-1]
+    lines = doubt_lines(entry["doubts"])
+    lines += [] if report.advice is None else _advice_lines(report.advice)[:-1]
     lines += overruled_lines(entry)
     lines += limits_lines(entry)
     if report.status is None:

@@ -1,4 +1,4 @@
-"""Doubts about the labels of an increment, before anything is learned: names that look alike, rows that look mislabelled.
+"""Doubts about the labels of an increment, before anything is learned: names that look alike, rows of another class.
 
 Both are for a person to look at; nothing is dropped.
 """
@@ -21,7 +21,9 @@ MOST_TOGETHER = 1000
 # Rows of a class below which nothing is said about it.
 FEWEST_ROWS = 4
 # Tried for the steepness of the softmax over regressed values, and for the share of wrong labels.
-STEEPNESS = np.geomspace(0.5, 60, 25)
+STEEPNESS = np.geomspace(0.5, 10, 20)
+# Exponent of the prior of the steepness: where overlap and wrong labels explain rows alike, it takes wrong labels.
+STEEPER = 5
 WRONG_SHARES = (0.0002, 0.0005, 0.001, 0.002, 0.005, 0.01, 0.02, 0.03, 0.05, 0.08, 0.12, 0.2)
 # A label is suspicious if it is more likely wrong than right.
 SUSPICIOUS = 0.5
@@ -57,8 +59,9 @@ class SuspiciousLabels:
     def as_dict(self):
         """Return a JSON-able dict."""
         columns = (self.rows, self.given, self.likelier, self.probability)
-        return {"looked_at": self.looked_at, "rows": [
-            dict(zip(("row", "label", "likelier", "probability"), one)) for one in zip(*map(np.ndarray.tolist, columns))]}
+        rows = zip(*map(np.ndarray.tolist, columns))
+        return {"looked_at": self.looked_at,
+                "rows": [dict(zip(("row", "label", "likelier", "probability"), one)) for one in rows]}
 
 
 def suspicious_labels(increment, carryover=None, *, most_rows=None, seed=0):
@@ -81,8 +84,9 @@ def suspicious_labels(increment, carryover=None, *, most_rows=None, seed=0):
     residual of linear smoothers, Hastie, Tibshirani & Friedman 2009, section 7.10, from memory). A softmax over the
     values, of steepness s, gives p_c, the probability of class c given the row. Let a share e of the labels be wrong,
     uniformly over the K - 1 other classes: the label y is seen with probability (1 - e) p_y + e (1 - p_y) / (K - 1).
-    s, e and the kernel's length maximize the likelihood; the probability that a label is wrong is then the second term's share (Bayes). So
-    a set without wrong labels has an e near zero and raises few doubts, however hard its classes are to tell apart.
+    s, e and the kernel's length maximize the likelihood times s^5, a prior that decides where overlap of the classes and
+    wrong labels explain the rows alike; the probability that a label is wrong is then the second term's share (Bayes).
+    A set without wrong labels has an e near zero and raises few doubts, however hard its classes are to tell apart.
     """
     rng = np.random.default_rng([seed, 0x6C61])
     chosen = rng.permutation(len(increment))[:most_rows]
@@ -139,7 +143,7 @@ def _left_out(Z, y, trusted, n_classes):
 
 
 def _fitted(values, y):
-    """The best mean log-likelihood over steepness and share of wrong labels, and each label's probability to be wrong."""
+    """The best log-posterior over steepness and share of wrong labels, and each label's probability to be wrong."""
     values = values - values.max(axis=1, keepdims=True)
     share = np.array(WRONG_SHARES)[:, None]
     best, wrong = -np.inf, None
@@ -148,10 +152,10 @@ def _fitted(values, y):
         own = p[np.arange(len(y)), y] / p.sum(axis=1)
         by_mistake = share * (1 - own) / (values.shape[1] - 1)
         seen = (1 - share) * own + by_mistake
-        likelihood = np.log(seen).mean(axis=1)
-        k = likelihood.argmax()
-        if likelihood[k] > best:
-            best, wrong = likelihood[k], by_mistake[k] / seen[k]
+        posterior = np.log(seen).sum(axis=1) + STEEPER * np.log(steepness)
+        k = posterior.argmax()
+        if posterior[k] > best:
+            best, wrong = posterior[k], by_mistake[k] / seen[k]
     return best, wrong
 
 

@@ -7,6 +7,7 @@ An entry of the history, a JSON-able dict, tells of one update:
     rows, classes_old       rows of the increment, and how many classes were known before
     classes_new             labels that were new
     classes_again           labels of the increment that were known before
+    doubts                  in words: names and labels of the increment that look wrong; nothing follows from them here
     descriptors             by name; null where one could not be had
     advice                  settings, expected accuracies with intervals, divergence, familiarity, and reasons in words;
                             null at the first update
@@ -46,6 +47,7 @@ import numpy as np
 from hyperforecast.checks import InputError, check_number, check_whole
 from hyperforecast.describing import describe
 from hyperforecast.device.care import Care
+from hyperforecast.device.doubts import quick_doubts
 from hyperforecast.device.folder import DeviceFolder
 from hyperforecast.device.limits import Stopwatch, allowance, calibrated_speed, measured_speed
 from hyperforecast.device.pin import forecaster_for
@@ -225,8 +227,8 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         entry = {
             "number": history[-1]["number"] + 1 if history else 1,
             "time": datetime.now(UTC).isoformat(timespec="seconds"), "device": _identity(history),
-            **_arrived(boundary, increment), **_advised(advice),
-            "preferences": preferences.as_dict(), "overruled": overruled,
+            **_arrived(boundary, increment), "doubts": quick_doubts(increment, boundary.carryover, seed=seed),
+            **_advised(advice), "preferences": preferences.as_dict(), "overruled": overruled,
             **(tries[-1] if tries else {"settings": candidates[0].as_dict()}), "earlier_tries": tries[:-1],
             "kept": bool(tries) and not tries[-1]["reasons"],
             "limits": allowed and allowed.as_dict(), "seconds": round(watch.spent, 4),
