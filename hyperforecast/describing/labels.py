@@ -84,8 +84,8 @@ def suspicious_labels(increment, carryover=None, *, most_rows=None, seed=0):
     residual of linear smoothers, Hastie, Tibshirani & Friedman 2009, section 7.10, from memory). A softmax over the
     values, of steepness s, gives p_c, the probability of class c given the row. Let a share e of the labels be wrong,
     uniformly over the K - 1 other classes: the label y is seen with probability (1 - e) p_y + e (1 - p_y) / (K - 1).
-    s, e and the kernel's length maximize the likelihood times s^5, a prior that decides where overlap of the classes and
-    wrong labels explain the rows alike; the probability that a label is wrong is then the second term's share (Bayes).
+    s, e and the kernel's length maximize the likelihood times s^5, a prior that decides where overlap of the classes
+    and wrong labels explain the rows alike; the probability of a wrong label is then the second term's share (Bayes).
     A set without wrong labels has an e near zero and raises few doubts, however hard its classes are to tell apart.
     """
     rng = np.random.default_rng([seed, 0x6C61])

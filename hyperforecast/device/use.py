@@ -211,8 +211,7 @@ def roll_back(folder, *, because=None):
     It is a generation of its own: the history stays, the updates that were undone get `undone`, the time, and the step
     is written down. What was undone is the generation before now, so that going back once more brings it back. Floors,
     the acceptance set and the pinned forecaster stay as they are; only where classes had been merged, renamed or
-    retired since they, too, go
-    back. A damaged generation is passed over and removed.
+    retired since they, too, go back. A damaged generation is passed over and removed.
 
     Raises
     ------

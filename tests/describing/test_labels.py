@@ -97,8 +97,8 @@ def test_a_sample_and_groups_are_drawn_from_the_whole():
 
 
 @pytest.mark.parametrize("a, b", [
-    ("Hex-nut", "hex nut "), ("hex_nut", "HEXNUT"), ("Scha\u0308kel", "Schäkel"), ("bolts", "bolt s"), ("washer", "washers"),
-    ("wahser", "washer"), ("washer", "waher"), ("washer", "wascher"), ("clamp 2", "Clamp-2"), ("ﬁtting", "fitting")])
+    ("Hex-nut", "hex nut "), ("hex_nut", "HEXNUT"), ("Scha\u0308kel", "Schäkel"), ("bolts", "bolt s"),
+    ("washer", "washers"), ("wahser", "washer"), ("washer", "waher"), ("washer", "wascher"), ("clamp 2", "Clamp-2"), ("ﬁtting", "fitting")])
 def test_names_that_look_like_one(a, b):
     assert similar_names([b], [a]) == [(a, b)] and len(similar_names([a, b])) == 1
 
