@@ -7,11 +7,11 @@ take more than HELD_BYTES stay in their file, as `hyperforecast.rows.FileRows`;
 of a deflated .npz, in a temporary file.
 """
 
-import csv
 import io
 import math
 import shutil
 import struct
+import sys
 import tempfile
 import zipfile
 from dataclasses import dataclass
@@ -72,7 +72,7 @@ def check_features(X, *, name="X", n_features=None):
         X = X if isinstance(X, (np.ndarray, FileRows)) else np.asarray(X)
     except ValueError:
         raise InputError(name, "must be a table of numbers, every row of the same length", "ragged rows") from None
-    if isinstance(X, np.ma.MaskedArray) and np.ma.is_masked(X):
+    if _is_masked(X):
         raise InputError(name, "must hold no masked values", "a masked array", "drop or mend such rows")
     if X.dtype.kind == "O":
         try:
@@ -107,9 +107,14 @@ def check_features(X, *, name="X", n_features=None):
     return X if isinstance(X, (np.memmap, FileRows)) else X.astype(np.float32, copy=False)
 
 
+def _is_masked(values):
+    # Without the import nobody can have made a masked array; it takes long.
+    return "numpy.ma" in sys.modules and np.ma.is_masked(values)
+
+
 def check_labels(y, n_rows, *, name="y"):
     """Return labels as an int64 or text array of shape (n_rows,), or raise `InputError`."""
-    if np.ma.is_masked(y):
+    if _is_masked(y):
         raise InputError(name, "must hold no masked values", "a masked array", "drop or mend such rows")
     try:
         y = np.asarray(y)
@@ -277,6 +282,8 @@ def _read_npy_pair(path, labelled):
 
 
 def _read_csv(path, labelled):
+    import csv
+
     if path.stat().st_size > LARGEST_TEXT_FILE:
         raise InputError(path, f"must hold at most {LARGEST_TEXT_FILE} bytes", path.stat().st_size, "use .npy")
     features, labels = [], []

@@ -16,7 +16,6 @@ import re
 import stat
 import struct
 import tokenize
-import uuid
 import warnings
 import zipfile
 import zlib
@@ -33,6 +32,8 @@ LARGEST_MANIFEST = 16 * 2**20
 LARGEST_ARRAY = 2**31
 ARRAY_NAME = re.compile(r"[A-Za-z0-9_]{1,80}")
 ARRAY_TYPE = re.compile(r"[<>|][biufU][1-9][0-9]{0,5}")
+# Begins the line of a manifest that tells its checksum: no other key stands so far to the left.
+SEAL = b'\n "sha256": "'
 MOST_DIMENSIONS = 32
 # numpy's own limit, as every product of sides (those of no length aside) must fit a pointer.
 MOST_BYTES = 2**62
@@ -71,7 +72,7 @@ def write_atomically(path, data):
     """Write bytes to `path` by way of a temporary name, fsync and one rename; `InputError` if it cannot be written."""
     path = Path(path)
     try:
-        partial = path.with_name(f".{path.name}.{uuid.uuid4().hex[:8]}.partial")
+        partial = path.with_name(f".{path.name}.{os.urandom(4).hex()}.partial")
         try:
             with open(partial, "wb") as file:
                 file.write(data)
@@ -266,8 +267,10 @@ def _check_manifest(path, data, kind, newest):
         raise InputError(path, f"must be a {kind} manifest", "other content")
     if document["kind"] != kind:
         raise InputError(path, f"must be a {kind}", repr(document["kind"]))
-    body = {key: document[key] for key in ("kind", "version", "facts", "arrays")}
-    if checksum(dump_json(body)) != document["sha256"] or dump_json(document) != data:
+    # The checksum is that of the canonical JSON without the line that tells it. Only text with escapes could be written
+    # in several ways, and is written again to see; that takes long.
+    before, _, rest = data.rpartition(SEAL)
+    if checksum(before + rest[66:]) != document["sha256"] or b"\\u" in data and dump_json(document) != data:
         raise InputError(path, "must match its checksum", "altered content", "copy it again from the source")
     # Undamaged from here on, but perhaps made by somebody who means harm.
     version = document["version"]
@@ -278,6 +281,16 @@ def _check_manifest(path, data, kind, newest):
         if not ARRAY_NAME.fullmatch(name) or not _is_array_entry(entry):
             raise InputError(path, "must list arrays by a plain name, with checksum, type and shape", repr(name))
     return document
+
+
+def _plain_array(data, dtype, shape):
+    """Return the array in .npy bytes whose header is written as `array_bytes` does, else None; much quicker than numpy."""
+    start = 10 + int.from_bytes(data[8:10], "little")
+    header = f"{{'descr': {dtype.str!r}, 'fortran_order': False, 'shape': {shape!r}, }}".encode()
+    if data[:8] != b"\x93NUMPY\x01\x00" or data[10:start].rstrip(b" \n") != header or 0 in shape \
+            or len(data) != start + math.prod(shape) * dtype.itemsize:
+        return None
+    return np.frombuffer(data, dtype, offset=start).reshape(shape).copy()
 
 
 def _is_array_entry(entry):
@@ -296,6 +309,9 @@ def _read_bundle(path, kind, newest, read_member):
         if checksum(data) != entry["sha256"]:
             raise InputError(path, f"must match its checksums ({name}.npy)", "altered content",
                              "copy it again from the source")
+        arrays[name] = _plain_array(data, dtype, shape)
+        if arrays[name] is not None:
+            continue
         arrays[name] = parse_array(f"{path} ({name}.npy)", data)
         if arrays[name].dtype != dtype or arrays[name].shape != shape:
             raise InputError(f"{path} ({name}.npy)", "must have the type and shape that the manifest says",

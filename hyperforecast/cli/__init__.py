@@ -27,8 +27,8 @@ INTERRUPTED = 130
 
 def main(arguments=None):
     """Run a command; return its exit code."""
-    parser = _parser()
-    options = parser.parse_args(arguments)
+    arguments = sys.argv[1:] if arguments is None else arguments
+    options = _parser(arguments[:1]).parse_args(arguments)
     try:
         return options.run(options) or 0
     except InputError as error:
@@ -48,12 +48,25 @@ class _Parser(argparse.ArgumentParser):
         self.exit(BAD_INPUT, f"{self.prog}: {message}; see {self.prog} --help\n")
 
 
-def _parser():
+class _Nothing:
+    """Takes the options of a command that is not asked for."""
+
+    def __getattr__(self, _):
+        return self
+
+    def __call__(self, *_, **__):
+        return self
+
+
+def _parser(wanted):
+    """Return a parser of the one command in `wanted`, of all if there is none of that name: options take long to add."""
     parser = _Parser(prog="hyperforecast", description="Settings for class-incremental learning on small devices, "
                      "advised at once from a forecaster, without a trial run.", epilog=CAUTION)
     commands = parser.add_subparsers(dest="command", required=True, metavar="COMMAND", parser_class=_Parser)
 
     def command(name, run, summary):
+        if wanted and name not in wanted:
+            return _Nothing()
         sub = commands.add_parser(name, help=summary, description=summary)
         sub.set_defaults(run=run)
         sub.add_argument("--json", action="store_true", help="write the result as JSON")
@@ -65,4 +78,4 @@ def _parser():
     classes.add_commands(command)
     trust.add_commands(command)
     base.add_commands(command)
-    return parser
+    return parser if commands.choices or not wanted else _parser([])

@@ -3,6 +3,7 @@
 import numpy as np
 
 from hyperforecast.describing.registry import descriptor
+from hyperforecast.describing.view import median
 
 
 @descriptor("data")
@@ -32,7 +33,7 @@ def rows(view):
 @descriptor("data")
 def rows_per_class(view):
     """Median over the increment's classes of their training rows. Unit: rows."""
-    return np.median(view.class_counts)
+    return median(view.class_counts)
 
 
 @descriptor("data")
@@ -73,7 +74,7 @@ def tail_weight(view):
     centered = view.sample[0] - view.sample[0].mean(axis=0)
     variance = (centered**2).mean(axis=0)
     varies = variance > 1e-6
-    return np.median((centered[:, varies] ** 4).mean(axis=0) / variance[varies] ** 2) if varies.any() else np.nan
+    return median((centered[:, varies] ** 4).mean(axis=0) / variance[varies] ** 2) if varies.any() else np.nan
 
 
 @descriptor("data")

@@ -4,7 +4,7 @@ from functools import cached_property
 
 import numpy as np
 
-from hyperforecast.learning import accuracies
+from hyperforecast.learning import accuracies, present_codes
 
 # Costly descriptors work on at most this many rows of the increment, and as many old ones.
 MOST_ROWS = 500
@@ -110,7 +110,7 @@ class BoundaryView:
     @cached_property
     def arrived(self):
         """Codes of the classes in the sample, sorted."""
-        return np.unique(self.sample[1])
+        return present_codes(self.sample[1])
 
     @cached_property
     def sample_counts(self):
@@ -160,7 +160,7 @@ class BoundaryView:
     @cached_property
     def old_means(self):
         """Means (O, d) of the old classes that did not come again."""
-        stays = np.setdiff1d(np.arange(self.boundary.n_old), self.arrived)
+        stays = np.setdiff1d(np.arange(self.boundary.n_old), self.arrived, assume_unique=True)
         return self.summaries.mean[stays]
 
     @cached_property
@@ -183,7 +183,7 @@ class BoundaryView:
         np.add.at(inside, self.own_place, (self.sample[0] - self.means[self.own_place]) ** 2)
         means = self.means
         if self.summaries is not None:
-            stays = np.setdiff1d(np.arange(self.boundary.n_old), self.arrived)
+            stays = np.setdiff1d(np.arange(self.boundary.n_old), self.arrived, assume_unique=True)
             old = self.summaries
             counts = np.concatenate([counts, old.count[stays]])
             inside = np.concatenate([inside, old.variance[stays] * old.count[stays, None]]).astype(np.float32)
@@ -261,6 +261,11 @@ def _mean_hits(hits, place, is_old):
         return (np.bincount(place[rows], hits[rows])[count > 0] / count[count > 0]).mean() if rows.any() else np.nan
 
     return mean(~is_old), mean(is_old)
+
+
+def median(values):
+    """Return the median of values (n,), n > 0, none of them NaN: np.median, which would import numpy.ma, bit for bit."""
+    return np.sort(values)[(len(values) - 1) // 2:len(values) // 2 + 1].mean()
 
 
 def squared_distances(A, B):

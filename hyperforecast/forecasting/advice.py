@@ -156,9 +156,10 @@ def explain(forecaster, descriptors, box, *, preferences=Preferences(), count=3)
     """
     points = lattice(SPREAD_OUT, box.n_dimensions)
     settings = box.from_unit(points)
+    near = forecaster.narrowed(descriptors, forecaster.influential[:MOST_EXPLAINED])
 
     def choice(described):
-        return points[int(np.argmax(_smooth(points, _scores(forecaster.at(described), settings, box, preferences))))]
+        return points[int(np.argmax(_smooth(points, _scores(near.at(described), settings, box, preferences))))]
 
     here = choice(descriptors)
     typical = dict(zip(forecaster.descriptor_names, forecaster.typical))
@@ -239,7 +240,7 @@ def _fewest_kept(forecast, best, box, preferences):
     """Return `best` with the fewest exemplars per class whose expected outcome is within tolerance of the best."""
     if best.kept_per_class is None:
         return best
-    kept = np.unique(np.round(np.geomspace(KEPT_PER_CLASS[0], box.most_kept, 24)).astype(int))
+    kept = np.flatnonzero(np.bincount(np.round(np.geomspace(KEPT_PER_CLASS[0], box.most_kept, 24)).astype(int)))
     candidates = [replace(best, kept_per_class=int(k)) for k in kept]
     values = _objective(forecast, candidates, preferences)
     return candidates[int(np.argmax(values >= values.max() - preferences.tolerance))]

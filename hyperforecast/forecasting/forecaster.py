@@ -4,9 +4,9 @@ A forecaster file is a bundle (`hyperforecast.storage`) of kind "forecaster": tr
 """
 
 import os
-from contextlib import nullcontext
 from dataclasses import dataclass
-from importlib import resources
+from importlib import import_module
+from pathlib import Path
 
 import numpy as np
 
@@ -148,6 +148,10 @@ class Forecaster:
         """Return the `BoundaryForecast` for a dict of descriptors."""
         return BoundaryForecast(self, descriptors)
 
+    def narrowed(self, descriptors, names):
+        """Return something whose `at` gives the same, quicker, for descriptors that differ from these in `names` alone."""
+        return _Narrowed(self, descriptors, names)
+
 
 class BoundaryForecast:
     """A forecaster at one boundary: its models with the descriptors filled in, so that only settings are left open.
@@ -156,19 +160,24 @@ class BoundaryForecast:
     ----------
     forecaster : Forecaster
     descriptors : dict of str to float
+    models : mapping of str to TreeEnsemble, optional
+        Those of the forecaster, or what is left of them where only the descriptors in
+    names : sequence of str, optional
+        are left open.
     """
 
-    def __init__(self, forecaster, descriptors):
+    def __init__(self, forecaster, descriptors, *, models=None, names=None):
         self.forecaster, self.descriptors = forecaster, descriptors
-        vector = np.concatenate([forecaster.vector(descriptors), np.zeros(len(COORDINATES))])
-        fixed = np.arange(len(vector)) < len(forecaster.descriptor_names)
-        self._vector, self._fixed = vector, fixed
+        self._models = forecaster.models if models is None else models
+        names = forecaster.descriptor_names if names is None else names
+        self._vector = np.array([*(descriptors.get(name, np.nan) for name in names), *[0.0] * len(COORDINATES)])
+        self._fixed = np.arange(len(self._vector)) < len(names)
         self._scales = {name: descriptors.get(name, np.nan) for name in SCALES}
         self._restricted = {}
 
     def _raw(self, model, coordinates):
         if model not in self._restricted:
-            self._restricted[model] = self.forecaster.models[model].restrict(self._vector, self._fixed)
+            self._restricted[model] = self._models[model].restrict(self._vector, self._fixed)
         return self._restricted[model].predict(coordinates)
 
     def coordinates(self, settings):
@@ -213,6 +222,25 @@ class BoundaryForecast:
         """Return the directly forecast settings as a point (D,) of the unit cube of `box`."""
         none = np.full((1, len(COORDINATES)), np.nan)
         return np.array([self._raw(name, none)[0] for name in box.names])
+
+
+class _Narrowed(dict):
+    """Models of a forecaster, each restricted when first asked for, so that some descriptors only are left open."""
+
+    def __init__(self, forecaster, descriptors, names):
+        super().__init__()
+        self._forecaster = forecaster
+        self._names = [name for name in forecaster.descriptor_names if name in names]
+        self._vector = np.concatenate([forecaster.vector(descriptors), np.zeros(len(COORDINATES))])
+        is_open = [name in names for name in forecaster.descriptor_names] + [True] * len(COORDINATES)
+        self._fixed = ~np.array(is_open)
+
+    def __missing__(self, model):
+        self[model] = self._forecaster.models[model].restrict(self._vector, self._fixed)
+        return self[model]
+
+    def at(self, descriptors):
+        return BoundaryForecast(self._forecaster, descriptors, models=self, names=self._names)
 
 
 def combined(old, new, descriptors):
@@ -269,23 +297,20 @@ def load_forecaster(source):
     InputError
         If the file is missing, damaged, or of another kind or version.
     """
-    with _path_of(source) as path:
-        return _load(path)
+    return _load(_path_of(source))
 
 
 def forecaster_bytes(source):
     """Return the bytes of a forecaster file; `source` and errors as for `load_forecaster`, but for damage."""
-    with _path_of(source) as path:
-        return read_bytes(path, largest=LARGEST_ARRAY)
+    return read_bytes(_path_of(source), largest=LARGEST_ARRAY)
 
 
 def _path_of(source):
-    """Context with the path of a forecaster file."""
     if not isinstance(source, (str, os.PathLike)):
         raise InputError("forecaster", "must be a method or the path of a forecaster file", repr(source))
     if source in METHODS:
-        return resources.as_file(resources.files("hyperforecast.models") / f"{source}.forecaster")
-    return nullcontext(source)
+        return Path(import_module("hyperforecast.models").__path__[0]) / f"{source}.forecaster"
+    return source
 
 
 def _load(path):

@@ -6,7 +6,6 @@ spread as in Lei et al. 2018, "Distribution-Free Predictive Inference for Regres
 
 import itertools
 import math
-from fractions import Fraction
 
 import numpy as np
 
@@ -57,4 +56,7 @@ def _checked_scores(scores):
 
 
 def _checked_alpha(alpha):
+    # Only fitting needs it, and it takes long to import.
+    from fractions import Fraction
+
     return Fraction(check_number("alpha", alpha, low=1e-9, high=1 - 1e-9)).limit_denominator(10**9)

@@ -7,6 +7,8 @@ stored ensemble has no child pointers that could be wrong.
 Letters: N nodes of all trees, S distinct splits, L leaves, T trees, F features, n rows.
 """
 
+from functools import cached_property
+
 import numpy as np
 
 from hyperforecast.checks import InputError
@@ -39,14 +41,12 @@ class TreeEnsemble:
     """
 
     def __init__(self, n_features, feature, threshold, missing, default_left, split, leaf_value):
-        self.n_features = int(n_features)
-        self.feature = feature.astype(np.intp)
-        self.threshold = threshold.astype(np.float64)
-        self.missing = missing.astype(np.intp)
-        self.default_left = default_left.astype(bool)
-        self.split = split.astype(np.intp)
-        self.leaf_value = leaf_value.astype(np.float64)
-        self._connect()
+        # As small as they came: a device that only restricts the ensemble never needs them larger.
+        self.n_features, self.feature, self.missing = int(n_features), _whole(feature), _whole(missing)
+        self.threshold = threshold.astype(np.float64, copy=False)
+        self.default_left = default_left.astype(bool, copy=False)
+        self.split = _whole(split)
+        self.leaf_value = leaf_value.astype(np.float64, copy=False)
 
     @property
     def n_trees(self):
@@ -134,11 +134,12 @@ class TreeEnsemble:
         X = np.asarray(X, np.float64)
         if X.ndim != 2 or X.shape[1] != self.n_features:
             raise InputError("X", f"must be rows of {self.n_features} features", f"shape {X.shape}")
-        scores = np.zeros(len(X))
+        scores, value = np.zeros(len(X)), np.zeros(len(self.split))
+        value[self.split < 0] = self.leaf_value
         for start in range(0, len(X), ROWS_AT_ONCE):
             rows = slice(start, start + ROWS_AT_ONCE)
             for leaves in self._walk(self._decide(X[rows])):
-                scores[rows] += self._value[leaves]  # in LightGBM's order, for the same rounding
+                scores[rows] += value[leaves]  # in LightGBM's order, for the same rounding
         return scores
 
     def restrict(self, vector, fixed):
@@ -162,13 +163,15 @@ class TreeEnsemble:
             raise InputError("vector", f"must have {self.n_features} values", f"shape {vector.shape}")
         if fixed.shape != (self.n_features,) or fixed.dtype != bool:
             raise InputError("fixed", f"must have {self.n_features} boolean values", f"{fixed.dtype}, {fixed.shape}")
-        decided = self._splits[fixed[self.feature[self.split[self._splits]]]]
+        splits = np.flatnonzero(self.split >= 0)
+        decided = splits[fixed[self.feature[self.split[splits]]]]
         goes_left = self._decide(vector[None])[self.split[decided], 0]
         # Each decided split drops itself and one of its subtrees: a run of nodes that follow each other.
-        right, after = self._after[decided + 1], self._after[decided]
+        ends = self._ends
+        right, after = ends[decided + 1], ends[decided]
         dropped = self._coverage(np.where(goes_left, right, decided + 1), np.where(goes_left, after, right)) > 0
         dropped[decided] = True
-        split, leaf_value = self.split[~dropped], self._value[~dropped & (self.split < 0)]
+        split, leaf_value = self.split[~dropped], self.leaf_value[~dropped[self.split < 0]]
         used = np.zeros(len(self.threshold) + 1, bool)
         used[split] = True
         used[-1] = False  # where the leaves' -1 points
@@ -177,27 +180,32 @@ class TreeEnsemble:
         return TreeEnsemble((~fixed).sum(), (np.cumsum(~fixed) - 1)[self.feature[used]], self.threshold[used],
                             self.missing[used], self.default_left[used], split, leaf_value)
 
-    def _connect(self):
-        """Find where each subtree ends, the roots, and each node's children."""
+    @cached_property
+    def _ends(self):
+        """Where the subtree of each node ends, (N,): the place after its last node."""
         n_nodes = len(self.split)
-        leaf = self.split < 0
-        self._splits = np.flatnonzero(~leaf)
-        step = np.where(leaf, -1, 1)
+        step = np.where(self.split < 0, -1, 1)
         level = np.cumsum(step)
         # A subtree that starts at level h ends where the level first reaches h - 1.
         place = np.arange(n_nodes)
         by_level = np.sort(level * n_nodes + place)
-        self._after = by_level[np.searchsorted(by_level, (level - step - 1) * n_nodes + place)] % n_nodes + 1
-        lowest = np.minimum.accumulate(np.minimum(level, 0))
-        ends = np.flatnonzero(np.diff(lowest, prepend=0)) + 1
-        self._roots = np.concatenate([[0], ends[:-1]])
-        self._child = np.stack([place, place], axis=1)  # [right, left]; a leaf leads to itself
-        self._child[self._splits, 0] = self._after[self._splits + 1]
-        self._child[self._splits, 1] = self._splits + 1
-        self._value = np.zeros(n_nodes)
-        self._value[leaf] = self.leaf_value
-        depth = self._coverage(self._splits + 1, self._after[self._splits])
-        self._height = np.maximum.reduceat(depth, self._roots)
+        ends = by_level[np.searchsorted(by_level, (level - step - 1) * n_nodes + place)] % n_nodes + 1
+        return ends.astype(np.int32 if n_nodes < 2**31 else np.int64)
+
+    @cached_property
+    def _roots(self):
+        """Root of each tree, (T,)."""
+        lowest = np.minimum.accumulate(np.minimum(np.cumsum(np.where(self.split < 0, -1, 1)), 0))
+        return np.concatenate([[0], np.flatnonzero(np.diff(lowest, prepend=0))[:-1] + 1])
+
+    @cached_property
+    def _connected(self):
+        """What `_walk` needs: each node's right and left child (N, 2), and the height of each tree (T,)."""
+        splits, place = np.flatnonzero(self.split >= 0), np.arange(len(self.split))
+        child = np.stack([place, place], axis=1)  # a leaf leads to itself
+        child[splits, 0] = self._ends[splits + 1]
+        child[splits, 1] = splits + 1
+        return child, np.maximum.reduceat(self._coverage(splits + 1, self._ends[splits]), self._roots)
 
     def _coverage(self, starts, stops):
         """Return, for each node, how many of the runs [start, stop) hold it."""
@@ -216,11 +224,12 @@ class TreeEnsemble:
     def _walk(self, goes_left):
         """Return the leaf (a node index) that each of n rows reaches in each tree: (T, n)."""
         n_rows = goes_left.shape[1]
-        tallest_first = np.argsort(-self._height, kind="stable")
-        taller = -self._height[tallest_first]
+        child, height = self._connected
+        tallest_first = np.argsort(-height, kind="stable")
+        taller = -height[tallest_first]
         nodes = np.repeat(self._roots[tallest_first][:, None], n_rows, axis=1)
-        decisions, child, rows = goes_left.ravel(), self._child.ravel(), np.arange(n_rows)
-        first_decision = np.maximum(self.split, 0) * n_rows
+        decisions, child, rows = goes_left.ravel(), child.ravel(), np.arange(n_rows)
+        first_decision = np.maximum(self.split, 0).astype(np.intp) * n_rows
         for level in range(-taller[0]):
             active = nodes[:np.searchsorted(taller, -level)]  # trees with nodes below this level
             sides = decisions.take(first_decision.take(active) + rows)
@@ -228,3 +237,7 @@ class TreeEnsemble:
         leaves = np.empty_like(nodes)
         leaves[tallest_first] = nodes
         return leaves
+
+
+def _whole(values):
+    return values if values.dtype.kind in "iu" else values.astype(np.intp)

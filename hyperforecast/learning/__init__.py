@@ -4,7 +4,7 @@ from hyperforecast.learning.attempts import (
     CHUNK_ROWS, accuracies, class_probabilities, close_boundary, predict_codes, try_settings,
 )
 from hyperforecast.learning.boundary import (
-    Boundary, Carryover, ClassSummaries, boundary_seed, class_limits, open_boundary, standardize,
+    Boundary, Carryover, ClassSummaries, boundary_seed, class_limits, open_boundary, present_codes, standardize,
 )
 from hyperforecast.learning.class_care import merge_classes, rename_class, without_class
 from hyperforecast.learning.exemplars import Exemplars, choose_exemplars, herd, unit_rows
@@ -14,6 +14,6 @@ from hyperforecast.learning.trainer import Attempt, HeadTrainer, Job, Trainer, a
 __all__ = [
     "Attempt", "Boundary", "CHUNK_ROWS", "Carryover", "ClassSummaries", "Exemplars", "HeadTrainer", "Job", "Trainer",
     "accuracies", "align_weights", "boundary_seed", "choose_exemplars", "class_limits", "class_probabilities",
-    "close_boundary", "distillation", "herd", "merge_classes", "open_boundary", "predict_codes", "rename_class",
-    "standardize", "try_settings", "unit_rows", "without_class",
+    "close_boundary", "distillation", "herd", "merge_classes", "open_boundary", "predict_codes", "present_codes",
+    "rename_class", "standardize", "try_settings", "unit_rows", "without_class",
 ]

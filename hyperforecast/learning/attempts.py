@@ -4,7 +4,7 @@ from dataclasses import replace
 
 import numpy as np
 
-from hyperforecast.learning.boundary import Carryover, ClassSummaries
+from hyperforecast.learning.boundary import Carryover, ClassSummaries, present_codes
 from hyperforecast.learning.exemplars import Exemplars, choose_exemplars
 from hyperforecast.learning.trainer import Job
 from hyperforecast.metrics import class_accuracies
@@ -41,7 +41,7 @@ def accuracies(trainer, head, Z, y, n_classes):
     """Return the accuracy on each class's rows, shape (n_classes,); NaN for a class without rows."""
     by_class = np.full(n_classes, np.nan)
     if len(y):
-        by_class[np.unique(y)] = class_accuracies(y, predict_codes(trainer, head, Z))
+        by_class[present_codes(y)] = class_accuracies(y, predict_codes(trainer, head, Z))
     return by_class
 
 

@@ -38,7 +38,7 @@ class ClassSummaries:
         mean, variance = (np.zeros((n_classes, n_features), np.float32) for _ in range(2))
         n_old = len(self.count)
         count[:n_old], mean[:n_old], variance[:n_old] = self.count, self.mean, self.variance
-        for code in np.unique(y):
+        for code in present_codes(y):
             rows = Z[y == code].astype(np.float64)
             n, m, v = len(rows), rows.mean(axis=0), rows.var(axis=0)
             total = count[code] + n
@@ -93,6 +93,14 @@ class Carryover:
     def standardized(self, X):
         """Return features X (n, d) as this device's head sees them, float32."""
         return standardize(X, self.center, self.scale)
+
+
+def present_codes(y):
+    """Return the class codes that occur in y (n,), sorted, int64.
+
+    As `np.unique`, which would import numpy.ma: a fifth of what numpy itself takes to import.
+    """
+    return np.flatnonzero(np.bincount(y))
 
 
 def standardize(X, center, scale):
@@ -207,7 +215,7 @@ class Boundary:
     @property
     def arrived(self):
         """Codes of the classes in the increment, sorted, int64."""
-        return np.unique(self.y)
+        return present_codes(self.y)
 
     @property
     def old_exemplars(self):

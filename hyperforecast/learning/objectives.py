@@ -60,7 +60,7 @@ class Objective:
             self.left_out = np.full(n_classes, LEFT_OUT)
             self.left_out[arrived] = 0
         # iCaRL's old classes without new rows follow the old model; the others follow the labels.
-        self.followed = np.setdiff1d(np.arange(n_old), arrived)
+        self.followed = np.setdiff1d(np.arange(n_old), arrived, assume_unique=True)
 
     @property
     def distils(self):

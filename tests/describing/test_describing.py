@@ -7,6 +7,7 @@ import numpy as np
 import pytest
 
 from hyperforecast.describing import DESCRIPTORS, GROUPS, describe
+from hyperforecast.describing.view import median
 from hyperforecast.increments import Increment
 from hyperforecast.learning import Exemplars, HeadTrainer, close_boundary, open_boundary, try_settings
 from hyperforecast.settings import METHODS, SCALES, Plan, Settings
@@ -188,3 +189,11 @@ def test_the_seed_matters_only_where_rows_are_drawn():
         "curvature_new", "curvature_exemplars", "anchor_curvature", "log_curvature_ratio"}
     assert drawing <= drawn_at_random | {
         name for name in one if one[name] == pytest.approx(other[name], rel=1e-5)}
+
+
+@pytest.mark.parametrize("dtype", [np.int64, np.float32])
+@pytest.mark.parametrize("n", [1, 2, 3, 50, 51])
+def test_medians_are_numpys_bit_for_bit(n, dtype):
+    values = (np.random.default_rng(n).standard_normal(n) * 100).astype(dtype)
+    ours, theirs = median(values), np.median(values)
+    assert ours.dtype == theirs.dtype and ours.tobytes() == theirs.tobytes()

@@ -209,6 +209,19 @@ def test_a_boundary_forecast_reads_what_the_trees_read(forecaster, here):
     np.testing.assert_allclose(at.divergence(settings), odds / (1 + odds), rtol=1e-12)
 
 
+def test_a_narrowed_forecaster_gives_the_same_where_only_what_is_open_differs(forecaster, here):
+    names = forecaster.influential[:6]
+    narrowed = forecaster.narrowed(here, names)
+    for name in names:
+        for value in (np.nan, 0.0, float(forecaster.typical[forecaster.descriptor_names.index(name)])):
+            described = {**here, name: value}
+            at, settings = narrowed.at(described), some_settings(forecaster.method)
+            wanted = forecasts(forecaster, described)
+            for part in ("later", "shortfall", "divergence"):
+                np.testing.assert_array_equal(getattr(at, part)(settings), wanted[part])
+            np.testing.assert_array_equal(at.outcome(settings)["all"], wanted["all"])
+
+
 def test_accuracy_on_all_classes_weighs_every_class_alike():
     old, new = np.array([0.5, 1.0]), np.array([1.0, 0.0])
     np.testing.assert_allclose(combined(old, new, {"classes_old": 6.0, "classes_new": 2.0}), [0.625, 0.75])

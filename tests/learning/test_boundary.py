@@ -5,7 +5,9 @@ import pytest
 
 from hyperforecast.checks import InputError
 from hyperforecast.increments import Increment
-from hyperforecast.learning import ClassSummaries, HeadTrainer, Job, close_boundary, open_boundary, standardize
+from hyperforecast.learning import (
+    ClassSummaries, HeadTrainer, Job, close_boundary, open_boundary, present_codes, standardize,
+)
 from hyperforecast.learning.boundary import MOST_CHECK_ROWS, fit_scaling
 from hyperforecast.settings import Plan, Settings
 
@@ -124,3 +126,9 @@ def test_summaries_pool_to_the_moments_of_all_rows_in_any_order():
         for code in range(3):
             np.testing.assert_allclose(summaries.mean[code], Z[y == code].mean(axis=0), atol=1e-6)
             np.testing.assert_allclose(summaries.variance[code], Z[y == code].var(axis=0), rtol=1e-5)
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_present_codes_are_what_numpy_calls_unique(seed):
+    y = np.random.default_rng(seed).integers(0, 30, 40)
+    assert present_codes(y).tolist() == np.unique(y).tolist() and present_codes(y).dtype == np.int64
