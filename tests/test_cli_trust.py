@@ -21,7 +21,8 @@ def cell(tmp_path, monkeypatch, forecasters, capsys):
     for t, labels in enumerate((["nut", "bolt"], ["hook", "ring"], ["pin"])):
         y = np.repeat(labels, 30)
         centers = {label: np.random.default_rng([7, *label.encode()]).normal(0, 3, 6) for label in labels}
-        np.savez(f"delivery{t}.npz", X=np.stack([centers[label] for label in y.tolist()]) + rng.normal(size=(len(y), 6)), y=y)
+        X = np.stack([centers[label] for label in y.tolist()]) + rng.normal(size=(len(y), 6))
+        np.savez(f"delivery{t}.npz", X=X, y=y)
     save_forecaster("new.forecaster", forecasters["wa"])
     assert main(["update", "--increment", "delivery0.npz", "--device", "cell", "--memory-limit", "120"]) == 0
     assert main(["update", "--increment", "delivery1.npz", "--device", "cell"]) in (0, 3)
@@ -66,10 +67,12 @@ def test_sign_and_verify(cell, capsys):
     pytest.importorskip("cryptography", reason="pip install '.[signing]'")
     told = run(capsys, "sign", "--new-key", "key.pem")
     assert told["public_key"] == "key.public.pem"
-    assert run(capsys, "sign", "--forecaster", "new.forecaster", "--key", "key.pem")["signature"] == "new.forecaster.sig"
+    signed = run(capsys, "sign", "--forecaster", "new.forecaster", "--key", "key.pem")
+    assert signed["signature"] == "new.forecaster.sig"
     verify = ("verify", "--forecaster", "new.forecaster", "--key", "key.public.pem")
     assert run(capsys, *verify)["verified"]
-    assert run(capsys, "forecaster", "--device", "cell", "--pin", "new.forecaster", "--key", "key.public.pem")["public_key"]
+    pin = ("forecaster", "--device", "cell", "--pin", "new.forecaster", "--key", "key.public.pem")
+    assert run(capsys, *pin)["public_key"]
     assert run(capsys, "verify", "--device", "cell")["verified"]
     with open("new.forecaster", "r+b") as file:
         file.seek(1000)
@@ -84,8 +87,8 @@ def test_without_the_package_one_line_says_how_to_verify(cell, tmp_path):
               "sys.exit(main(sys.argv[1:]))")
     for name in ("key.pem", "new.forecaster.sig"):
         (tmp_path / name).write_bytes(b"x" * 64)
-    done = subprocess.run([sys.executable, "-c", script, "verify", "--forecaster", "new.forecaster", "--key", "key.pem"],
-                          capture_output=True, text=True, env={**os.environ, "OPENBLAS_NUM_THREADS": "1"})
+    command = [sys.executable, "-c", script, "verify", "--forecaster", "new.forecaster", "--key", "key.pem"]
+    done = subprocess.run(command, capture_output=True, text=True, env={**os.environ, "OPENBLAS_NUM_THREADS": "1"})
     assert done.returncode == 2 and done.stderr.count("\n") == 1 and not done.stdout
     assert "cryptography" in done.stderr and "openssl pkeyutl -verify" in done.stderr
 

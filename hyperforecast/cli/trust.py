@@ -26,9 +26,9 @@ def add_commands(command):
     sign = command("sign", _sign, "Sign a forecaster with Ed25519; the signature lies beside it, as FILE.sig.")
     sign.add_argument("--forecaster", metavar="FILE")
     sign.add_argument("--key", metavar="FILE", help="private key (PEM) to sign with")
-    sign.add_argument("--new-key", metavar="FILE", help="make a private key, KEY.pem, and its public one, KEY.public.pem")
+    sign.add_argument("--new-key", metavar="FILE", help="make a private key, and its public one beside it")
 
-    verify = command("verify", _verify, "Verify a forecaster's signature: of a file, or of the one a device is pinned to.")
+    verify = command("verify", _verify, "Verify the signature of a forecaster, a file or the one a device is pinned to.")
     subject = verify.add_mutually_exclusive_group(required=True)
     subject.add_argument("--forecaster", metavar="FILE")
     subject.add_argument("--device", metavar="DIR")
@@ -108,9 +108,9 @@ def _comparison_lines(compared, errors):
           _interval(one.expected["after"]), one.nearer or "-") for one in compared])]
     if errors:
         n = sum(one.achieved is not None for one in compared)
-        lines.append(f"Mean distance from what was achieved, over {n} updates: before {errors['before']['error']:.3f}, "
-                     f"after {errors['after']['error']:.3f}; intervals that held: before {errors['before']['held']:.0%}, "
-                     f"after {errors['after']['held']:.0%}")
+        lines.append(f"Mean distance from what was achieved, over {n} updates: "
+                     f"before {errors['before']['error']:.3f}, after {errors['after']['error']:.3f}; intervals that held: "
+                     f"before {errors['before']['held']:.0%}, after {errors['after']['held']:.0%}")
         if n < FEW:
             lines.append("So few updates tell little; the recipe's figures on held-out sources tell more.")
     return lines
@@ -130,7 +130,8 @@ def _sign(options):
     if options.new_key:
         public = str(make_key(options.new_key))
         document.update(new_key=options.new_key, public_key=public)
-        lines += [f"Private key: {options.new_key}; keep it to yourself, at base", f"Public key: {public}; for the devices"]
+        lines += [f"Private key: {options.new_key}; keep it to yourself, at base",
+                  f"Public key: {public}; for the devices"]
     if options.forecaster:
         forecaster = load_forecaster(options.forecaster)
         signature = str(sign_file(options.forecaster, options.key or options.new_key))

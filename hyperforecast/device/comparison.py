@@ -1,7 +1,7 @@
 """Two forecasters side by side on a device's own past boundaries.
 
-The history holds the descriptors of each boundary and what advice was to care for there, so that either can be asked again what it would have advised, and
-what it would have expected of the settings that were used. Where these were tried, what they achieved is known.
+The history holds the descriptors of each boundary and what advice was to care for there, so that either can be asked
+again what it would have advised, and what it would have expected of the settings that were used. Where these were tried, what they achieved is known.
 """
 
 from dataclasses import dataclass

@@ -43,7 +43,7 @@ def forecaster_for(folder, generation, *, given=None):
     if given.checksum != pin.checksum:
         raise InputError("forecaster", f"must be the one that the device is pinned to, {pin.checksum[:SHORT]}",
                          given.checksum[:SHORT] or "one without a checksum",
-                         "leave it out, or compare and upgrade with: hyperforecast forecaster --device DIR --upgrade FILE")
+                         "leave it out, or compare and upgrade: hyperforecast forecaster --device DIR --upgrade FILE")
     return given
 
 

@@ -47,7 +47,7 @@ def make_key(path):
 
 
 def sign(data, private_key, *, name="private key"):
-    """Return the signature (64 bytes) of `data` with a private key in PEM (bytes); `name` is what errors call the key."""
+    """Return the signature (64 bytes) of `data` with a private key in PEM (bytes), which errors call `name`."""
     ed25519, serialization, _ = _library()
     try:
         key = serialization.load_pem_private_key(private_key, password=None)

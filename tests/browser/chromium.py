@@ -12,7 +12,8 @@ from pathlib import Path
 COMMAND = next(filter(None, map(shutil.which, ("chromium", "chromium-browser"))), None)
 INSTALL = "needs Debian's Chromium: apt-get install chromium"
 # Reads from file descriptor 3 and writes to 4.
-LAUNCH = "import os, sys; os.dup2(int(sys.argv[1]), 3); os.dup2(int(sys.argv[2]), 4); os.execvp(sys.argv[3], sys.argv[3:])"
+LAUNCH = ("import os, sys; os.dup2(int(sys.argv[1]), 3); os.dup2(int(sys.argv[2]), 4); "
+          "os.execvp(sys.argv[3], sys.argv[3:])")
 # Elements that reach beyond the window, but for those inside a box that scrolls by itself.
 BEYOND = """[...document.querySelectorAll("body *")].filter(one => one.getBoundingClientRect().right > innerWidth + 1
     && !one.closest(".scroll")).map(one => one.tagName + ": " + one.textContent.trim().slice(0, 60)).slice(0, 5)"""
@@ -54,7 +55,8 @@ class Browser:
 
     def open(self, path, *, width):
         """Open an HTML file in a window of so many CSS pixels."""
-        self._ask("Emulation.setDeviceMetricsOverride", width=width, height=900, deviceScaleFactor=1, mobile=width < 600)
+        self._ask("Emulation.setDeviceMetricsOverride", width=width, height=900, deviceScaleFactor=1,
+                  mobile=width < 600)
         self.complaints, self._loaded = [], False
         self._ask("Page.navigate", url=Path(path).absolute().as_uri())
         while not self._loaded:

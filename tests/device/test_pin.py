@@ -10,7 +10,9 @@ from hyperforecast.device import (
     DeviceFolder, compare_forecasters, forecaster_for, mean_errors, pin_forecaster, pinned_path, roll_back,
     unpin_forecaster, update, upgrade_forecaster, verify_pinned,
 )
-from hyperforecast.forecasting import Preferences, TreeEnsemble, forecaster_bytes, load_forecaster, save_forecaster, with_checksum
+from hyperforecast.forecasting import (
+    Preferences, TreeEnsemble, forecaster_bytes, load_forecaster, save_forecaster, with_checksum,
+)
 from hyperforecast.forecasting.signature import make_key, read_public_key, sign_file
 from hyperforecast.increments import check_increment
 from hyperforecast.settings import Plan, Settings
@@ -30,7 +32,8 @@ def files(forecasters, tmp_path):
     """Two forecasters for WA that differ, and one for EWC, as files by name."""
     one = forecasters["wa"]
     # It expects that nothing goes well, and is sure of it.
-    nothing = TreeEnsemble(one.models["old"].n_features, *(np.empty(0) for _ in range(4)), np.array([-1]), np.array([-9.0]))
+    no_splits = [np.empty(0) for _ in range(4)]
+    nothing = TreeEnsemble(one.models["old"].n_features, *no_splits, np.array([-1]), np.array([-9.0]))
     gloomy = {**one.models, "old": nothing}
     two = with_checksum(replace(one, models=gloomy, thresholds=dict.fromkeys(one.thresholds, 0.0)))
     paths = {}
@@ -62,7 +65,7 @@ def test_a_pinned_device_is_advised_by_that_forecaster_alone(folder, files):
     update(folder, clouds(["clip"], 4), forecaster=one, **LENIENT)
     content = folder.read().checksum
     for dry_run in (True, False):
-        with pytest.raises(InputError, match=f"must be the one that the device is pinned to, {one.checksum[:16]}.*--upgrade"):
+        with pytest.raises(InputError, match=f"the one that the device is pinned to, {one.checksum[:16]}.*--upgrade"):
             update(folder, clouds(["cap"], 5), forecaster=two, dry_run=dry_run)
     with pytest.raises(InputError, match="pinned already"):
         pin_forecaster(folder, files["two"])
@@ -132,8 +135,8 @@ def test_a_device_pinned_with_a_key_takes_signed_forecasters_alone(folder, files
     with pytest.raises(InputError, match="must be named"):
         upgrade_forecaster(folder, "shipped")
     assert folder.read().care.pin == pin
-    upgrade_forecaster(folder, files["two"],
-                       signature_path=sign_file(files["two"], tmp_path / "ours.pem", signature_path=tmp_path / "ours.sig"))
+    ours_of_two = sign_file(files["two"], tmp_path / "ours.pem", signature_path=tmp_path / "ours.sig")
+    upgrade_forecaster(folder, files["two"], signature_path=ours_of_two)
     verify_pinned(folder, folder.read().care.pin)
     assert len(list(folder.path.glob("*.forecaster*"))) == 2
     copy = pinned_path(folder, folder.read().care.pin)
@@ -157,8 +160,8 @@ def test_the_comparison_repeats_what_was_advised_and_expected(folder, files):
     # Gloom is false here: nothing is expected of old classes, and one of three to two of five classes are new.
     assert compared[0].expected["after"].value <= 1 / 3 and compared[1].expected["after"].value <= 2 / 5
     errors = mean_errors(compared)
-    assert errors["after"]["held"] == 0.0 and errors["before"]["error"] == pytest.approx(
-        np.mean([abs(entry["expected"]["all"]["value"] - entry["achieved"]["all"]) for entry in generation.history[1:]]))
+    distances = [abs(entry["expected"]["all"]["value"] - entry["achieved"]["all"]) for entry in generation.history[1:]]
+    assert errors["after"]["held"] == 0.0 and errors["before"]["error"] == pytest.approx(np.mean(distances))
     assert compare_forecasters(generation, two, one)[0].expected["before"] == compared[0].expected["after"]
     with pytest.raises(InputError, match="must be one for wa"):
         compare_forecasters(generation, one, load_forecaster(files["ewc"]))

@@ -68,9 +68,10 @@ def test_openssl_verifies_what_is_signed_here_and_the_other_way_round(tmp_path):
     assert openssl(*check, tmp_path / "theirs.public.pem").returncode != 0
     signed = tmp_path / "theirs.sig"
     assert openssl("pkeyutl", "-sign", "-inkey", theirs, "-rawin", "-in", file, "-out", signed).returncode == 0
-    verify(file.read_bytes(), read_signature(file, signature_path=signed), read_public_key(tmp_path / "theirs.public.pem"))
+    signature = read_signature(file, signature_path=signed)
+    verify(file.read_bytes(), signature, read_public_key(tmp_path / "theirs.public.pem"))
     with pytest.raises(InputError, match="must be the signature"):
-        verify(file.read_bytes(), read_signature(file, signature_path=signed), read_public_key(public))
+        verify(file.read_bytes(), signature, read_public_key(public))
     # A key with a password, and one of another kind.
     locked, other = tmp_path / "locked.pem", tmp_path / "other.pem"
     assert openssl("pkcs8", "-topk8", "-in", theirs, "-out", locked, "-passout", "pass:12345678").returncode == 0

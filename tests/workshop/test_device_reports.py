@@ -84,7 +84,8 @@ def test_people_are_on_the_page(generation):
     assert "rings taken for hooks" in text_of(update_page(update_document(generation, 4, name="arm")))
     later = text_of(update_page(update_document(generation, 2, name="arm")))
     outcome = generation.history[1]["outcomes"][0]
-    assert f"Labels that came later, {outcome['time'].replace('T', ' ')[:19]} UTC: " in later and "over 40 rows" in later
+    time = outcome["time"].replace("T", " ")[:19]
+    assert f"Labels that came later, {time} UTC: " in later and "over 40 rows" in later
     assert "floor (class bolt; floor 0.5)" in later
 
 
@@ -132,8 +133,8 @@ def test_the_life_of_a_device(generation):
 
 
 def test_a_step_in_words():
-    step = {"time": "t", "after_update": 3, "step": "merged", "from": "nut", "into": "bolt", "undone": [], "told": ["a", 2],
-            "forecaster": "0123456789abcdef" * 4}
+    step = {"time": "t", "after_update": 3, "step": "merged", "from": "nut", "into": "bolt", "undone": [],
+            "told": ["a", 2], "forecaster": "0123456789abcdef" * 4}
     assert step_in_words(step) == "merged (from nut; into bolt; told a, 2; forecaster 0123456789abcdef)"
     assert step_in_words({"step": "acceptance set"}) == "acceptance set"
 

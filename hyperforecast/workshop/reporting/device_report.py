@@ -83,8 +83,9 @@ def _classes(page, history):
     page.section("Classes")
     page.heat_tables({"accuracy on held-back rows": np.array([table[label] for label in shown])},
                      rows=list(map(str, shown)), columns=[str(one["number"]) for one in telling],
-                     caption="Percent, by update that was kept" + (f"; the {MOST_CLASSES} of {len(table)} classes that do worst now."
-                                                     if len(shown) < len(table) else "."))
+                     caption="Percent, by update that was kept" + (
+                         f"; the {MOST_CLASSES} of {len(table)} classes that do worst now." if len(shown) < len(table)
+                         else "."))
 
 
 def _settings(page, history):
@@ -98,7 +99,7 @@ def _settings(page, history):
             series["advised"], differ = advised, True
         charts.append(line_chart(key.replace("_", " "), series, y_label=key.replace("_", " "), x_label="update",
                                  first=history[0]["number"], logarithmic=True))
-    page.charts(*charts, caption="Used in the last try of each update" + (", and advised." if differ else ", as advised."))
+    page.charts(*charts, caption=f"Used in the last try of each update, {'and' if differ else 'as'} advised.")
 
 
 def _expectations(page, history):

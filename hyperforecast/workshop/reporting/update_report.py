@@ -89,9 +89,9 @@ def _lead(entry, told):
     achieved, expected = entry["achieved"], entry["expected"]
     parts = [f"{entry['rows']} rows {learned} arrived; the device then knew {known} classes."]
     if achieved["all"] is not None:
-        parts.append(f"Accuracy over all classes: {achieved['all']:.0%} on {achieved['rows']} rows held back from training"
-                     + (", expected {value:.0%} ({low:.0%} to {high:.0%})".format(**expected["all"]) if expected else "")
-                     + ".")
+        forecast = ", expected {value:.0%} ({low:.0%} to {high:.0%})".format(**expected["all"]) if expected else ""
+        parts.append(f"Accuracy over all classes: {achieved['all']:.0%} on {achieved['rows']} rows held back from "
+                     f"training{forecast}.")
     return " ".join(parts)
 
 
@@ -128,8 +128,9 @@ def _advised(page, entry):
         columns.append("trained with" if not entry["earlier_tries"] else f"try {place}")
         rows = [[*row, value] for row, value in zip(rows, one["settings"].values())]
     overruled = entry["overruled"] if isinstance(entry["overruled"], dict) else None
-    page.table(columns, rows, caption="Opening settings: at the first update nothing can be forgotten." if advice is None
-               else "The advice was overruled." if overruled else "Settings, as advised and as trained with.")
+    page.table(columns, rows, caption=(
+        "Opening settings: at the first update nothing can be forgotten." if advice is None
+        else "The advice was overruled." if overruled else "Settings, as advised and as trained with."))
     points = []
     if overruled:
         points.append(f"Overruled by {_cut(overruled['by'] or 'nobody named', LONGEST_NAME)}: "
@@ -153,7 +154,9 @@ def _outcome(page, document):
     entry, classes = document["update"], document["classes"]
     achieved, expected = entry["achieved"], entry["expected"]
     kinds = [kind for kind in KINDS if achieved[kind] is not None]
-    series = {"expected": [[expected[kind][end] for end in ("value", "low", "high")] for kind in kinds]} if expected else {}
+    series = {}
+    if expected:
+        series["expected"] = [[expected[kind][end] for end in ("value", "low", "high")] for kind in kinds]
     series["achieved"] = [[achieved[kind], np.nan, np.nan] for kind in kinds]
     charts = [interval_chart("all, old and new classes", [f"{kind} classes" for kind in kinds],
                              {name: np.array(points) for name, points in series.items()}, x_label="accuracy",
