@@ -6,8 +6,9 @@ The file is one JSON document (`schemas/history.schema.json`):
     device          the device's identity: random, made at its first update
     plan            as the first update fixed it, without the limits that may change
     updates         each with `number`, `classes_old`, `classes_new` (counts), `descriptors` by name (null: not to be
-                    had), `kept`, and `tries`: the settings that were trained with, in order, whether training
-                    `diverged`, the accuracies `achieved` (see `hyperforecast.device.update`) and the `operations` spent
+                    had), `kept`, whether the advice was `overruled`, and `tries`: the settings that were trained with,
+                    in order, whether training `diverged`, the accuracies `achieved` (see
+                    `hyperforecast.device.update`) and the `operations` spent
 
 An update without descriptors, as a device's first, is left out, as are tries that the time limit stopped: nothing can
 be learned from them. Nothing else leaves the device unless it is asked for: no rows, no times, no words, and labels
@@ -54,6 +55,7 @@ class ExportedUpdate:
     descriptors: dict
     tries: list
     kept: bool
+    overruled: bool
     content: str
 
 
@@ -91,7 +93,7 @@ def export_history(path, generation, *, class_names=False):
         names = {"class_names": {"new": one["classes_new"], "again": one["classes_again"]}} if class_names else {}
         updates.append({
             "number": one["number"], "classes_old": one["classes_old"], "classes_new": len(one["classes_new"]),
-            "descriptors": one["descriptors"], "kept": one["kept"], **names,
+            "descriptors": one["descriptors"], "kept": one["kept"], "overruled": bool(one["overruled"]), **names,
             "tries": [{"settings": each["settings"], "diverged": each["diverged"], "operations": each["operations"],
                        "achieved": {name: each["achieved"][name] for name in (*ACHIEVED, "rows")}}
                       for each in tries]})
@@ -132,7 +134,8 @@ def _checked(document):
 
 
 def _update(name, one, plan):
-    check_object(name, one, ("number", "classes_old", "classes_new", "descriptors", "tries", "kept"), ("class_names",))
+    check_object(name, one, ("number", "classes_old", "classes_new", "descriptors", "tries", "kept", "overruled"),
+                 ("class_names",))
     if not isinstance(one["tries"], list) or not one["tries"]:
         raise InputError(f"{name}, tries", "must be a list of one at least", repr(one["tries"]))
     content = {key: value for key, value in one.items() if key != "class_names"}
@@ -142,7 +145,8 @@ def _update(name, one, plan):
         classes_new=check_whole(f"{name}, classes_new", one["classes_new"], high=2**31),
         descriptors=check_descriptors(f"{name}, descriptors", one["descriptors"]),
         tries=[_try(f"{name}, try {place}", each, plan) for place, each in enumerate(one["tries"], 1)],
-        kept=_truth(f"{name}, kept", one["kept"]), content=checksum(dump_json([plan.as_dict(), content])))
+        kept=_truth(f"{name}, kept", one["kept"]), overruled=_truth(f"{name}, overruled", one["overruled"]),
+        content=checksum(dump_json([plan.as_dict(), content])))
 
 
 def _try(name, one, plan):

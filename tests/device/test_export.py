@@ -55,9 +55,10 @@ def test_descriptors_settings_and_outcomes_leave_the_device_and_nothing_else(fol
     VALIDATOR.validate(document)
     history = folder.read().history
     assert [one["number"] for one in document["updates"]] == [2, 3, 4]
+    assert [one["overruled"] for one in document["updates"]] == [False, True, False]
     assert document["plan"] == folder.read().carryover.plan.as_dict() and document["device"] == history[0]["device"]
     for told, entry in zip(document["updates"], history[1:]):
-        assert set(told) == {"number", "classes_old", "classes_new", "descriptors", "kept", "tries"}
+        assert set(told) == {"number", "classes_old", "classes_new", "descriptors", "kept", "overruled", "tries"}
         assert told["descriptors"] == entry["descriptors"] and told["kept"] == entry["kept"]
         assert told["classes_old"] == entry["classes_old"] and told["classes_new"] == len(entry["classes_new"])
         tries = [*entry["earlier_tries"], entry]
@@ -125,7 +126,8 @@ BAD = [
     (("updates",), {}, "updates: must be a list"), (("updates",), [7], "update 1: must be a JSON object"),
     ((*UPDATE, "number"), 0, "update 1, number: must be a whole number"), ((*UPDATE, "number"), 1.5, "number: must be"),
     ((*UPDATE, "classes_old"), 0, "classes_old: must be"), ((*UPDATE, "classes_new"), -1, "classes_new: must be"),
-    ((*UPDATE, "kept"), "yes", "kept: must be true or false"), ((*UPDATE, "reasons"), [], "knows the keys"),
+    ((*UPDATE, "kept"), "yes", "kept: must be true or false"),
+    ((*UPDATE, "overruled"), 1, "overruled: must be true or false"), ((*UPDATE, "reasons"), [], "knows the keys"),
     ((*UPDATE, "descriptors"), [], "must be a JSON object of descriptors"),
     ((*UPDATE, "descriptors", "speed"), 1, "must be descriptors that this version knows.*received 'speed'"),
     ((*UPDATE, "descriptors", "rows"), "many", "descriptors, rows: must be a number"),

@@ -65,6 +65,7 @@ def test_updates_become_records_with_the_outcomes_they_had(tmp_path, forecasters
         assert (boundary.number, boundary.classes_old, boundary.classes_new) == (
             entry["number"], entry["classes_old"], len(entry["classes_new"]))
         assert boundary.outcome_rows == entry["achieved"]["rows"] and attempt.settings == IDLE
+        assert attempt.strategy == "overruled"
         assert (attempt.accuracy_old, attempt.accuracy_new) == (entry["achieved"]["old"], entry["achieved"]["new"])
         assert boundary.most_kept == entry["descriptors"]["most_kept"] and boundary.descriptors.keys() == DESCRIPTORS.keys()
         assert {name: None if np.isnan(value) else value for name, value in boundary.descriptors.items()} \
@@ -98,6 +99,15 @@ def test_two_devices_do_not_collide_nor_does_a_copy_that_went_another_way(tmp_pa
     assert [end.updates[-1].number for end in ends] == [3, 3] and ends[0].device == ends[1].device
     assert [merge(records_file, end).added for end in ends] == [1, 1]
     assert len(content(records_file)) == 4
+
+
+def test_what_was_advised_and_what_was_given_instead_both_count_and_are_told_apart(tmp_path, forecasters, export,
+                                                                                   records_file):
+    folder = lived(tmp_path / "arm", [["nut", "bolt"], ["hook"]], forecasters=forecasters)
+    update(folder, clouds(["ring"], seed=7), forecaster=forecasters["wa"], retries=0, most_lost=1, most_lost_by_class=1)
+    assert merge(records_file, export(folder, "a.json")).added == 2
+    strategies = [one.strategy for each in records_file.trajectories() for one in each.boundaries[0].attempts]
+    assert sorted(strategies) == ["overruled", "update"]
 
 
 def test_rolled_back_tries_are_outcomes_too(tmp_path, forecasters, export, records_file):

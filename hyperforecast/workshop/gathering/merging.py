@@ -13,7 +13,8 @@ from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.settings import KEPT_PER_CLASS
 from hyperforecast.workshop.gathering.records import AttemptRecord, BoundaryRecord, Trajectory
 
-STRATEGY = "update"
+# Strategies of the attempts: settings that were advised, and that somebody gave instead.
+ADVISED, OVERRULED = "update", "overruled"
 
 
 @dataclass(frozen=True)
@@ -48,7 +49,8 @@ def merge(records, history):
 
 def _trajectory(history, update):
     source, plan = f"device:{history.device}", history.plan
-    attempts = [AttemptRecord(one.settings, STRATEGY, one.old, one.new, one.diverged, one.operations)
+    strategy = OVERRULED if update.overruled else ADVISED
+    attempts = [AttemptRecord(one.settings, strategy, one.old, one.new, one.diverged, one.operations)
                 for one in update.tries if one.old is not None and one.new is not None]
     descriptors = {name: update.descriptors.get(name, np.nan) for name in DESCRIPTORS}
     # The box of a method without exemplars does not depend on it.
