@@ -7,7 +7,7 @@ import chromium
 import numpy as np
 import pytest
 
-from hyperforecast.device import DeviceFolder, update
+from hyperforecast.device import DeviceFolder, update, weigh
 from hyperforecast.increments import check_increment
 from hyperforecast.settings import Plan, Settings
 from hyperforecast.workshop.contest import load_contest
@@ -18,6 +18,7 @@ from hyperforecast.workshop.reporting.device_report import device_document, devi
 from hyperforecast.workshop.reporting.page import Page
 from hyperforecast.workshop.reporting.records_report import records_page
 from hyperforecast.workshop.reporting.update_report import update_document, update_page
+from hyperforecast.workshop.reporting.weighing_report import weighing_page
 
 pytestmark = pytest.mark.skipif(chromium.COMMAND is None, reason=chromium.INSTALL)
 
@@ -51,14 +52,17 @@ def device(tmp_path_factory, forecasters):
     update(folder, clouds(["last"], 2), forecaster=wa, settings=Settings(0.5, 0.001, 1), by="P. Tinker, " * 20,
            because=LONG[:900], most_lost=0.0, most_lost_by_class=0.0)
     update(folder, clouds(["last"], 2), forecaster=wa, most_lost=0.0, most_lost_by_class=0.0, retries=3)
-    return folder.read()
+    return folder
 
 
 @pytest.fixture(scope="module")
-def pages(device, records):
+def pages(device, records, forecasters):
     """Every kind of report that there is, by name."""
+    weighing = weigh(device, clouds(["last"], 3), settings=Settings(0.1, 1.0, 3), forecasters=forecasters)
+    device = device.read()
     made = {"demo": demo_page(run_demo(seed=0), seed=0), "records": records_page(records),
-            "device": device_page(device_document(device, name="arm"))}
+            "device": device_page(device_document(device, name="arm")),
+            "weighing": weighing_page(weighing, name="arm")}
     for number in (1, 2, 3, 4):
         made[f"update {number}"] = update_page(update_document(device, number, name="arm"))
     for kind in ("one_step", "whole_stream"):
@@ -66,7 +70,7 @@ def pages(device, records):
     return made
 
 
-NAMES = ["demo", "records", "device", "contest one_step", "contest whole_stream",
+NAMES = ["demo", "records", "device", "weighing", "contest one_step", "contest whole_stream",
          *(f"update {number}" for number in (1, 2, 3, 4))]
 
 

@@ -72,6 +72,10 @@ def update_page(document):
     page = Page(f"Update {entry['number']} of {document['device']}: {told}", _lead(entry, told), one_sheet=True)
     page.section("What arrived")
     page.facts(_arrived(document))
+    doubts = document["update"].get("doubts", [])
+    page.items([f"In doubt: {_cut(one, LONGEST_TEXT)}." for one in doubts[:MOST_REASONS]])
+    if len(doubts) > MOST_REASONS:
+        page.paragraph(f"{len(doubts) - MOST_REASONS} more doubts stand in the history.")
     page.section("What was advised, and why")
     _advised(page, entry)
     page.section("What was expected, and what came of it")
