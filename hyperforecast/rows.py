@@ -12,6 +12,8 @@ from hyperforecast.checks import InputError
 
 # Bytes of rows that are read at a time: small enough for the processor's cache where they are only summed up.
 SUMMED_BYTES, CHUNK_BYTES = 2**19, 2**23
+# In standard deviations.
+FAR_FROM_ZERO = 4
 # Rows in rising order that fill at least this share of their span are read in one go.
 DENSE = 0.5
 
@@ -53,7 +55,7 @@ class FileRows:
             start, stop, step = rows.indices(len(self))
             if step != 1:
                 raise IndexError("rows of a file are read without steps")
-            return self._read(start, np.empty((max(stop - start, 0), self.shape[1]), self.dtype))
+            return self.read(start, np.empty((max(stop - start, 0), self.shape[1]), self.dtype))
         rows = np.asarray(rows)
         if rows.dtype == bool:
             rows = np.flatnonzero(rows)
@@ -68,7 +70,7 @@ class FileRows:
         else:
             read = np.empty((flat.size, self.shape[1]), self.dtype)
             for place, row in enumerate(flat.tolist()):
-                self._read(row, read[place:place + 1])
+                self.read(row, read[place:place + 1])
         return read.reshape(*rows.shape, self.shape[1])
 
     @property
@@ -87,8 +89,8 @@ class FileRows:
             # Squares overflow earlier than values.
             return found if np.isfinite(found).all() else _moments(self, np.float64)
 
-    def _read(self, start, into):
-        """Fill an array with the rows from `start` on; return it."""
+    def read(self, start, into):
+        """Fill an array (k, d) of the file's type with the rows from `start` on; return it."""
         target, at = memoryview(into).cast("B") if into.size else memoryview(b""), self.offset + start * self._row_bytes
         done = 0
         while done < len(target):
@@ -152,18 +154,27 @@ def column_moments(X):
 
 
 def _moments(X, dtype):
-    """Return `column_moments` by sums in `dtype` over small pieces around a first mean, in float64 over all of them.
+    """Return `column_moments` by sums in `dtype` over small pieces, in float64 over all of them.
 
-    The shifted-data algorithm, common practice: the first mean keeps the difference of sums from cancelling.
+    The shifted-data algorithm, common practice: where the mean is far from zero, the sums are of what lies around a
+    first mean, so that their difference does not cancel. It takes half as long again.
     """
-    size = chunk_rows(X, SUMMED_BYTES)
-    pivot = X[:size].astype(np.float32).astype(dtype).mean(axis=0, dtype=np.float64).astype(dtype)
-    ones, total, squares = np.ones(size, dtype), np.zeros(X.shape[1]), np.zeros(X.shape[1])
-    for start in range(0, len(X), size):
-        # By way of float32, as the head will see it.
-        piece = X[start:start + size].astype(np.float32, copy=False) - pivot
-        total += ones[:len(piece)] @ piece
-        piece *= piece
-        squares += ones[:len(piece)] @ piece
-    mean = total / len(X)
-    return np.stack([pivot + mean, np.maximum(squares / len(X) - mean**2, 0)])
+    size, (n_rows, n_features) = chunk_rows(X, SUMMED_BYTES), X.shape
+    first = X[:size].astype(np.float32)
+    pivot = first.mean(axis=0, dtype=np.float64).astype(dtype)
+    shifts = bool((np.abs(pivot) > FAR_FROM_ZERO * first.std(axis=0)).any())
+    pivot *= shifts
+    ones, total, squares = np.ones(size, dtype), np.zeros(n_features), np.zeros(n_features)
+    # Memory that is fresh for every piece would take longer to get than to fill.
+    buffer, rest = np.empty((size, n_features), X.dtype), np.empty((size, n_features), dtype)
+    for start in range(0, n_rows, size):
+        count = min(size, n_rows - start)
+        piece = X.read(start, buffer[:count]) if isinstance(X, FileRows) else X[start:start + count]
+        # As float32, which the head will see.
+        piece = piece.astype(np.float32, copy=False).astype(dtype, copy=False)
+        if shifts:
+            piece = np.subtract(piece, pivot, out=rest[:count])
+        total += ones[:count] @ piece
+        squares += ones[:count] @ np.multiply(piece, piece, out=rest[:count])
+    mean = total / n_rows
+    return np.stack([pivot + mean, np.maximum(squares / n_rows - mean**2, 0)])
