@@ -244,7 +244,7 @@ def _update_lines(report):
 
 
 def _history(options):
-    from hyperforecast.device import DeviceFolder
+    from hyperforecast.device import DeviceFolder, step_in_words
 
     if options.schema:
         _print_schema("history")
@@ -268,7 +268,7 @@ def _history(options):
     lines += [f"update {one['number']}: later {number(outcome['all'])} on {outcome['rows']} rows"
               for one in generation.history for outcome in one.get("outcomes", ())]
     steps = generation.care.steps
-    lines += [f"after update {one['after_update']}: {one['step']}" for one in steps]
+    lines += [f"after update {one['after_update']}: {step_in_words(one)}" for one in steps]
     say(options, {"device": options.device, "generation": generation.number, "updates": generation.history,
                   "steps": list(steps)}, lines)
 

@@ -65,6 +65,18 @@ class Care:
         return replace(self, steps=(*self.steps, one)[-MOST_STEPS:])
 
 
+def step_in_words(step):
+    """Return a step in words, but for when it was; checksums by their first digits."""
+    told = [f"{key.replace('_', ' ')} {_brief(value)}" for key, value in step.items()
+            if key not in ("time", "after_update", "step") and value not in ([], None)]
+    return step["step"] + (f" ({'; '.join(told)})" if told else "")
+
+
+def _brief(value):
+    text = ", ".join(map(str, value)) if isinstance(value, list) else str(value)
+    return text[:16] if CHECKSUM.fullmatch(text) else text
+
+
 def care_parts(care):
     """Return (facts, arrays) of a `Care`, to be stored in a bundle."""
     facts = {"floors": [[label, floor] for label, floor in care.floors.items()], "steps": list(care.steps),

@@ -9,13 +9,13 @@ import pytest
 
 from hyperforecast.checks import InputError
 from hyperforecast.cli import main
-from hyperforecast.device import DeviceFolder, record_outcome, roll_back, set_floor, update
+from hyperforecast.device import DeviceFolder, record_outcome, roll_back, set_floor, step_in_words, update
 from hyperforecast.increments import check_increment
 from hyperforecast.settings import Plan, Settings
 from hyperforecast.workshop.reporting import charts
 from hyperforecast.workshop.reporting.device_report import device_document, device_page
 from hyperforecast.workshop.reporting.update_report import (
-    CAUTION, MOST_CLASSES, class_rows, step_in_words, update_document, update_page, verdict,
+    CAUTION, MOST_CLASSES, class_rows, update_document, update_page, verdict,
 )
 
 LENIENT = {"most_lost": 1.0, "most_lost_by_class": 1.0}

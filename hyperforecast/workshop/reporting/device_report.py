@@ -2,9 +2,10 @@
 
 import numpy as np
 
+from hyperforecast.device import step_in_words
 from hyperforecast.workshop.reporting.charts import expected_and_achieved, line_chart
 from hyperforecast.workshop.reporting.page import Page
-from hyperforecast.workshop.reporting.update_report import CAUTION, class_rows, step_in_words, verdict, when
+from hyperforecast.workshop.reporting.update_report import CAUTION, class_rows, verdict, when
 
 # In the table of classes: the last updates, and the classes that do worst now.
 MOST_UPDATES, MOST_CLASSES = 12, 40

@@ -3,6 +3,7 @@
 import numpy as np
 
 from hyperforecast.checks import InputError
+from hyperforecast.device import step_in_words
 from hyperforecast.forecasting import Preferences
 from hyperforecast.workshop.reporting.charts import change_chart, interval_chart
 from hyperforecast.workshop.reporting.page import Page, plain, shown
@@ -217,19 +218,6 @@ def _decision(document):
         points.append(f"Undone by hand, {when(entry['undone'])}.")
     return points + [f"Afterwards, {when(one['time'])}: {_cut(step_in_words(one), LONGEST_TEXT)}."
                      for one in document["steps_afterwards"][:MOST_REASONS]]
-
-
-def step_in_words(step):
-    """Return a step that was done by hand in words."""
-    told = [f"{key.replace('_', ' ')} {_brief(value)}" for key, value in step.items()
-            if key not in ("time", "after_update", "step") and value not in ([], None)]
-    return step["step"] + (f" ({'; '.join(told)})" if told else "")
-
-
-def _brief(value):
-    text = ", ".join(map(str, value)) if isinstance(value, list) else str(value)
-    # Checksums by their first digits, as everywhere.
-    return text[:16] if len(text) == 64 and set(text) <= set("0123456789abcdef") else text
 
 
 def _number(value):
