@@ -63,6 +63,15 @@ def test_an_increment_without_new_classes_is_told_apart(device):
     assert isinstance(weigh(device, clouds(["nut", "hook"], seed=3)).waiting, NothingNew)
 
 
+def test_features_that_moved_are_a_sign_to_retrain_at_base(device):
+    calm = clouds(["nut", "hook"], seed=3)
+    assert weigh(device, calm).retrain == []
+    # Another gain and offset of the sensor: classes lie three times as far apart, and elsewhere.
+    moved = check_increment(3 * calm.X + 9, calm.y)
+    signs = weigh(device, moved).retrain
+    assert any("classes that came again have moved" in sign for sign in signs)
+
+
 def test_settings_beyond_the_limits_are_refused(device):
     increment = clouds(["pin", "cap"], seed=2)
     with pytest.raises(InputError, match="learning_rate"):

@@ -68,9 +68,9 @@ def test_drift_beyond_the_records_is_a_sign_to_retrain(advice):
     assert "energy" in sign
 
 
-@pytest.mark.parametrize("units, reached, signs", [(4.0, 0.9, 1), (4.0, 0.65, 0), (64.0, 0.9, 0), (4.0, np.nan, 0)])
-def test_a_head_has_run_out_of_room_where_it_has_few_units_and_others_reach_more(advice, units, reached, signs):
+# Eight classes.
+@pytest.mark.parametrize("units, signs", [(0.0, 0), (3.0, 1), (4.0, 1), (5.0, 0), (np.nan, 0)])
+def test_a_head_has_run_out_of_room_where_classes_crowd_its_units(advice, units, signs):
     calm = dict.fromkeys(("shift_of_returning", "cut_share", "frechet_distance", "energy"), np.nan)
-    described = {**advice.descriptors, **calm, "hidden_units": units, "kernel_accuracy_new": reached, "kernel_accuracy_old": reached}
-    told = retraining_signs(replace(advice, descriptors=described))
-    assert len(told) == signs and all("room" in one for one in told)
+    told = retraining_signs(replace(advice, descriptors={**advice.descriptors, **calm, "hidden_units": units}))
+    assert len(told) == signs and all("room: 8 classes" in one for one in told)
