@@ -4,7 +4,7 @@ import pathlib
 
 import pytest
 
-from hyperforecast.workshop.fitting import fit_forecaster, load_dataset, models
+from hyperforecast.workshop.fitting import fit_forecaster, load_dataset, models, networks
 from hyperforecast.workshop.gathering import RecordsFile, gather
 from hyperforecast.workshop.streams import load_streams
 
@@ -43,6 +43,7 @@ def forecasters(datasets):
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(models, "ROUNDS", 20)
         patch.setattr(models, "SMALL_ROUNDS", 10)
+        patch.setattr(networks, "STEPS", 40)
         # Few records: leaves of 200 attempts would leave nothing to split.
         patch.setattr(models, "LARGE", {"num_leaves": 31, "min_data_in_leaf": 20})
         return {method: fit_forecaster(dataset, recipe={"records": "eight small streams"})

@@ -1,14 +1,15 @@
 """Forecasts and advice with numpy alone.
 
-Read trees, intervals, familiarity, forecaster, preferences, advice, weighing, waiting, in this order.
+Read trees, networks, intervals, familiarity, forecaster, preferences, advice, weighing, waiting, in this order.
 """
 
 from hyperforecast.forecasting.advice import DIVERGENCE_PRICE, Advice, Reason, advise_settings, explain
 from hyperforecast.forecasting.familiarity import Familiarity, FamiliarityVerdict
 from hyperforecast.forecasting.forecaster import (
-    RANGES, Constant, Expected, Forecaster, combined, forecaster_bytes, load_forecaster, save_forecaster, with_checksum,
+    NETWORK, RANGES, Constant, Expected, Forecaster, combined, forecaster_bytes, load_forecaster, save_forecaster, with_checksum,
 )
 from hyperforecast.forecasting.intervals import grouped_conformal_threshold
+from hyperforecast.forecasting.networks import NETWORK_LAYERS, NetworkEnsemble, bend
 from hyperforecast.forecasting.opening import opening_settings
 from hyperforecast.forecasting.preferences import Preferences
 from hyperforecast.forecasting.trees import TreeEnsemble
@@ -18,7 +19,7 @@ from hyperforecast.forecasting.waiting import (
 from hyperforecast.forecasting.weighing import RIDGE, RISKY, Outlook, Ridge, along, outlook, ridge
 
 __all__ = ["Advice", "Constant", "DIVERGENCE_PRICE", "Expected", "Familiarity", "FamiliarityVerdict", "Forecaster",
-           "LEAST_GAIN", "NothingNew", "Outlook", "Preferences", "RANGES", "RIDGE", "RISKY", "Reason", "Ridge",
-           "TreeEnsemble", "Waiting", "advise_settings", "along", "await_rows", "combined", "explain", "forecaster_bytes",
+           "LEAST_GAIN", "NETWORK", "NETWORK_LAYERS", "NetworkEnsemble", "NothingNew", "Outlook", "Preferences", "RANGES", "RIDGE", "RISKY", "Reason", "Ridge",
+           "TreeEnsemble", "Waiting", "advise_settings", "along", "await_rows", "bend", "combined", "explain", "forecaster_bytes",
            "grouped_conformal_threshold", "load_forecaster", "nothing_new", "opening_settings", "outlook",
            "retraining_signs", "ridge", "save_forecaster", "with_checksum"]

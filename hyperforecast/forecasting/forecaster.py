@@ -1,6 +1,7 @@
 """A fitted forecaster: expected outcomes of settings at a boundary, evaluated with numpy alone.
 
-A forecaster file is a bundle (`hyperforecast.storage`) of kind "forecaster": trees, familiarity data and facts.
+A forecaster file is a bundle (`hyperforecast.storage`) of kind "forecaster": trees, networks, familiarity data and
+facts.
 """
 
 import os
@@ -12,6 +13,7 @@ import numpy as np
 
 from hyperforecast.checks import InputError, check_choice, check_number, check_whole
 from hyperforecast.forecasting.familiarity import Familiarity
+from hyperforecast.forecasting.networks import NetworkEnsemble
 from hyperforecast.forecasting.trees import TreeEnsemble
 from hyperforecast.settings import (
     COORDINATES, METHODS, REHEARSAL_METHODS, SCALES, Settings, SettingsBox, scale_free,
@@ -21,11 +23,13 @@ from hyperforecast.storage import (
 )
 
 KIND = "forecaster"
-VERSION = 1
+VERSION = 2
 # What is forecast, in the order of the arrays: accuracy on old and on new classes.
 OUTCOMES = ("old", "new")
 RANGES = ("old", "new", "all")
 MODELS = (*OUTCOMES, "shortfall", "diverged", "later", *(f"spread_{name}" for name in RANGES))
+# A second model of the shortfall; forecasters of version 1 have none.
+NETWORK = "shortfall_network"
 RANKINGS = ("outcome", "direct")
 CONSTANTS = ("raw", "scale_free")
 SMALLEST = 1e-300
@@ -93,8 +97,8 @@ class Forecaster:
     method : str
     descriptor_names : tuple of str
         Descriptors that the models read, in order; the coordinates of `hyperforecast.settings` follow.
-    models : dict of str to TreeEnsemble
-        Those of `MODELS`, and one by the name of each setting where direct forecasts advise.
+    models : dict of str to TreeEnsemble or NetworkEnsemble
+        Those of `MODELS`, `NETWORK`, and one by the name of each setting where direct forecasts advise.
     ranking : {"outcome", "direct"}
         What orders candidates: the expected outcome, or nearness to directly forecast settings.
     thresholds : dict of str to float
@@ -202,10 +206,12 @@ class BoundaryForecast:
     def shortfall(self, settings):
         """Return how far (n,) each settings is expected to stay from the best accuracy on all classes here; at most 0.
 
-        A model of its own: it spends nothing on what differs between boundaries, and orders settings better than
-        differences of `outcome`.
+        Models of their own, the mean of trees and networks: they spend nothing on what differs between boundaries, and
+        order settings better than differences of `outcome`. Networks know shortfalls up to 0.3 only.
         """
-        return np.minimum(self._raw("shortfall", self.coordinates(settings)), 0)
+        coordinates = self.coordinates(settings)
+        parts = [self._raw(name, coordinates) for name in ("shortfall", NETWORK) if name in self.forecaster.models]
+        return np.minimum(sum(parts) / len(parts), 0)
 
     def divergence(self, settings):
         """Return the probability (n,) that each of a list of `Settings` diverges."""
@@ -334,7 +340,8 @@ def _from_bundle(bundle, checksum):
     names = tuple(facts["descriptor_names"])
     if not all(isinstance(name, str) for name in names) or not set(facts["influential"]) <= set(names):
         raise InputError("influential", "must be among the descriptors", facts["influential"])
-    models = {name: TreeEnsemble.from_arrays(arrays, f"{name}_") for name in facts["models"]}
+    models = {name: (NetworkEnsemble if name == NETWORK else TreeEnsemble).from_arrays(arrays, f"{name}_")
+              for name in facts["models"]}
     needed = {*MODELS, *(SettingsBox(method).names if ranking == "direct" else ())}
     n_features = len(names) + len(COORDINATES)
     if not needed <= set(models) or any(model.n_features != n_features for model in models.values()):

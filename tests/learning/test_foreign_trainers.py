@@ -13,7 +13,7 @@ from hyperforecast.increments import check_increment
 from hyperforecast.learning import HeadTrainer, Job, close_boundary, open_boundary, predict_codes, trainer, try_settings
 from hyperforecast.settings import Plan, Settings, SettingsBox
 from hyperforecast.workshop.contest import run_contest
-from hyperforecast.workshop.fitting import fit_forecaster, load_dataset, models
+from hyperforecast.workshop.fitting import fit_forecaster, load_dataset, models, networks
 from hyperforecast.workshop.gathering import RecordsFile, gather, run_trajectory
 from hyperforecast.workshop.searching import prepare_search
 from hyperforecast.workshop.streams import load_streams
@@ -65,6 +65,7 @@ def forecaster(gathered):
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(models, "ROUNDS", 20)
         patch.setattr(models, "SMALL_ROUNDS", 10)
+        patch.setattr(networks, "STEPS", 40)
         patch.setattr(models, "LARGE", {"num_leaves": 31, "min_data_in_leaf": 20})
         return fit_forecaster(load_dataset(gathered, "wa"), recipe={"trainer": "not ours"})
 

@@ -11,7 +11,7 @@ from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.forecasting import Constant
 from hyperforecast.settings import COORDINATES, LEARNING_RATES, REGULARIZATIONS, Settings, SettingsBox, scale_free
 from hyperforecast.workshop.fitting import (
-    Dataset, constant_outcome, fit_constants, fit_forecaster, hold_out, load_dataset, models,
+    Dataset, constant_outcome, fit_constants, fit_forecaster, hold_out, load_dataset, models, networks,
 )
 
 
@@ -19,6 +19,7 @@ from hyperforecast.workshop.fitting import (
 def few_trees(monkeypatch):
     monkeypatch.setattr(models, "ROUNDS", 8)
     monkeypatch.setattr(models, "SMALL_ROUNDS", 5)
+    monkeypatch.setattr(networks, "STEPS", 40)
 
 
 @pytest.fixture(params=["wa", "ewc"])
@@ -317,6 +318,8 @@ def test_two_fits_with_one_seed_are_the_same_and_another_seed_is_another(dataset
     assert first.recipe["note"] == "x" and first.recipe["seed"] == 1
 
 
+# Python's warning filters are shared by threads.
+@pytest.mark.filterwarnings("ignore::sklearn.exceptions.ConvergenceWarning")
 def test_a_fit_does_not_depend_on_the_number_of_workers(datasets):
     with joblib.parallel_config(backend="threading"):
         one, two = (fit_forecaster(datasets["ewc"], recipe={}, workers=workers) for workers in (1, 2))
@@ -328,7 +331,7 @@ def test_the_recipe_tells_what_the_forecaster_was_made_of(dataset, forecasters):
     assert recipe["boundaries"] == dict(zip(*np.unique(dataset.sources, return_counts=True)))
     assert recipe["attempts"] == len(dataset.all)
     assert [one["source"] for one in recipe["held_out"]] == sorted(set(dataset.sources))
-    assert set(recipe["versions"]) == {"hyperforecast", "numpy", "lightgbm"}
+    assert set(recipe["versions"]) == {"hyperforecast", "numpy", "lightgbm", "scikit-learn"}
 
 
 def test_thresholds_are_finite_with_few_sources(forecasters):

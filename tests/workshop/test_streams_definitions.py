@@ -13,7 +13,7 @@ from hyperforecast.checks import InputError
 from hyperforecast.workshop.streams import FAMILIES, LOCKED, OPEN_SETS, load_streams
 
 FOLDER = pathlib.Path(__file__).parents[2] / "bench_streams"
-CONTESTS = ("contest_digits", "contest_languages", "contest_open", "locked")
+CONTESTS = ("contest_digits_ratdat", "contest_fonts_shuttle", "contest_languages_olive_vowel", "locked")
 FILES = (*CONTESTS, "gather_open", "gather_synthetic", "demo_small")
 
 DIGITS = 'name = "d"\nsource = "digits"\n'

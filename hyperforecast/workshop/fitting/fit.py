@@ -9,11 +9,12 @@ import numpy as np
 from hyperforecast.checks import check_whole
 from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.forecasting import (
-    DIVERGENCE_PRICE, RANGES, Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
+    DIVERGENCE_PRICE, NETWORK, RANGES, Familiarity, Forecaster, TreeEnsemble, grouped_conformal_threshold, with_checksum,
 )
 from hyperforecast.workshop.fitting.constants import constant_outcome, fit_constants
 from hyperforecast.workshop.fitting.models import (
     SMALL, source_weights, train, train_direct, train_later, train_outcomes,
+    train_shortfall_networks,
 )
 from hyperforecast.workshop.streams import FAMILIES
 
@@ -138,7 +139,8 @@ def _forecast_without(dataset, sources, seed):
     b = dataset.boundary[attempts]
     n_old, n_new = dataset.column("classes_old")[b], dataset.column("classes_new")[b]
     forecast["all"] = (n_old * forecast["old"] + n_new * forecast["new"]) / (n_old + n_new)
-    forecast["shortfall"] = models["shortfall"].predict(inputs, num_threads=1)
+    networks = train_shortfall_networks(dataset, ~own, seed=seed)
+    forecast["shortfall"] = (models["shortfall"].predict(inputs, num_threads=1) + networks.predict(inputs)) / 2
     described = dataset.descriptors[own]
     inputs_direct = np.hstack([described, np.full((len(described), dataset.coordinates.shape[1]), np.nan)])
     direct = np.stack([model.predict(inputs_direct, num_threads=1)
@@ -186,7 +188,8 @@ def fit_forecaster(dataset, *, recipe, folds=None, seed=0, workers=1, progress=N
                             for column in dataset.descriptors.T])
     forecaster = Forecaster(
         method=dataset.method, descriptor_names=names,
-        models={name: TreeEnsemble.from_dump(booster.dump_model()) for name, booster in boosters.items()},
+        models={**{name: TreeEnsemble.from_dump(booster.dump_model()) for name, booster in boosters.items()},
+                NETWORK: train_shortfall_networks(dataset, everything, seed=seed)},
         ranking=ranking, thresholds=thresholds,
         familiarity=Familiarity.fit(dataset.descriptors, names, dataset.sources, seed=seed),
         raw_constant=raw, scale_free_constant=scale_free, constant_kind=kind, typical=typical,
@@ -195,7 +198,7 @@ def fit_forecaster(dataset, *, recipe, folds=None, seed=0, workers=1, progress=N
             **recipe, "seed": seed, "folds": folds, "boundaries": {str(s): int(n) for s, n in zip(sources, counts)},
             "attempts": len(dataset.all), "held_out": [one.as_dict() for one in held.figures],
             "gap_closed": {way: round(held.gap_closed(way), 4) for way in ("outcome", "direct")},
-            "versions": {package: metadata.version(package) for package in ("hyperforecast", "numpy", "lightgbm")},
+            "versions": {package: metadata.version(package) for package in ("hyperforecast", "numpy", "lightgbm", "scikit-learn")},
         },
     )
     return with_checksum(forecaster)

@@ -4,6 +4,7 @@ import lightgbm
 import numpy as np
 
 from hyperforecast.settings import SettingsBox
+from hyperforecast.workshop.fitting.networks import train_networks
 
 # Values chosen on folds of the training sources.
 PARAMETERS = {
@@ -21,6 +22,8 @@ FAR_WEIGHT = 0.1
 # Attempts farther behind the best than this are so many that every THINNED-th of them will do.
 FAR = 0.15
 THINNED = 3
+# Networks need not tell shortfalls beyond this from each other.
+FAR_BEHIND = 0.3
 # Attempts whose later outcome is not known but imputed count for this much.
 IMPUTED_WEIGHT = 0.2
 
@@ -51,6 +54,14 @@ def _taken(dataset):
     """Mask (N,) of the attempts that are fitted on: all near the ridge, every few far from it."""
     behind = dataset.best()[dataset.boundary] - dataset.all
     return (behind <= FAR) | (np.arange(len(behind)) % THINNED == 0)
+
+
+def train_shortfall_networks(dataset, boundaries, *, seed):
+    """Return a `NetworkEnsemble` of the shortfall, on the boundaries in a mask (B,) whose attempts can be compared."""
+    attempts = np.flatnonzero((boundaries & dataset.compared)[dataset.boundary] & _taken(dataset))
+    behind = (dataset.best()[dataset.boundary] - dataset.all)[attempts]
+    return train_networks(dataset.inputs(attempts), -np.minimum(behind, FAR_BEHIND), attempt_weights(dataset, attempts),
+                          seed=seed)
 
 
 def train_outcomes(dataset, boundaries, *, seed):
