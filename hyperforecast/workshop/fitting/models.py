@@ -72,14 +72,23 @@ def train_outcomes(dataset, boundaries, *, seed):
     attempts = np.flatnonzero(boundaries[dataset.boundary] & _taken(dataset))
     inputs, weights = dataset.inputs(attempts), attempt_weights(dataset, attempts)
     models = {name: train(inputs, getattr(dataset, name)[attempts], weights, seed=seed) for name in ("old", "new")}
-    compared = dataset.compared[dataset.boundary[attempts]]
-    judged = attempts[compared]
-    shortfall = (dataset.all - dataset.best()[dataset.boundary])[judged]
-    models["shortfall"] = train(inputs[compared], shortfall, attempt_weights(dataset, judged), size=LARGE, seed=seed)
+    return {**models, "shortfall": train_shortfall(dataset, boundaries, seed=seed),
+            "diverged": train_divergence(dataset, boundaries, seed=seed)}
+
+
+def train_shortfall(dataset, boundaries, *, seed):
+    """Return a Booster of how far attempts stay from the best of their boundary, on compared ones of a mask (B,)."""
+    attempts = np.flatnonzero((boundaries & dataset.compared)[dataset.boundary] & _taken(dataset))
+    shortfall = (dataset.all - dataset.best()[dataset.boundary])[attempts]
+    return train(dataset.inputs(attempts), shortfall, attempt_weights(dataset, attempts), size=LARGE, seed=seed)
+
+
+def train_divergence(dataset, boundaries, *, seed):
+    """Return a Booster of the probability of divergence, on the boundaries in a mask (B,)."""
+    attempts = np.flatnonzero(boundaries[dataset.boundary] & _taken(dataset))
     even = source_weights(dataset.sources[dataset.boundary[attempts]])
-    models["diverged"] = train(inputs, dataset.diverged[attempts].astype(float), even, objective="binary", size=SMALL,
-                               seed=seed)
-    return models
+    return train(dataset.inputs(attempts), dataset.diverged[attempts].astype(float), even, objective="binary", size=SMALL,
+                 seed=seed)
 
 
 def train_later(dataset, boundaries, *, seed):
