@@ -1,4 +1,4 @@
-"""Commands for base: demo, gather, merge, fit, search, contest, report."""
+"""Commands for base: demo, gather, merge, fit, rebuild, search, contest, report."""
 
 import os
 
@@ -42,6 +42,12 @@ def add_commands(command):
     fit.add_argument("--folds", type=int, metavar="N", help="groups of sources held out together (each alone)")
     fit.add_argument("--seed", type=int, default=0, help="(%(default)s)")
     add_workers(fit)
+
+    rebuild = command("rebuild", _rebuild, "Rebuild a forecaster from its recipe, round by round, the same to the bit; resumes.")
+    rebuild.add_argument("--recipe", required=True, metavar="FILE", help="TOML; models/recipe.toml made those that ship")
+    rebuild.add_argument("--method", required=True, choices=METHODS)
+    rebuild.add_argument("--folder", required=True, metavar="DIR", help="for records and forecasters; made if need be")
+    add_workers(rebuild)
 
     search = command("search", _search, "Search settings for an increment, attempt by attempt; slower than advice.")
     add_device(search)
@@ -136,13 +142,12 @@ def _merge(options):
 
 def _fit(options):
     from hyperforecast.forecasting import save_forecaster
-    from hyperforecast.workshop.fitting import fit_forecaster, load_dataset
+    from hyperforecast.workshop.fitting import Fit, fit_records
     from hyperforecast.workshop.gathering import RecordsFile
 
-    records = RecordsFile(options.records)
-    dataset = load_dataset(records, options.method, without=options.without)
-    forecaster = fit_forecaster(
-        dataset, recipe={"without": sorted(options.without)}, folds=options.folds, seed=checked_seed(options), workers=checked_workers(options),
+    forecaster = fit_records(
+        RecordsFile(options.records), options.method, Fit(tuple(options.without), options.folds), seed=checked_seed(options),
+        workers=checked_workers(options),
         progress=lambda one: progress(f"held out {one.source}: {one.boundaries} boundaries"))
     save_forecaster(options.forecaster, forecaster)
     recipe = forecaster.recipe
@@ -155,6 +160,25 @@ def _fit(options):
           f"Gap closed: outcome models {recipe['gap_closed']['outcome']:.2f}, "
           f"direct regressors {recipe['gap_closed']['direct']:.2f}; the {forecaster.ranking} models advise.",
           f"{options.forecaster}: {os.path.getsize(options.forecaster)} bytes, checksum {forecaster.checksum[:12]}"])
+
+
+def _rebuild(options):
+    from hyperforecast.forecasting import load_forecaster
+    from hyperforecast.workshop.fitting import read_recipe, rebuild
+
+    path = rebuild(read_recipe(options.recipe), options.method, options.folder, workers=checked_workers(options),
+                   progress=progress)
+    made, shipped = load_forecaster(path), load_forecaster(options.method)
+    same = made.checksum == shipped.checksum
+    others = {name: (made.recipe["versions"][name], version) for name, version in shipped.recipe["versions"].items()
+              if made.recipe["versions"][name] != version}
+    lines = [f"{path}: checksum {made.checksum[:12]}; " + (
+        "the one that ships, to the bit." if same else f"the one that ships has {shipped.checksum[:12]}.")]
+    if others:
+        lines.append("Made with other versions: " + ", ".join(
+            f"{name} {here}, it was {there}" for name, (here, there) in others.items()))
+    say(options, {"forecaster": str(path), "checksum": made.checksum, "shipped": shipped.checksum, "same": same,
+                  "versions": made.recipe["versions"]}, lines)
 
 
 def _search(options):

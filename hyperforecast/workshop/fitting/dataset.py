@@ -82,7 +82,7 @@ class Dataset:
         return self.sources != source
 
 
-def load_dataset(records, method, *, without=()):
+def load_dataset(records, method, *, without=(), only=None):
     """Return the `Dataset` of one method in a `RecordsFile`.
 
     Parameters
@@ -90,17 +90,24 @@ def load_dataset(records, method, *, without=()):
     records : RecordsFile
     method : str
     without : sequence of str
-        Sources to leave out.
+        Sources to leave out; the records must know them.
+    only : set of str, optional
+        Keys of the trajectories to read; all by default.
 
     Raises
     ------
     InputError
-        If fewer than two sources remain whose boundaries were searched; records of devices alone will not do.
+        If a source to leave out is not there, or fewer than two sources remain whose boundaries were searched; records of
+        devices alone will not do.
     """
     names = list(DESCRIPTORS)
     descriptors, sources, trajectories, most_kept = [], [], [], []
     parts = {name: [] for name in ("boundary", "coordinates", "points", "logs", "old", "new", "all", "after", "diverged")}
+    known = set()
     for trajectory in records.trajectories(method=method):
+        if only is not None and trajectory.key not in only:
+            continue
+        known.add(trajectory.source)
         if trajectory.source in without:
             continue
         for one in trajectory.boundaries:
@@ -109,7 +116,7 @@ def load_dataset(records, method, *, without=()):
             old = np.array([attempt.accuracy_old for attempt in one.attempts])
             new = np.array([attempt.accuracy_new for attempt in one.attempts])
             after = np.array([[attempt.after_one, attempt.after_two] for attempt in one.attempts], dtype=np.float64)
-            known = ~np.isnan(after)
+            followed = ~np.isnan(after)
             parts["boundary"].append(np.full(len(settings), len(sources)))
             parts["coordinates"].append(scale_free(settings, {name: one.descriptors[name] for name in SCALES}))
             parts["points"].append(box.to_unit(settings))
@@ -118,12 +125,15 @@ def load_dataset(records, method, *, without=()):
             parts["new"].append(new)
             parts["all"].append((one.classes_old * old + one.classes_new * new) / (one.classes_old + one.classes_new))
             with np.errstate(invalid="ignore"):
-                parts["after"].append(np.where(known, after, 0).sum(axis=1) / known.sum(axis=1))
+                parts["after"].append(np.where(followed, after, 0).sum(axis=1) / followed.sum(axis=1))
             parts["diverged"].append(np.array([attempt.diverged for attempt in one.attempts]))
             descriptors.append([one.descriptors.get(name, np.nan) for name in names])
             sources.append(trajectory.source)
             trajectories.append(trajectory.key)
             most_kept.append(one.most_kept)
+    if not set(without) <= known:
+        raise InputError("without", f"must name sources of the {method} records: {', '.join(sorted(known))}",
+                         ", ".join(sorted(set(without) - known)))
     searched = {source for source, one in zip(sources, parts["all"]) if len(one) >= FEWEST_COMPARED}
     if len(searched) < 2:
         raise InputError(records.path, f"must hold searched {method} boundaries of at least two sources",
