@@ -4,8 +4,8 @@ from dataclasses import asdict, replace
 
 from hyperforecast.checks import InputError
 from hyperforecast.cli.options import (
-    add_device, add_forecaster, add_least_gain, add_preferences, add_settings, checked_seed, chosen_forecaster,
-    chosen_preferences, chosen_settings, least_gain,
+    add_device, add_extractor, add_forecaster, add_least_gain, add_preferences, add_settings, checked_seed,
+    chosen_forecaster, chosen_preferences, chosen_settings, least_gain,
 )
 from hyperforecast.cli.text import CAUTION, expected, listed, number, say, settings_lines, short, table, when_lines
 from hyperforecast.settings import METHODS, UPDATE_LIMITS, Plan
@@ -32,11 +32,13 @@ def add_commands(command):
     add_forecaster(advise)
     add_preferences(advise)
     add_least_gain(advise)
+    add_extractor(advise)
 
     update = command("update", _update, "Advise, learn, check, keep or roll back; the first one makes the device folder.")
     add_device(update)
     add_forecaster(update)
     add_preferences(update)
+    add_extractor(update)
     update.add_argument("--dry-run", action="store_true", help="stop after the advice")
     update.add_argument("--seed", type=int, default=0, help="of training (%(default)s)")
     update.epilog = EXIT_CODES
@@ -118,7 +120,8 @@ def _dry_run(options):
     generation = folder.read()
     increment = read_increment(options.increment, n_features=generation.carryover.n_features)
     return increment, update(folder, increment, forecaster=chosen_forecaster(options, folder, generation), dry_run=True,
-                             preferences=chosen_preferences(options, kept_preferences(generation.history)))
+                             preferences=chosen_preferences(options, kept_preferences(generation.history)),
+                             extractor=options.extractor, another_extractor=options.another_extractor)
 
 
 def _advice_lines(advice):
@@ -170,6 +173,7 @@ def _update(options):
     increment = read_increment(options.increment, n_features=n_features)
     report = update(folder, increment, plan=plan, forecaster=forecaster, settings=settings, by=options.by,
                     because=options.because, preferences=chosen_preferences(options, kept_preferences(history)),
+                    extractor=options.extractor, another_extractor=options.another_extractor,
                     seed=checked_seed(options), dry_run=options.dry_run, **_rules(options))
     say(options, report.as_dict(), _update_lines(report))
     return report.status or 0

@@ -18,6 +18,14 @@ def add_forecaster(parser):
                         "else the one that ships for the method)")
 
 
+def add_extractor(parser):
+    """Name the extractor that the features come from."""
+    parser.add_argument("--extractor", metavar="NAME", help="name or hash of what extracts the features; once given, "
+                        "another one is refused")
+    parser.add_argument("--another-extractor", action="store_true",
+                        help="features of another extractor are meant: neither its name nor its features are refused")
+
+
 def add_streams(parser):
     """Name stream definitions."""
     parser.add_argument("--streams", nargs="+", required=True, metavar="FILE", help="stream definitions in TOML")

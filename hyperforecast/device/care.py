@@ -12,7 +12,8 @@ from datetime import UTC, datetime
 
 import numpy as np
 
-from hyperforecast.checks import InputError, check_number
+from hyperforecast.checks import InputError, check_number, check_whole
+from hyperforecast.device.extractor import MOST_FEATURES, Sketch
 from hyperforecast.increments import Increment, check_features, check_labels
 from hyperforecast.storage import stored_array
 
@@ -51,12 +52,18 @@ class Care:
     steps : tuple of dict
         What was done by hand, oldest first.
     pin : Pin or None
+    extractor : str or None
+        What the user calls the extractor of the features.
+    sketch : Sketch or None
+        What its features look like; see `hyperforecast.device.extractor`.
     """
 
     floors: dict = field(default_factory=dict)
     acceptance: Increment | None = None
     steps: tuple = ()
     pin: Pin | None = None
+    extractor: str | None = None
+    sketch: Sketch | None = None
 
     def with_step(self, step, history, **told):
         """Return the care with one more step; `history` is that of updates, `told` what there is to tell of it."""
@@ -80,18 +87,20 @@ def _brief(value):
 def care_parts(care):
     """Return (facts, arrays) of a `Care`, to be stored in a bundle."""
     facts = {"floors": [[label, floor] for label, floor in care.floors.items()], "steps": list(care.steps),
-             "acceptance_classes": [], "pin": None if care.pin is None else dict(care.pin.__dict__)}
-    if care.acceptance is None:
-        return facts, {}
-    classes, codes = np.unique(care.acceptance.y, return_inverse=True)
-    facts["acceptance_classes"] = classes.tolist()
-    return facts, {"acceptance_X": np.array(care.acceptance.X, np.float32), "acceptance_y": codes.astype(np.int64)}
+             "acceptance_classes": [], "pin": None if care.pin is None else dict(care.pin.__dict__),
+             "extractor": care.extractor, "sketch_freedoms": None if care.sketch is None else care.sketch.freedoms}
+    arrays = {} if care.sketch is None else {"extractor_sketch": care.sketch.covariance}
+    if care.acceptance is not None:
+        classes, codes = np.unique(care.acceptance.y, return_inverse=True)
+        facts["acceptance_classes"] = classes.tolist()
+        arrays |= {"acceptance_X": np.array(care.acceptance.X, np.float32), "acceptance_y": codes.astype(np.int64)}
+    return facts, arrays
 
 
 def care_from(facts, arrays, *, n_features):
     """Return the `Care` of stored parts, every one checked; `InputError` if one is missing or not proper."""
-    if not isinstance(facts, dict) or set(facts) != {"floors", "steps", "acceptance_classes", "pin"}:
-        raise InputError("care", "must be floors, steps, acceptance_classes and pin", "others")
+    if not isinstance(facts, dict) or set(facts) != set(care_parts(Care())[0]):
+        raise InputError("care", f"must be {', '.join(care_parts(Care())[0])}", "others")
     floors, steps, labels = facts["floors"], facts["steps"], facts["acceptance_classes"]
     if not isinstance(floors, list) or not all(
             isinstance(one, list) and len(one) == 2 and type(one[0]) in (int, str) for one in floors):
@@ -109,8 +118,17 @@ def care_from(facts, arrays, *, n_features):
         if not ((codes >= 0) & (codes < len(labels))).all():
             raise InputError("acceptance_y", "must hold codes of acceptance_classes", "others")
         acceptance = Increment(X, check_labels(np.array(labels, object), len(labels), name="acceptance_classes")[codes])
+    if not isinstance(facts["extractor"], (str, type(None))):
+        raise InputError("extractor", "must be a name or null", "others")
+    sketch = None
+    if facts["sketch_freedoms"] is not None:
+        side = min(n_features, MOST_FEATURES)
+        sketch = Sketch(stored_array(arrays, "extractor_sketch", kinds="f", shape=(side, side)),
+                        check_whole("sketch_freedoms", facts["sketch_freedoms"], low=1))
+        if not np.isfinite(sketch.covariance).all():
+            raise InputError("extractor_sketch", "must hold finite numbers", "others")
     return Care({label: check_number("floor", floor, low=0, high=1) for label, floor in floors}, acceptance,
-                tuple(steps), _pin_from(facts["pin"]))
+                tuple(steps), _pin_from(facts["pin"]), facts["extractor"], sketch)
 
 
 def _pin_from(facts):

@@ -48,6 +48,7 @@ from hyperforecast.checks import InputError, check_number, check_whole
 from hyperforecast.describing import describe
 from hyperforecast.device.care import Care
 from hyperforecast.device.doubts import quick_doubts
+from hyperforecast.device.extractor import check_extractor_name, looks_foreign, sketch_of
 from hyperforecast.device.folder import DeviceFolder
 from hyperforecast.device.limits import Stopwatch, allowance, calibrated_speed, measured_speed
 from hyperforecast.device.pin import forecaster_for
@@ -67,6 +68,8 @@ FEWEST_ROWS_OF_CLASS = 4
 NOISE_DEVIATIONS = 2.0
 # Without alternatives, at the first update, the next try is this much slower.
 SLOWER = 0.1
+# Rows that the extractor is judged by.
+MOST_SKETCHED = 2000
 # Characters of who overruled the advice, and of why.
 LONGEST_TEXT = 1000
 
@@ -102,7 +105,7 @@ class UpdateReport:
 
 
 def update(folder, increment, *, plan=None, forecaster=None, trainer=None, settings=None, by=None, because=None,
-           preferences=None, retries=1, most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0,
+           preferences=None, extractor=None, another_extractor=False, retries=1, most_lost=MOST_LOST, most_lost_by_class=MOST_LOST_BY_CLASS, seed=0,
            dry_run=False, clock=time.perf_counter):
     """Learn an increment on a device, in one new generation of its folder; return an `UpdateReport`.
 
@@ -124,6 +127,10 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         Who overrules the advice and why, for the history: both, together with settings.
     preferences : Preferences, optional
         What advice is to care for, from now on; by default what it was told at earlier updates.
+    extractor : str, optional
+        What the user calls the extractor of the features; it must be what it was called before.
+    another_extractor : bool
+        Whether features of another extractor are meant; otherwise they are refused.
     retries : int
         How often a try that is not kept is followed by another one: with the next alternative of the advice, at the
         first update with a tenth of the learning rate. Settings that were given are tried once.
@@ -186,6 +193,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         boundary = open_boundary(plan, carryover, increment, seed=seed)
         trainer = HeadTrainer() if trainer is None else trainer
         _check_head(folder, trainer, carryover)
+        care = _of_extractor(Care() if before is None else before.care, boundary, extractor, another_extractor)
         preferences = kept_preferences(history) if preferences is None else preferences.checked()
 
         def advised(boundary):
@@ -202,7 +210,6 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
                                          most_rows=allowed.rows)
                 advice = advised(boundary)
         candidates = _candidates(plan, advice, settings, retries)
-        care = Care() if before is None else before.care
         check = _Check(trainer, boundary, increment, advice, most_lost, most_lost_by_class, care)
         tries = []
         for candidate in () if dry_run else candidates:
@@ -234,7 +241,10 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
             "limits": allowed and allowed.as_dict(), "seconds": round(watch.spent, 4),
         }
         stored = not dry_run and carryover is not None
-        generation = folder.store(carryover, [*history, entry], care, in_place=not entry["kept"]) if stored else None
+        generation = None
+        if stored:
+            care = care if entry["kept"] else before.care
+            generation = folder.store(carryover, [*history, entry], care, in_place=not entry["kept"])
     status = None if dry_run else UpdateStatus.KEPT if entry["kept"] else UpdateStatus.ROLLED_BACK
     return UpdateReport(status, generation, entry, advice, carryover)
 
@@ -243,6 +253,21 @@ def kept_preferences(history):
     """Return the `Preferences` that a device was last told, from its history; `InputError` if they are damaged."""
     told = [entry["preferences"] for entry in history if "preferences" in entry]
     return Preferences.from_dict("preferences in the history", told[-1]) if told else Preferences()
+
+
+def _of_extractor(care, boundary, name, another):
+    """Return the care with the extractor's name and sketch; features that look like another's are refused."""
+    name = check_extractor_name(care.extractor, name, another=another)
+    rows = boundary.Z[:MOST_SKETCHED] if len(boundary.y) > MOST_SKETCHED else boundary.Z
+    y = boundary.y[:len(rows)]
+    if boundary.carryover is not None and not another and care.sketch is not None \
+            and looks_foreign(care.sketch, boundary.carryover.summaries, rows, y):
+        raise InputError("increment", "must hold features of the extractor that the device has learned with"
+                         + (f", {care.extractor}" if care.extractor else ""),
+                         "features of another spread, order or place",
+                         "extract them with that one, or say --another-extractor if it is meant")
+    first = boundary.carryover is None or another
+    return replace(care, extractor=name, sketch=sketch_of(rows, y) if first else care.sketch)
 
 
 def _identity(history):

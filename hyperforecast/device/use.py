@@ -231,6 +231,8 @@ def roll_back(folder, *, because=None):
         classes = before.carryover.classes.tolist()
         if current is not None and current.carryover.classes.tolist()[:len(classes)] != classes:
             care = replace(before.care, steps=care.steps, pin=care.pin)
+        # The extractor belongs to what was learned from it.
+        care = replace(care, extractor=before.care.extractor, sketch=before.care.sketch)
         known = {one["number"] for one in before.history if _stands(one)}
         undone = [one["number"] for one in history if _stands(one) and one["number"] not in known]
         again = [one["number"] for one in history if one.get("undone") and one["number"] in known]
