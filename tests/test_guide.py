@@ -27,7 +27,8 @@ def test_numbers_are_renewed_and_what_is_left_out_stays_left_out():
 
 def test_commands_of_the_guide_only():
     lines = ["    $ before", guide.HEADING, "Text.", "", "    $ hyperforecast a \\", "          --b c    # exit code 3",
-             "    output", "    ...", "", "    $ hyperforecast d", "    $ hyperforecast e", "", "## Next", "    $ after"]
+             "    output", "    ...", "", "    $ hyperforecast d", "    $ hyperforecast e", "", "## Next",
+             "    $ after"]
     found = guide.commands(lines)
     assert [(one.line, one.status, lines[one.start:one.end]) for one in found] == [
         ("hyperforecast a --b c", 3, ["    output", "    ..."]), ("hyperforecast d", 0, []), ("hyperforecast e", 0, [])]

@@ -43,6 +43,7 @@ th, td { padding: .25rem .6rem; border-bottom: 1px solid var(--rule); text-align
 thead th { border-bottom: 2px solid var(--ink); vertical-align: bottom; }
 tbody th { font-weight: 500; overflow-wrap: anywhere; }
 tbody th:not(.number) { min-width: 8rem; }
+@media screen { table:not(.heat) td:not(.number) { min-width: 6.5rem; } }
 .number { text-align: right; white-space: nowrap; }
 .heat { width: 100%; }
 .heat td { padding: .2rem .3rem; text-align: right; border: 1px solid #fff; print-color-adjust: exact;
