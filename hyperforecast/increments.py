@@ -12,7 +12,6 @@ import math
 import shutil
 import struct
 import sys
-import tempfile
 import zipfile
 from dataclasses import dataclass
 from pathlib import Path
@@ -238,6 +237,8 @@ def _read_member(path, archive, member):
 
 def _streamed(path, info, stream):
     """Read a member to its end, which checks it; return a file that holds it unpacked, and where it begins there."""
+    import tempfile
+
     deflated = info.compress_type != zipfile.ZIP_STORED
     if deflated and shutil.disk_usage(tempfile.gettempdir()).free < info.file_size:
         raise InputError(path, f"must find room in {tempfile.gettempdir()} to be unpacked", f"{info.file_size} bytes",

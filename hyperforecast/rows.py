@@ -11,7 +11,7 @@ import numpy as np
 from hyperforecast.checks import InputError
 
 # Bytes of rows that are read at a time: small enough for the processor's cache where they are only summed up.
-SUMMED_BYTES, CHUNK_BYTES = 2**19, 2**23
+SUMMED_BYTES, CHUNK_BYTES = 2**19, 2**22
 # In standard deviations.
 FAR_FROM_ZERO = 4
 # Rows in rising order that fill at least this share of their span are read in one go.

@@ -14,7 +14,7 @@ from hyperforecast.checks import InputError, check_choice, check_keys, check_num
 METHODS = ("ewc", "lwf", "icarl", "wa")
 REHEARSAL_METHODS = ("icarl", "wa")
 # Parts of a plan that hold for one update as well as for another; None is no limit.
-UPDATE_LIMITS = ("time_limit",)
+UPDATE_LIMITS = ("time_limit", "working_memory")
 
 # Ranges of every policy, search and design; all are covered on a logarithmic scale.
 LEARNING_RATES = (1e-5, 1.0)
@@ -75,6 +75,9 @@ class Plan:
         Most exemplars held in all, check rows included; or bytes, as "2 MB" (10^6) or "512 KiB" (2^10).
     time_limit : float in [0.001, 1e7], or None
         Seconds that an update may take; passes are planned to fit, see `hyperforecast.device.limits`.
+    working_memory : str or None
+        Bytes that an update may hold at once, as "200 MB": increment, carryover and all that is made of them, beside
+        Python and its libraries.
     """
 
     method: str = "wa"
@@ -83,6 +86,7 @@ class Plan:
     batch_size: int = 32
     memory_limit: int | str = 2000
     time_limit: float | None = None
+    working_memory: str | None = None
 
     def checked(self):
         """Return this plan, with Python's own numbers, if it is valid, else raise `InputError`."""
@@ -97,7 +101,20 @@ class Plan:
             passes=check_whole("passes", self.passes, low=1, high=10_000),
             batch_size=check_whole("batch_size", self.batch_size, low=1, high=65_536), memory_limit=limit,
             time_limit=self.time_limit if self.time_limit is None else
-            check_number("time_limit", self.time_limit, low=1e-3, high=1e7))
+            check_number("time_limit", self.time_limit, low=1e-3, high=1e7), working_memory=self._working_memory())
+
+    def _working_memory(self):
+        text = self.working_memory
+        if text is not None:
+            if not isinstance(text, str):
+                raise InputError("working_memory", 'must be bytes such as "200 MB"', repr(text))
+            parse_bytes("working_memory", text)
+        return text
+
+    @property
+    def working_bytes(self):
+        """Bytes that an update may hold at once, infinite without a limit."""
+        return np.inf if self.working_memory is None else parse_bytes("working_memory", self.working_memory)
 
     def without_limits(self):
         """Return the plan without the limits that may change from update to update."""
@@ -134,7 +151,8 @@ def parse_bytes(name, text):
     """Return the bytes that a text such as "2 MB" or "512 KiB" names; `name` is what errors call it."""
     match = re.fullmatch(r"\s*([0-9]{1,15}(?:\.[0-9]{1,15})?)\s*([A-Za-z]+)\s*", text)
     if not match or match[2].lower() not in UNITS or float(match[1]) * UNITS[match[2].lower()] < 1:
-        raise InputError(name, 'must be a number of exemplars, or of bytes such as "2 MB" or "512 KiB"', repr(text))
+        exemplars = "a number of exemplars, or of " if name == "memory_limit" else ""
+        raise InputError(name, f'must be {exemplars}bytes such as "2 MB" or "512 KiB"', repr(text))
     return int(float(match[1]) * UNITS[match[2].lower()])
 
 

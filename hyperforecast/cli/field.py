@@ -15,6 +15,7 @@ PLAN_HELP = {
     "passes": "passes over the rows", "batch_size": "rows of a minibatch",
     "memory_limit": 'most exemplars held, or bytes as "2 MB"',
     "time_limit": "seconds that an update may take, reading the increment aside; none lifts it",
+    "working_memory": 'bytes that an update may hold at once, as "200 MB"; none lifts it',
 }
 EXIT_CODES = ("Exit codes: 0 kept, or the end of a dry run; 1 a fault of the program; 2 bad input, nothing was "
               "changed; 3 rolled back, only the history has grown; 4 another update is at work in the folder, try again later; "
@@ -214,13 +215,17 @@ def _plan_arguments(given):
 
 def limits_lines(entry):
     """Lines that say what an update of the history was planned to take, and what was given up for it."""
-    limits = entry["limits"]
+    limits, lines = entry["limits"], []
     if limits is None:
-        return []
-    return [f"Planned: {limits['passes']} passes over {limits['rows']} rows in {limits['seconds_planned']:.2g} s, at "
-            f"{limits['speed']:.2g} operations a second as measured in "
-            f"{'earlier updates' if limits['speed_from'] == 'updates' else 'a short training'}",
-            *(f"  given up: {one}" for one in limits["given_up"])]
+        return lines
+    time, memory = limits["time"], limits["memory"]
+    if time is not None:
+        source = "earlier updates" if time["speed_from"] == "updates" else "a short training"
+        lines.append(f"Planned: {time['passes']} passes over {time['rows']} rows in {time['seconds_planned']:.2g} s, "
+                     f"at {time['speed']:.2g} operations a second as measured in {source}")
+    if memory is not None:
+        lines.append(f"Planned: at most {memory['bytes_planned'] / 1e6:.1f} MB of working memory")
+    return [*lines, *(f"  given up: {one}" for one in limits["given_up"])]
 
 
 def _update_lines(report):

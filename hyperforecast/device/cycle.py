@@ -27,8 +27,8 @@ An entry of the history, a JSON-able dict, tells of one update:
                             without check rows, and before it was known)
     earlier_tries           the tries before it, each with the same eleven
     kept                    whether the last try was kept; otherwise the device carries on as before
-    limits                  null without a time limit; else what was planned (`hyperforecast.device.limits.Allowance`),
-                            its `given_up` in words
+    limits                  null without limits; else `time` and `memory`, what was planned (`Allowance` and `Room` of
+                            `hyperforecast.device.limits`) or null, and all that was `given_up`, in words
     seconds                 spent on the update
     outcomes                only where labels came later: see `hyperforecast.device.use.record_outcome`
     undone                  only where it was undone by hand: when; see `hyperforecast.device.use.roll_back`
@@ -50,7 +50,7 @@ from hyperforecast.device.care import Care
 from hyperforecast.device.doubts import quick_doubts
 from hyperforecast.device.extractor import check_extractor_name, looks_foreign, sketch_of
 from hyperforecast.device.folder import DeviceFolder
-from hyperforecast.device.limits import Stopwatch, allowance, calibrated_speed, measured_speed
+from hyperforecast.device.limits import Stopwatch, allowance, calibrated_speed, measured_speed, room
 from hyperforecast.device.pin import forecaster_for
 from hyperforecast.device.status import UpdateStatus
 from hyperforecast.forecasting import Advice, Preferences, advise_settings, opening_settings
@@ -190,7 +190,9 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
         plan = _agreed_plan(plan, carryover, increment)
         watch = Stopwatch(clock, plan.time_limit, started)
         seed = boundary_seed(seed, carryover)
-        boundary = open_boundary(plan, carryover, increment, seed=seed)
+        fits = None if plan.working_memory is None else room(plan, carryover, increment)
+        rows = {} if fits is None else {"held": fits.held, "most_rows": fits.rows}
+        boundary = open_boundary(plan, carryover, increment, seed=seed, **rows)
         trainer = HeadTrainer() if trainer is None else trainer
         _check_head(folder, trainer, carryover)
         care = _of_extractor(Care() if before is None else before.care, boundary, extractor, another_extractor)
@@ -206,8 +208,10 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
             spent = watch.spent - spent
             allowed = _allowed(trainer, boundary, increment, history, watch, spent, seed)
             if allowed.given_up:
-                boundary = open_boundary(replace(plan, passes=allowed.passes), carryover, increment, seed=seed,
-                                         most_rows=allowed.rows)
+                # Its rows go before others come.
+                boundary = None
+                rows["most_rows"] = allowed.rows
+                boundary = open_boundary(replace(plan, passes=allowed.passes), carryover, increment, seed=seed, **rows)
                 advice = advised(boundary)
         candidates = _candidates(plan, advice, settings, retries)
         check = _Check(trainer, boundary, increment, advice, most_lost, most_lost_by_class, care)
@@ -238,7 +242,7 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
             **_advised(advice), "preferences": preferences.as_dict(), "overruled": overruled,
             **(tries[-1] if tries else {"settings": candidates[0].as_dict()}), "earlier_tries": tries[:-1],
             "kept": bool(tries) and not tries[-1]["reasons"],
-            "limits": allowed and allowed.as_dict(), "seconds": round(watch.spent, 4),
+            "limits": _limits(allowed, fits), "seconds": round(watch.spent, 4),
         }
         stored = not dry_run and carryover is not None
         generation = None
@@ -292,6 +296,14 @@ def _allowed(trainer, boundary, increment, history, watch, advising, seed):
         speed, source = calibrated_speed(trainer, boundary.plan, boundary.carryover, increment, seed=seed,
                                          clock=watch.clock), "calibration"
     return allowance(trainer, boundary, seconds=watch.left - advising, speed=speed, speed_from=source)
+
+
+def _limits(allowed, fits):
+    """Return what the history tells of the limits of an update."""
+    if allowed is None and fits is None:
+        return None
+    return {"time": allowed and allowed.as_dict(), "memory": fits and fits.as_dict(),
+            "given_up": [words for one in (allowed, fits) if one is not None for words in one.given_up]}
 
 
 def _check_head(folder, trainer, carryover):

@@ -12,7 +12,7 @@ from hyperforecast.settings import KEPT_PER_CLASS, Plan
 # Rows of each class held back from training, for descriptors and checks.
 MOST_CHECK_ROWS = 8
 # Exemplars are chosen among so many bytes of rows, where the rows are not held in memory.
-CANDIDATE_BYTES = 2**25
+CANDIDATE_BYTES = 2**24
 # Standardized features beyond this many standard deviations are cut to it.
 LARGEST_Z = 10.0
 
@@ -273,7 +273,8 @@ def open_boundary(plan, carryover, increment, *, seed=0, most_rows=None, held=No
     InputError
         If the labels are of another kind than before, or the memory limit is too small.
     """
-    labels = np.unique(increment.y)
+    # Without the counts it would import numpy.ma, which takes long.
+    labels, _ = np.unique(increment.y, return_counts=True)
     old = labels[:0] if carryover is None else carryover.classes
     check_labels_kind(labels, old)
     is_new = ~np.isin(labels, old)

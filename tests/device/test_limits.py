@@ -82,7 +82,7 @@ def test_without_a_need_the_limit_changes_no_bit(tmp_path, forecasters, method):
         report = update(tmp_path / name, SECOND, forecaster=forecasters[method], **LENIENT)
         assert report.status == UpdateStatus.KEPT
         assert (report.entry["limits"] is None) == (name == "free")
-    assert report.entry["limits"]["given_up"] == [] and report.entry["limits"]["passes"] == 20
+    assert report.entry["limits"]["given_up"] == [] and report.entry["limits"]["time"]["passes"] == 20
     assert content(tmp_path / "free") == content(tmp_path / "limited")
 
 
@@ -94,7 +94,7 @@ def test_passes_are_planned_from_counted_operations_and_a_measured_speed(tmp_pat
     # Time for eight passes and a half; what measures the speed goes off it.
     limit = 8.5 * once / SPEED / 0.7
     report = update(folder, FIRST, plan=replace(plan, time_limit=limit), trainer=trainer, clock=clock, **LENIENT)
-    limits = report.entry["limits"]
+    limits = report.entry["limits"]["time"]
     calibration = trainer.jobs[:2]
     spent = sum(trainer.operations_of(job) for job in calibration) / SPEED
     passes = int((limit - spent) * 0.7 * SPEED / once)
@@ -115,7 +115,7 @@ def test_passes_are_planned_from_counted_operations_and_a_measured_speed(tmp_pat
     limit, before = 5.5 * once / SPEED / 0.7, len(trainer.jobs)
     report = update(folder, SECOND, plan=replace(plan, time_limit=limit), trainer=trainer, clock=clock,
                     forecaster=forecasters[method], **LENIENT)
-    limits = report.entry["limits"]
+    limits = report.entry["limits"]["time"]
     assert (limits["passes"], limits["speed_from"]) == (5, "updates") and len(trainer.jobs) == before + 1
     assert limits["speed"] == pytest.approx(SPEED)
     assert report.entry["descriptors"]["passes"] == report.advice.descriptors["passes"] == 5
@@ -146,9 +146,9 @@ def test_if_no_pass_fits_a_share_of_every_class_is_trained_on(tmp_path, forecast
     limit = 0.5 * once / SPEED / 0.7
     report = update(folder, many, plan=replace(plan, time_limit=limit), trainer=trainer, clock=clock,
                     forecaster=forecasters[method], **LENIENT)
-    rows = report.entry["limits"]["rows"]
+    rows = report.entry["limits"]["time"]["rows"]
     total = 800 - 2 * report.entry["by_class"]["check_rows"][-1]
-    assert report.entry["limits"]["passes"] == 1 and total / 4 < rows <= total / 2
+    assert report.entry["limits"]["time"]["passes"] == 1 and total / 4 < rows <= total / 2
     job = trainer.jobs[-1]
     assert len(job.boundary.y) == report.entry["descriptors"]["rows"] in (rows - 1, rows)
     assert np.ptp(np.bincount(job.boundary.y)[3:]) <= 1
@@ -222,7 +222,7 @@ def test_another_try_is_made_if_it_fits(tmp_path, forecasters, tries_that_fit):
     limit = {1: 1.45, 2: 2.1}[tries_that_fit] * full
     report = update(folder, SECOND, plan=replace(plan, time_limit=limit), trainer=trainer, clock=clock,
                     forecaster=forecasters["wa"], **LENIENT)
-    assert report.entry["limits"]["passes"] == 20
+    assert report.entry["limits"]["time"]["passes"] == 20
     assert len(report.entry["earlier_tries"]) == tries_that_fit - 1 and report.entry["kept"] == (tries_that_fit == 2)
     reasons = [*report.entry["earlier_tries"], report.entry][0]["reasons"]
     assert reasons[0] == "training diverged" and len(reasons) == 3 - tries_that_fit
@@ -278,7 +278,7 @@ def test_the_command_line_sets_limits_and_rules(tmp_path, forecasters, capsys):
     code, told = run("second.npz", *second, "--most-lost", "0", "--most-lost-by-class", "0", "--retries", "2",
                      "--settings", "learning_rate=1", "--by", "test", "--because", "to forget", "--json")
     entry = json.loads(told.out)
-    assert code == UpdateStatus.ROLLED_BACK == 3 and entry["limits"]["speed_from"] == "updates"
+    assert code == UpdateStatus.ROLLED_BACK == 3 and entry["limits"]["time"]["speed_from"] == "updates"
     code, told = run("second.npz", *second, "--time-limit", "none", "--most-lost", "1", "--most-lost-by-class", "1",
                      "--json")
     assert json.loads(told.out)["limits"] is None
