@@ -89,6 +89,21 @@ def test_people_are_on_the_page(generation):
     assert "floor (class bolt; floor 0.5)" in later
 
 
+def test_what_a_device_was_told_and_had_to_give_up_is_on_the_page(generation):
+    document = update_document(generation, 2, name="arm")
+    entry = document["update"]
+    advice = {**entry["advice"], "familiarity": {**entry["advice"]["familiarity"], "familiar": False,
+                                                 "why": ["more classes than any record"]}}
+    text = text_of(update_page({**document, "update": {
+        **entry, "advice": advice, "limits": {"given_up": ["3 of 6 passes"]}, "doubts": ["nut looks like Nut"] * 6,
+        "preferences": {"old_weight": 0.9, "now_weight": 1 / 3},
+        "unfamiliar": {"policy": "try 2", "tried": [{"check_accuracy": 0.75}, {"check_accuracy": -1.0}]}}}))
+    for told in ("not familiar", "Unlike the records: more classes than any record.", "Given up: 3 of 6 passes.",
+                 "In doubt: nut looks like Nut.", "2 more doubts", "Preferences: old weight 0.900.",
+                 "unlike the records: try 2; tried side by side, 75% on held-back rows."):
+        assert told in text
+
+
 def test_classes_come_in_the_order_of_the_device(generation):
     rows = class_rows(generation.history[1])
     assert [(one["class"], one["new"], one["arrived"]) for one in rows] == [

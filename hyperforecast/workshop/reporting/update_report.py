@@ -125,15 +125,12 @@ def _cut(text, longest):
 
 def _advised(page, entry):
     advice = entry["advice"]
-    columns, rows = ["setting"], [[name.replace("_", " ")] for name in entry["settings"]]
-    if advice is not None:
-        columns.append("advised")
-        rows = [[*row, value] for row, value in zip(rows, advice["settings"].values())]
+    chosen = {} if advice is None else {"advised": advice["settings"]}
     for place, one in enumerate([*entry["earlier_tries"], entry], 1):
-        columns.append("trained with" if not entry["earlier_tries"] else f"try {place}")
-        rows = [[*row, value] for row, value in zip(rows, one["settings"].values())]
+        chosen["trained with" if not entry["earlier_tries"] else f"try {place}"] = one["settings"]
+    rows = [[name.replace("_", " "), *(one[name] for one in chosen.values())] for name in entry["settings"]]
     overruled = entry["overruled"] if isinstance(entry["overruled"], dict) else None
-    page.table(columns, rows, caption=(
+    page.table(["setting", *chosen], rows, caption=(
         "Opening settings: at the first update nothing can be forgotten." if advice is None
         else "The advice was overruled." if overruled else "Settings, as advised and as trained with."))
     points = []
@@ -146,10 +143,16 @@ def _advised(page, entry):
             "the records know boundaries like this one." if familiarity["familiar"]
             else "not familiar, few records lie this far out; the advice is a guess.")
             + f" Probability of divergence {advice['divergence']:.3f}.")
+        points += [f"Unlike the records: {_cut(one, LONGEST_TEXT)}." for one in familiarity.get("why", ())]
         cared = ", ".join(f"{name.replace('_', ' ')} {shown(value)}" for name, value in
                           entry.get("preferences", {}).items() if value != getattr(Preferences(), name, None))
         points += [f"Preferences: {cared}."] if cared else []
         points += [f"{reason}." for reason in advice["reasons"] or ["No descriptor moved the advice from the usual"]]
+    unfamiliar = entry.get("unfamiliar")
+    if unfamiliar:
+        tried = [f"{one['check_accuracy']:.0%}" for one in unfamiliar["tried"] or () if one["check_accuracy"] >= 0]
+        points.append(f"Told what to do where a boundary is unlike the records: {unfamiliar['policy']}"
+                      + (f"; tried side by side, {', '.join(tried)} on held-back rows." if tried else "."))
     if entry.get("limits"):
         points += [f"Given up: {_cut(one, LONGEST_TEXT)}." for one in entry["limits"]["given_up"]]
     page.items(points)
