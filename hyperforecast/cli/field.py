@@ -7,7 +7,9 @@ from hyperforecast.cli.options import (
     add_device, add_extractor, add_forecaster, add_least_gain, add_preferences, add_settings, checked_seed,
     chosen_forecaster, chosen_preferences, chosen_settings, least_gain,
 )
-from hyperforecast.cli.text import CAUTION, expected, listed, number, say, settings_lines, short, table, when_lines
+from hyperforecast.cli.text import (
+    CAUTION, adviser_lines, expected, listed, number, say, settings_lines, short, table, when_lines,
+)
 from hyperforecast.settings import METHODS, UPDATE_LIMITS, Plan
 
 PLAN_HELP = {
@@ -253,7 +255,7 @@ def _update_lines(report):
 
 
 def _history(options):
-    from hyperforecast.device import DeviceFolder, step_in_words
+    from hyperforecast.device import DeviceFolder, advisers, step_in_words
 
     if options.schema:
         _print_schema("history")
@@ -269,7 +271,7 @@ def _history(options):
              "rolled back" if not one["kept"] else "undone" if one.get("undone") else "kept")
             for one in generation.history]
     names = ("update", "time", "rows", "new classes", "settings", "expected (90%)", "achieved", "old classes", "outcome")
-    lines = [table(names, rows)]
+    lines = [table(names, rows), *adviser_lines(advisers(generation.history))]
     lines += [f"update {one['number']}: {reason}" for one in generation.history for reason in one["reasons"]]
     lines += [f"update {one['number']}: {line}" for one in generation.history for line in overruled_lines(one)[:1]]
     lines += [f"update {one['number']}: {words}" for one in generation.history for words in

@@ -62,3 +62,9 @@ def when_lines(timing, signs):
     """Whether to update now, where there is something to say: more rows first, nothing new, or retraining at base."""
     lines = [str(timing)] if getattr(timing, "needed", None) is None or timing.pays else []
     return lines + [f"Time to retrain at base: {sign}" for sign in signs]
+
+
+def adviser_lines(advisers):
+    """Lines that say which forecasters advised which updates, from `hyperforecast.device.advisers`."""
+    return [f"forecaster {one['forecaster'][:16]}, version {one['version'] or 'unknown'}, advised update "
+            + ", ".join(map(str, one["updates"])) for one in advisers]

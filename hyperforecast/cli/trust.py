@@ -3,7 +3,7 @@
 import os
 
 from hyperforecast.checks import InputError
-from hyperforecast.cli.text import number, say, short, table
+from hyperforecast.cli.text import adviser_lines, number, say, short, table
 
 FEW = 5
 FILE_OR_SHIPPED = "FILE|shipped"
@@ -16,7 +16,8 @@ def add_commands(command):
     action = forecaster.add_mutually_exclusive_group()
     action.add_argument("--pin", metavar=FILE_OR_SHIPPED, help="copy it into the device folder; no other advises then")
     action.add_argument("--compare", metavar=FILE_OR_SHIPPED,
-                        help="what it would have advised and expected at this device's past boundaries")
+                        help="what it would have advised and expected at this device's past boundaries, beside the "
+                        "one that advises now")
     action.add_argument("--upgrade", metavar=FILE_OR_SHIPPED, help="compare, then pin it instead")
     action.add_argument("--unpin", action="store_true", help="let any forecaster advise again")
     forecaster.add_argument("--key", metavar="FILE", help="with --pin: public key (PEM) that it, and every upgrade, "
@@ -54,19 +55,13 @@ def _forecaster(options):
         return
     used = device.forecaster_for(folder, generation)
     pin = generation.care.pin
-    advised = {}
-    for entry in generation.history:
-        if entry["forecaster"]:
-            advised.setdefault((entry["forecaster"], entry.get("forecaster_version")), []).append(entry["number"])
-    document = {**_named(used), "pinned": pin is not None, "public_key": pin and pin.public_key, "advised": [
-        {"forecaster": checksum, "version": version, "updates": updates}
-        for (checksum, version), updates in advised.items()]}
+    document = {**_named(used), "pinned": pin is not None, "public_key": pin and pin.public_key,
+                "advised": device.advisers(generation.history)}
     how = "the one that ships, not pinned" if pin is None else \
         "pinned; upgrades must be signed" if pin.public_key else "pinned"
     say(options, document, [
         f"Forecaster {used.checksum[:16]}, version {used.version or 'unknown'}, for {used.method}: {how}",
-        *(f"  {checksum[:16]}, version {version or 'unknown'}, advised update {', '.join(map(str, updates))}"
-          for (checksum, version), updates in advised.items())])
+        *adviser_lines(document["advised"])])
 
 
 def _named(forecaster):

@@ -13,7 +13,7 @@ _MODULES = {
     "cycle": ("UpdateReport", "kept_preferences", "update"),
     "folder": ("DeviceFolder", "Generation", "carryover_bundle", "carryover_from"),
     "pin": (
-        "forecaster_for", "pin_forecaster", "pinned_path", "unpin_forecaster", "upgrade_forecaster",
+        "advisers", "forecaster_for", "pin_forecaster", "pinned_path", "unpin_forecaster", "upgrade_forecaster",
         "verify_pinned",
     ),
     "status": ("FolderBusy", "FolderDamaged", "FolderNotWritable", "UpdateStatus"),

@@ -47,6 +47,16 @@ def forecaster_for(folder, generation, *, given=None):
     return given
 
 
+def advisers(history):
+    """Return a list of {"forecaster", "version", "updates"}: which forecasters advised which updates of a history."""
+    found = {}
+    for entry in history:
+        if entry["forecaster"]:
+            found.setdefault((entry["forecaster"], entry.get("forecaster_version")), []).append(entry["number"])
+    return [{"forecaster": checksum, "version": version, "updates": updates}
+            for (checksum, version), updates in found.items()]
+
+
 def pinned_path(folder, pin):
     """Return the path of the copy that a `Pin` names."""
     return folder.path / f"{pin.checksum[:SHORT]}{ENDING}"

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from hyperforecast.device import step_in_words
+from hyperforecast.device import advisers, step_in_words
 from hyperforecast.workshop.reporting.charts import expected_and_achieved, line_chart
 from hyperforecast.workshop.reporting.page import Page
 from hyperforecast.workshop.reporting.update_report import CAUTION, class_rows, verdict, when
@@ -121,15 +121,12 @@ def _expectations(page, history):
 
 def _people(page, document):
     history = document["updates"]
-    advised = {}
-    for one in history:
-        if one["forecaster"]:
-            advised.setdefault((one["forecaster"][:16], one.get("forecaster_version") or "unknown"), []).append(
-                str(one["number"]))
+    advised = advisers(history)
     if advised:
         page.section("Forecasters")
         page.table(["forecaster", "version", "advised updates"],
-                   [[*name, ", ".join(numbers)] for name, numbers in advised.items()],
+                   [[one["forecaster"][:16], one["version"] or "unknown", ", ".join(map(str, one["updates"]))]
+                    for one in advised],
                    caption="By the first digits of their checksums.")
     overruled = [one for one in history if isinstance(one["overruled"], dict)]
     if overruled:
