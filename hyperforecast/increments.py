@@ -28,6 +28,8 @@ CHUNK_ROWS = 16_384
 # Features are held in memory up to this size, as they are or as float32.
 HELD_BYTES = 2**26
 BLOCK_BYTES = 2**20
+# No features that were measured are deflated so much: what does not stay in its file is not believed beyond.
+MOST_EXPANDED = 100
 # All labels of an array take the room of the longest.
 LONGEST_LABEL = 1000
 
@@ -206,7 +208,8 @@ def _read_npz(path, labelled):
         if not {"X.npy", "y.npy"} <= {*names, *(() if labelled else ("y.npy",))}:
             raise InputError(path, "must hold the arrays X and y" if labelled else "must hold the array X",
                              ", ".join(names) or "none")
-        return _read_member(path, archive, "X.npy"), _read_member(path, archive, "y.npy") if labelled else None
+        X = _read_member(path, archive, "X.npy")
+        return X, _read_member(path, archive, "y.npy", rows=len(X)) if labelled and _is_table(X) else None
 
 
 def _stays_in_file(shape, fortran, dtype):
@@ -215,7 +218,21 @@ def _stays_in_file(shape, fortran, dtype):
     return not fits and len(shape) == 2 and not fortran and dtype.kind in "fiub"
 
 
-def _read_member(path, archive, member):
+def _is_table(X):
+    """Whether there is use in reading labels; `check_features` says why not."""
+    return X.ndim == 2 and 0 not in X.shape
+
+
+def _check_label_header(shape, dtype, rows):
+    """Refuse labels that cannot be those of so many rows, before they are read."""
+    if shape != (rows,):
+        raise InputError("y", f"must be one label for each of the {rows} rows", f"shape {shape}")
+    if dtype.kind == "U" and dtype.itemsize > 4 * LONGEST_LABEL:
+        raise InputError("y", f"must hold labels of at most {LONGEST_LABEL} characters", dtype.itemsize // 4)
+
+
+def _read_member(path, archive, member, *, rows=None):
+    """Read features, or the labels of so many `rows`."""
     name = f"{path} ({member})"
     with archive.open(member) as stream:
         # The header is read through a small window: a hostile one cannot make us allocate.
@@ -228,6 +245,12 @@ def _read_member(path, archive, member):
     # Deflate cannot expand more than about 1032 times; far more is a lie in the directory.
     if present > 1100 * max(min(archive.getinfo(member).compress_size, path.stat().st_size), 1):
         raise InputError(name, "must not expand more than deflate can", f"{present} bytes")
+    if rows is not None:
+        _check_label_header(shape, dtype, rows)
+    elif present > max(HELD_BYTES, MOST_EXPANDED * archive.getinfo(member).compress_size) \
+            and not _stays_in_file(shape, fortran, dtype):
+        raise InputError(name, f"must be numbers, row after row in C order, to expand more than {MOST_EXPANDED} times",
+                         f"{present} bytes of {dtype}, shape {shape}{', Fortran order' if fortran else ''}")
     with archive.open(member) as stream:
         if member == "X.npy" and _stays_in_file(shape, fortran, dtype):
             file, start = _streamed(path, archive.getinfo(member), stream)
@@ -261,14 +284,16 @@ def _streamed(path, info, stream):
     return file, start
 
 
-def _map_npy(path):
+def _map_npy(path, *, rows=None):
     with open(path, "rb") as stream:
         shape, fortran, dtype = read_array_header(path, stream)
         offset = stream.tell()
     expected = offset + math.prod(shape) * dtype.itemsize
     if path.stat().st_size != expected:
         raise InputError(path, "must hold as many bytes as its header says", f"{path.stat().st_size}, not {expected}")
-    if _stays_in_file(shape, fortran, dtype):
+    if rows is not None:
+        _check_label_header(shape, dtype, rows)
+    elif _stays_in_file(shape, fortran, dtype):
         return FileRows(open(path, "rb"), path, offset=offset, shape=shape, dtype=dtype)
     return np.load(path, mmap_mode="r", allow_pickle=False)
 
@@ -279,7 +304,8 @@ def _read_npy_pair(path, labelled):
     labels = path.with_suffix(".labels.npy")
     if not labels.is_file():
         raise InputError(path, f"must have its labels beside it in {labels.name}", "no such file")
-    return _map_npy(path), np.array(_map_npy(labels))
+    X = _map_npy(path)
+    return X, np.array(_map_npy(labels, rows=len(X))) if _is_table(X) else None
 
 
 def _read_csv(path, labelled):

@@ -30,10 +30,14 @@ from hyperforecast.checks import InputError
 MANIFEST = "manifest.json"
 LARGEST_MANIFEST = 16 * 2**20
 LARGEST_ARRAY = 2**31
+# A file of bundles may unpack to so many bytes, or to so many times its own.
+LARGEST_EXPANDED, MOST_EXPANDED = 2**26, 100
 ARRAY_NAME = re.compile(r"[A-Za-z0-9_]{1,80}")
 ARRAY_TYPE = re.compile(r"[<>|][biufU][1-9][0-9]{0,5}")
 # Begins the line of a manifest that tells its checksum: no other key stands so far to the left.
 SEAL = b'\n "sha256": "'
+# Begins the last record of a zip file, of 22 bytes without the comment (PKWARE APPNOTE 4.3.16).
+END_OF_ZIP = b"PK\x05\x06"
 MOST_DIMENSIONS = 32
 # numpy's own limit, as every product of sides (those of no length aside) must fit a pointer.
 MOST_BYTES = 2**62
@@ -237,13 +241,18 @@ def bundle_checksum(bundle):
 
 
 def write_bundle_file(path, bundle):
-    """Write a bundle as one deflated zip file, the same bytes for the same content; return its checksum."""
+    """Write a bundle as one deflated zip file, the same bytes for the same content; return its checksum.
+
+    The archive's comment is the SHA-256 of all bytes before it.
+    """
     manifest, encoded = _encode(bundle)
     stream = io.BytesIO()
     with zipfile.ZipFile(stream, "w", zipfile.ZIP_DEFLATED, compresslevel=9) as archive:
         for name, data in [(MANIFEST, manifest), *((f"{name}.npy", data) for name, data in encoded.items())]:
             archive.writestr(zipfile.ZipInfo(name, (1980, 1, 1, 0, 0, 0)), data, zipfile.ZIP_DEFLATED, 9)
-    write_atomically(path, stream.getvalue())
+        archive.comment = bytes(64)
+    data = stream.getvalue()[:-64]
+    write_atomically(path, data + checksum(data).encode())
     return json.loads(manifest)["sha256"]
 
 
@@ -329,7 +338,15 @@ def read_bundle_file(path, kind, *, newest):
     """
     path = Path(path)
     data = read_bytes(path, largest=LARGEST_ARRAY)
+    sealed = data[-86:-82] == END_OF_ZIP and data[-66:-64] == b"\x40\x00" and data[-64:] == checksum(data[:-64]).encode()
+    # Files of before had no comment.
+    if not sealed and not (data[-22:-18] == END_OF_ZIP and data[-2:] == b"\0\0"):
+        raise InputError(path, f"must be a complete {kind} file", "altered content, or none of that kind",
+                         "copy it again from the source")
     with opened_zip(path, io.BytesIO(data), what=f"a complete {kind} file") as archive:
+        if sum(member.file_size for member in archive.infolist()) > max(LARGEST_EXPANDED, MOST_EXPANDED * len(data)):
+            raise InputError(path, f"must not expand more than {MOST_EXPANDED} times", "a file that does")
+
         def read_member(name, largest):
             if archive.getinfo(name).file_size > largest:
                 raise InputError(path, f"must hold a {name} of at most {largest} bytes", "more")

@@ -16,7 +16,7 @@ import json
 import os
 import re
 import shutil
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -213,6 +213,9 @@ class DeviceFolder:
                 sync_folder(self.path.absolute().parent)
             handle = os.open(self.path / LOCK, os.O_RDWR | os.O_CREAT, 0o666)
         except OSError as error:
+            if made:
+                with suppress(OSError):
+                    self.path.rmdir()
             raise FolderNotWritable(self.path, "must be a folder that can be written to", error.strerror) from None
         try:
             try:

@@ -23,7 +23,6 @@ from hyperforecast.workshop.fitting import fit_forecaster, load_dataset
 from hyperforecast.workshop.gathering import RecordsFile, run_trajectory
 from hyperforecast.workshop.streams import StreamDefinition
 
-KILLS = int(os.environ.get("HYPERFORECAST_KILLS", "12"))
 PLANS = {method: Plan(method, 8, 4, 16, 120) for method in METHODS}
 # Learns nothing and forgets nothing; forgets old classes for new ones.
 IDLE = Settings(1e-5, 1.0)
@@ -407,91 +406,6 @@ def test_an_update_while_another_is_at_work_is_refused(started, forecasters):
     folder = started()
     with DeviceFolder(folder).locked(), pytest.raises(FolderBusy):
         update(folder, clouds(SECOND), forecaster=forecasters["ewc"])
-
-
-# --- killed updates -------------------------------------------------------------------------------------------------
-
-# Imports once, then forks: each child updates until it is killed; the parent checks what is left, and goes on from it.
-KILLER = """
-import os, signal, sys, time
-import numpy as np
-from hyperforecast.device import DeviceFolder, update
-from hyperforecast.forecasting import load_forecaster
-from hyperforecast.increments import check_increment
-from hyperforecast.settings import Plan, Settings
-
-folder, forecaster, how, count = sys.argv[1], load_forecaster(sys.argv[2]), sys.argv[3], int(sys.argv[4])
-rng = np.random.default_rng(int(sys.argv[5]))
-idle = Settings(1e-5, 1.0)
-# A killed process loses nothing that it has handed to the system: without waiting for the disk the trials are quick.
-os.fsync = lambda handle: None
-
-def increment(number):
-    return check_increment(np.random.default_rng(number).normal(size=(30, 4)), np.arange(30) % (2 + number % 3))
-
-def one_update():
-    numbers = DeviceFolder(folder).numbers()
-    number = numbers[-1] if numbers else 0
-    return update(folder, increment(number), plan=None if numbers else Plan("ewc", 0, 1, 16, 4000),
-                  forecaster=forecaster, settings=idle, most_lost=1, most_lost_by_class=1)
-
-def killed_at_step(step):
-    last, run = None, 0
-
-    def counted(function):
-        def call(*args, **keywords):
-            nonlocal step, last, run
-            # Of many calls of one kind in a row only the first two count as steps.
-            last, run = function, run + 1 if function is last else 1
-            step -= run <= 2
-            if step == 0:
-                os.kill(os.getpid(), signal.SIGKILL)
-            return function(*args, **keywords)
-        return call
-    for name in ("fsync", "rename", "mkdir", "rmdir", "unlink"):
-        setattr(os, name, counted(getattr(os, name)))
-
-for _ in range(2):
-    one_update()
-died = 0
-for trial in range(1, count + 1):
-    child = os.fork()
-    if child == 0:
-        if how == "anywhere":
-            while True:
-                one_update()
-        killed_at_step(trial)
-        one_update()
-        os._exit(0)
-    if how == "anywhere":
-        time.sleep(rng.uniform(0, 0.1))
-        os.kill(child, signal.SIGKILL)
-    died += os.WIFSIGNALED(os.waitpid(child, 0)[1])
-    before = DeviceFolder(folder).read()
-    assert before.number == before.carryover.n_boundaries == before.history[-1]["number"]
-    report = one_update()
-    assert report.generation == report.entry["number"] == before.number + 1
-    names = set(os.listdir(folder))
-    assert names == {"lock", *(f"generation-{n:06d}" for n in DeviceFolder(folder).numbers()[-2:])}, names
-print(died)
-"""
-
-
-def run_killer(tmp_path, forecaster, how, count):
-    save_forecaster(tmp_path / "f.forecaster", forecaster)
-    arguments = [str(tmp_path / "arm"), str(tmp_path / "f.forecaster"), how, str(count), "0"]
-    run = subprocess.run([sys.executable, "-c", KILLER, *arguments], capture_output=True, text=True, env=ONE_THREAD)
-    assert run.returncode == 0, run.stderr
-    return int(run.stdout)
-
-
-def test_updates_killed_at_any_moment_leave_a_folder_that_opens_and_learns_on(tmp_path, forecasters):
-    assert run_killer(tmp_path, forecasters["ewc"], "anywhere", KILLS) == KILLS
-
-
-def test_updates_killed_before_each_step_of_storing_leave_a_folder_that_opens_and_learns_on(tmp_path, forecasters):
-    # mkdir, fsyncs of files, rename, fsync of the folder, and rename, unlinks and rmdir of the oldest: nine steps.
-    assert run_killer(tmp_path, forecasters["ewc"], "step", 11) == 9
 
 
 # --- the lower storey -----------------------------------------------------------------------------------------------
