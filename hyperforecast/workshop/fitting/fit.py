@@ -16,14 +16,11 @@ from hyperforecast.workshop.fitting.models import (
     SMALL, source_weights, train, train_direct, train_later, train_outcomes,
     train_shortfall_networks,
 )
-from hyperforecast.workshop.streams import FAMILIES
 
 MISS_RATE = 0.1
 # Attempts of each boundary whose errors calibrate the intervals: as many of the best forecast, where advice falls, as
 # of the others, where settings of the user's own may fall.
 CALIBRATED = 4
-# With fewer measured sources than this, invented ones are held out and calibrated on too.
-FEWEST_MEASURED = 3
 # Errors smaller than this do not make an interval narrower.
 SMALLEST_ERROR = 0.005
 
@@ -50,7 +47,7 @@ class SourceFigures:
 
 @dataclass(frozen=True)
 class HeldOut:
-    """Forecasts of the attempts of judged sources (see `judged_sources`) by models fitted without them; NaN elsewhere.
+    """Forecasts of the attempts of searched sources by models fitted without them; NaN for those of devices.
 
     Attributes
     ----------
@@ -80,31 +77,21 @@ class HeldOut:
         return gained / sum(one.best - one.constant for one in self.figures)
 
 
-def judged_sources(dataset):
-    """Return the searched sources that are held out to judge and calibrate: measured ones, if there are enough.
-
-    A user's stream is more like another measured one than like those of a synthetic family, which are drawn wider.
-    """
-    searched = np.unique(dataset.sources[dataset.compared])
-    measured = searched[~np.isin(searched, list(FAMILIES))]
-    return measured if len(measured) >= FEWEST_MEASURED else searched
-
-
 def hold_out(dataset, *, folds=None, seed, workers=1, progress=None):
-    """Return `HeldOut`: leave judged sources out in turn, fit on all others, forecast their attempts.
+    """Return `HeldOut`: leave searched sources out in turn, fit on all others, forecast their attempts.
 
     Parameters
     ----------
     dataset : Dataset
     folds : int, optional
-        Groups of judged sources that are left out together; by default every one is left out alone.
+        Groups of sources that are left out together; by default every one is left out alone.
     seed : int
     workers : int
         Processes of the joblib backend that is active, for folds in parallel.
     progress : callable, optional
         Called with the `SourceFigures` of each source that was left out.
     """
-    sources = judged_sources(dataset)
+    sources = np.unique(dataset.sources[dataset.compared])
     folds = min(len(sources) if folds is None else check_whole("folds", folds, low=2), len(sources))
     n = len(dataset.all)
     forecast = {name: np.full(n, np.nan) for name in (*RANGES, "shortfall")}
@@ -248,7 +235,7 @@ def _calibrate(dataset, held, name, *, seed):
 
 
 def _calibrated(dataset, held, rng):
-    """Return places of attempts of judged sources: the best forecast of each boundary, and as many of the others."""
+    """Return places of attempts of held-out sources: the best forecast of each boundary, and as many of the others."""
     known = np.flatnonzero(~np.isnan(held.divergence))
     b = dataset.boundary[known]
 
