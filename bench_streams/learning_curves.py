@@ -34,7 +34,6 @@ from hyperforecast.settings import COORDINATES
 from hyperforecast.storage import write_atomically
 from hyperforecast.workshop.fitting import constant_outcome, fit_constants, load_dataset, models
 from hyperforecast.workshop.fitting.constants import WIDTHS
-from hyperforecast.workshop.fitting.fit import judged_sources
 from hyperforecast.workshop.gathering import RecordsFile
 from hyperforecast.workshop.streams import FAMILIES
 
@@ -222,7 +221,7 @@ def experiments(method):
 
 
 def folds(dataset):
-    judged = judged_sources(dataset)
+    judged = np.setdiff1d(dataset.sources[dataset.compared], list(FAMILIES))
     for number in range(FOLDS):
         held = np.isin(dataset.sources, judged[number::FOLDS])
         yield Fold(number, held & dataset.compared, ~held)
