@@ -212,6 +212,15 @@ def _read_npz(path, labelled):
         return X, _read_member(path, archive, "y.npy", rows=len(X)) if labelled and _is_table(X) else None
 
 
+def read_arrays(path):
+    """Return every array in a .npz file by its name, or raise `InputError`."""
+    path = Path(path)
+    if not path.is_file():
+        raise InputError(path, "must be a file that exists", "nothing of that name")
+    with opened_zip(path, path, what="a complete .npz file") as archive:
+        return {name.removesuffix(".npy"): _read_member(path, archive, name) for name in archive.namelist()}
+
+
 def _stays_in_file(shape, fortran, dtype):
     """Whether an array is too large to hold, and can be read row by row."""
     fits = math.prod(shape) * max(dtype.itemsize, 4) <= HELD_BYTES

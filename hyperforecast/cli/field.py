@@ -1,4 +1,4 @@
-"""Commands for a device: advise, update, history."""
+"""Commands for a device: advise, update, adopt, history."""
 
 from dataclasses import asdict, replace
 
@@ -55,13 +55,17 @@ def add_commands(command):
     add_settings(overrule, "train with these")
     overrule.add_argument("--by", metavar="WHO", help="who decides so, for the history")
     overrule.add_argument("--because", metavar="WHY", help="why, for the history")
-    plan = update.add_argument_group("plan, fixed at the first update")
-    limits = update.add_argument_group("limits of an update, as they were until named anew")
-    for name, default in asdict(Plan()).items():
-        kind = int if isinstance(default, int) and name != "memory_limit" else str
-        (limits if name in UPDATE_LIMITS else plan).add_argument(f"--{name.replace('_', '-')}", type=kind, default=None,
-                          choices=METHODS if name == "method" else None,
-                          help=PLAN_HELP[name] + ("" if default is None else f" ({default})"))
+    add_plan(update)
+
+    adopt = command("adopt", _adopt, "Make a device folder of a head that was trained elsewhere, and some rows.")
+    adopt.add_argument("--weights", required=True, metavar="FILE",
+                       help=".npz: output_weights, output_bias, perhaps hidden_weights, hidden_bias, center, scale, "
+                       "classes; or weight and bias of PyTorch's layers")
+    adopt.add_argument("--exemplars", required=True, metavar="FILE",
+                       help="labelled rows of every class: .npz, .npy, .csv or .parquet")
+    adopt.add_argument("--device", required=True, metavar="DIR", help="a new name")
+    adopt.add_argument("--extractor", metavar="NAME", help="name or hash of what extracts the features")
+    add_plan(adopt, leave_out=("hidden_units",))
 
     history = command("history", _history, "What was advised, expected and achieved at each boundary of a device.")
     history.add_argument("--device", metavar="DIR")
@@ -69,6 +73,41 @@ def add_commands(command):
                          "settings and outcomes, nothing else")
     history.add_argument("--class-names", action="store_true", help="let class names leave the device with the export")
     history.add_argument("--schema", action="store_true", help="print the JSON Schema of an export, and stop")
+
+
+def add_plan(parser, *, leave_out=()):
+    """Add the options of a plan, but for some."""
+    plan = parser.add_argument_group("plan, fixed at the first update")
+    limits = parser.add_argument_group("limits of an update, as they were until named anew")
+    for name, default in asdict(Plan()).items():
+        if name not in leave_out:
+            kind = int if isinstance(default, int) and name != "memory_limit" else str
+            (limits if name in UPDATE_LIMITS else plan).add_argument(
+                f"--{name.replace('_', '-')}", type=kind, choices=METHODS if name == "method" else None,
+                help=PLAN_HELP[name] + ("" if default is None else f" ({default})"))
+
+
+def _given_plan(options):
+    given = {name: getattr(options, name, None) for name in PLAN_HELP}
+    return _plan_arguments({name: value for name, value in given.items() if value is not None})
+
+
+def _adopt(options):
+    from hyperforecast.device import DeviceFolder, adopt_head, class_table, read_weights
+    from hyperforecast.increments import read_increment
+
+    folder, weights = DeviceFolder(options.device), read_weights(options.weights)
+    increment = read_increment(options.exemplars, n_features=weights.n_features)
+    plan = Plan(hidden_units=weights.hidden_units, **_given_plan(options))
+    adopt_head(folder, weights, increment, plan=plan, extractor=options.extractor)
+    generation = folder.read()
+    classes, rows = class_table(generation), generation.carryover.check_rows
+    lines = [f"{options.device} carries a head of {weights.n_features} features, {weights.hidden_units} hidden units and "
+             f"{len(classes)} classes, {len(generation.carryover.exemplars)} exemplars and {len(rows)} check rows.",
+             table(("class", "exemplars", "check rows", "accuracy now"),
+                   [(one.label, one.exemplars, one.check_rows, number(one.accuracy)) for one in classes])]
+    say(options, {"device": options.device, "generation": generation.number,
+                  "plan": generation.carryover.plan.as_dict(), "classes": [one.as_dict() for one in classes]}, lines)
 
 
 def _advise(options):
@@ -164,15 +203,15 @@ def _update(options):
         raise InputError(" and ".join(missing), "must be given with --settings, --by and --because, all three or none",
                          "nothing", "say who overrules the advice, why, and with what settings")
     folder = DeviceFolder(options.device)
-    given = {name: getattr(options, name) for name in PLAN_HELP if getattr(options, name) is not None}
+    given = _given_plan(options)
     plan, forecaster, n_features, history = None, None, None, []
     if folder.numbers():
         generation = folder.read()
         forecaster, n_features = chosen_forecaster(options, folder, generation), generation.carryover.n_features
-        plan = replace(generation.carryover.plan, **_plan_arguments(given)) if given else None
+        plan = replace(generation.carryover.plan, **given) if given else None
         history = generation.history
     else:
-        plan = Plan(**_plan_arguments(given)).checked()
+        plan = Plan(**given).checked()
     increment = read_increment(options.increment, n_features=n_features)
     report = update(folder, increment, plan=plan, forecaster=forecaster, settings=settings, by=options.by,
                     because=options.because, preferences=chosen_preferences(options, kept_preferences(history)),

@@ -7,6 +7,7 @@ import importlib
 
 # Each module is imported when one of its names is asked for: advice needs few of them, and must come at once.
 _MODULES = {
+    "adopt": ("Weights", "adopt_head", "read_weights"),
     "care": ("Care", "Pin", "step_in_words"),
     "classes": ("ClassStatus", "Erasure", "class_table", "erase", "merge", "rename", "retire", "set_floor"),
     "comparison": ("Comparison", "compare_forecasters", "mean_errors"),

@@ -48,7 +48,7 @@ from hyperforecast.checks import InputError, check_number, check_whole
 from hyperforecast.describing import describe
 from hyperforecast.device.care import Care
 from hyperforecast.device.doubts import quick_doubts
-from hyperforecast.device.extractor import check_extractor_name, looks_foreign, sketch_of
+from hyperforecast.device.extractor import check_extractor_name, looks_foreign, sampled, sketch_of
 from hyperforecast.device.folder import DeviceFolder
 from hyperforecast.device.limits import Stopwatch, allowance, calibrated_speed, measured_speed, room
 from hyperforecast.device.pin import forecaster_for
@@ -68,8 +68,6 @@ FEWEST_ROWS_OF_CLASS = 4
 NOISE_DEVIATIONS = 2.0
 # Without alternatives, at the first update, the next try is this much slower.
 SLOWER = 0.1
-# Rows that the extractor is judged by.
-MOST_SKETCHED = 2000
 # Characters of who overruled the advice, and of why.
 LONGEST_TEXT = 1000
 
@@ -262,16 +260,15 @@ def kept_preferences(history):
 def _of_extractor(care, boundary, name, another):
     """Return the care with the extractor's name and sketch; features that look like another's are refused."""
     name = check_extractor_name(care.extractor, name, another=another)
-    rows = boundary.Z[:MOST_SKETCHED] if len(boundary.y) > MOST_SKETCHED else boundary.Z
-    y = boundary.y[:len(rows)]
+    Z, y = sampled(boundary)
     if boundary.carryover is not None and not another and care.sketch is not None \
-            and looks_foreign(care.sketch, boundary.carryover.summaries, rows, y):
+            and looks_foreign(care.sketch, boundary.carryover.summaries, Z, y):
         raise InputError("increment", "must hold features of the extractor that the device has learned with"
                          + (f", {care.extractor}" if care.extractor else ""),
                          "features of another spread, order or place",
                          "extract them with that one, or say --another-extractor if it is meant")
     first = boundary.carryover is None or another
-    return replace(care, extractor=name, sketch=sketch_of(rows, y) if first else care.sketch)
+    return replace(care, extractor=name, sketch=sketch_of(Z, y) if first else care.sketch)
 
 
 def _identity(history):

@@ -12,6 +12,7 @@ import numpy as np
 from hyperforecast.checks import InputError
 
 MOST_FEATURES = 32
+MOST_ROWS = 1000
 # Rows beyond one for each class that are needed for a covariance, and for each feature of a sketch.
 FEWEST_FREEDOMS = 5
 FREEDOMS_PER_FEATURE = 2
@@ -50,6 +51,12 @@ def check_extractor_name(known, given, *, another):
         raise InputError("extractor", f"must be the device's, {known}", given,
                          "extract the features with that one, or say --another-extractor if it is meant")
     return known if given is None else given
+
+
+def sampled(boundary):
+    """Return (Z, y) of at most 1000 training rows of a `Boundary`, evenly spread."""
+    rows = np.arange(0, len(boundary.y), -(-len(boundary.y) // MOST_ROWS))
+    return boundary.Z[rows], boundary.y[rows]
 
 
 def sketch_of(Z, y):

@@ -260,11 +260,12 @@ def class_limits(plan, n_features, n_classes):
     return check_rows, min(rows - check_rows, KEPT_PER_CLASS[1])
 
 
-def open_boundary(plan, carryover, increment, *, seed=0, most_rows=None, held=None):
+def open_boundary(plan, carryover, increment, *, seed=0, most_rows=None, held=None, scaling=None):
     """Return the `Boundary` at which `increment` meets `carryover` (None: it is the first increment).
 
     A few rows of each class, at most 8 and at most a fifth, drawn with `seed`, are held back from training. With
     `most_rows` (at least one for each class) the same share of every class, that many rows at most, is trained on.
+    At the first increment features are scaled by the increment itself, or by `scaling`, (center, scale).
     Unless the standardized rows are to be `held` in memory they are made whenever they are asked for; by default they
     are held where the increment is, or is small.
 
@@ -283,7 +284,9 @@ def open_boundary(plan, carryover, increment, *, seed=0, most_rows=None, held=No
     y = np.array([place[label] for label in labels.tolist()], np.int64)[np.searchsorted(labels, increment.y)]
     check_per_class, most_kept = class_limits(plan, increment.n_features, len(classes))
     held = is_held(increment.X) if held is None else held
-    center, scale = fit_scaling(increment.X, held=held) if carryover is None else (carryover.center, carryover.scale)
+    if carryover is not None:
+        scaling = carryover.center, carryover.scale
+    center, scale = fit_scaling(increment.X, held=held) if scaling is None else scaling
     training, checked, rank = _hold_back(y, check_per_class, most_rows, np.random.default_rng([seed, 0x6368]))
     Z = StandardizedRows(increment.X, training, center, scale)
     held_back = Exemplars(StandardizedRows(increment.X, checked, center, scale)[:], y[checked], rank)
