@@ -1,8 +1,8 @@
 """The command line. Results go to standard output, progress and messages to standard error.
 
-Read in this order: this file finds and runs a command; `field` holds those of a device, `care` those that use and
-check it between updates, `classes` those for its classes, `trust` those that say which forecaster may advise, `base`
-those of base; `options` and `text` hold what they share.
+Read in this order: this file finds and runs a command; `field` holds those of a device, `care` those that take over, use
+and check it between updates, `classes` those for its classes, `trust` those that say which forecaster may advise,
+`base` those of base; `options` and `text` hold what they share.
 
 Exit codes: 0 done; 2 bad input (one line says what, nothing was changed); 130 interrupted. Of an update also those of
 `hyperforecast.device.UpdateStatus`: 3 rolled back; 4 another update is at work; 5 the device folder is damaged; 6 it

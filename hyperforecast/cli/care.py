@@ -1,7 +1,9 @@
-"""Commands that use and check a device between updates: predict, evaluate, rollback."""
+"""Commands that take over, use and check a device: adopt, predict, evaluate, rollback."""
 
-from hyperforecast.cli.text import number, say, table
 from hyperforecast.checks import InputError, check_choice
+from hyperforecast.cli.options import add_plan, given_plan
+from hyperforecast.cli.text import number, say, table
+from hyperforecast.settings import Plan
 
 # The classes that this many rows were taken for, in the table for people.
 MOST_SHOWN = 2
@@ -9,7 +11,17 @@ OUTPUT_FORMATS = (".csv", ".npz")
 
 
 def add_commands(command):
-    """Add the commands that use and check a device; `command` is that of `hyperforecast.cli`."""
+    """Add the commands that take over, use and check a device; `command` is that of `hyperforecast.cli`."""
+    adopt = command("adopt", _adopt, "Make a device folder of a head that was trained elsewhere, and some rows.")
+    adopt.add_argument("--weights", required=True, metavar="FILE",
+                       help=".npz: output_weights, output_bias, perhaps hidden_weights, hidden_bias, center, scale, "
+                       "classes; or weight and bias of PyTorch's layers")
+    adopt.add_argument("--exemplars", required=True, metavar="FILE",
+                       help="labelled rows of every class: .npz, .npy, .csv or .parquet")
+    adopt.add_argument("--device", required=True, metavar="DIR", help="a new name")
+    adopt.add_argument("--extractor", metavar="NAME", help="name or hash of what extracts the features")
+    add_plan(adopt, leave_out=("hidden_units",))
+
     predict = command("predict", _predict, "Labels and probabilities for rows; nothing is learned.")
     predict.add_argument("--device", required=True, metavar="DIR")
     predict.add_argument("--rows", required=True, metavar="FILE",
@@ -28,6 +40,24 @@ def add_commands(command):
     rollback = command("rollback", _rollback, "Go back to the generation before; the history stays and tells of it.")
     rollback.add_argument("--device", required=True, metavar="DIR")
     rollback.add_argument("--because", metavar="TEXT", help="why, for the history")
+
+
+def _adopt(options):
+    from hyperforecast.device import DeviceFolder, adopt_head, class_table, read_weights
+    from hyperforecast.increments import read_increment
+
+    folder, weights = DeviceFolder(options.device), read_weights(options.weights)
+    increment = read_increment(options.exemplars, n_features=weights.n_features)
+    plan = Plan(hidden_units=weights.hidden_units, **given_plan(options))
+    adopt_head(folder, weights, increment, plan=plan, extractor=options.extractor)
+    generation = folder.read()
+    classes, rows = class_table(generation), generation.carryover.check_rows
+    lines = [f"{options.device} carries a head of {weights.n_features} features, {weights.hidden_units} hidden units "
+             f"and {len(classes)} classes, {len(generation.carryover.exemplars)} exemplars and {len(rows)} check rows.",
+             table(("class", "exemplars", "check rows", "accuracy now"),
+                   [(one.label, one.exemplars, one.check_rows, number(one.accuracy)) for one in classes])]
+    say(options, {"device": options.device, "generation": generation.number,
+                  "plan": generation.carryover.plan.as_dict(), "classes": [one.as_dict() for one in classes]}, lines)
 
 
 def _predict(options):

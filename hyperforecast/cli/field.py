@@ -1,24 +1,17 @@
-"""Commands for a device: advise, update, adopt, history."""
+"""Commands for a device: advise, update, history."""
 
-from dataclasses import asdict, replace
+from dataclasses import replace
 
 from hyperforecast.checks import InputError
 from hyperforecast.cli.options import (
-    add_device, add_extractor, add_forecaster, add_least_gain, add_preferences, add_settings, checked_seed,
-    chosen_forecaster, chosen_preferences, chosen_settings, least_gain,
+    add_device, add_extractor, add_forecaster, add_least_gain, add_plan, add_preferences, add_settings, checked_seed,
+    chosen_forecaster, chosen_preferences, chosen_settings, given_plan, least_gain,
 )
 from hyperforecast.cli.text import (
     CAUTION, adviser_lines, expected, listed, number, say, settings_lines, short, table, when_lines,
 )
-from hyperforecast.settings import METHODS, UPDATE_LIMITS, Plan
+from hyperforecast.settings import Plan
 
-PLAN_HELP = {
-    "method": "what holds on to old classes", "hidden_units": "width of the hidden layer, 0 for none",
-    "passes": "passes over the rows", "batch_size": "rows of a minibatch",
-    "memory_limit": 'most exemplars held, or bytes as "2 MB"',
-    "time_limit": "seconds that an update may take, reading the increment aside; none lifts it",
-    "working_memory": 'bytes that an update may hold at once, as "200 MB"; none lifts it',
-}
 EXIT_CODES = ("Exit codes: 0 kept, or the end of a dry run; 1 a fault of the program; 2 bad input, nothing was "
               "changed; 3 rolled back, only the history has grown; 4 another update is at work in the folder, try again later; "
               "5 the folder is damaged, see rollback; 6 the folder cannot be written, nothing was changed.")
@@ -57,57 +50,12 @@ def add_commands(command):
     overrule.add_argument("--because", metavar="WHY", help="why, for the history")
     add_plan(update)
 
-    adopt = command("adopt", _adopt, "Make a device folder of a head that was trained elsewhere, and some rows.")
-    adopt.add_argument("--weights", required=True, metavar="FILE",
-                       help=".npz: output_weights, output_bias, perhaps hidden_weights, hidden_bias, center, scale, "
-                       "classes; or weight and bias of PyTorch's layers")
-    adopt.add_argument("--exemplars", required=True, metavar="FILE",
-                       help="labelled rows of every class: .npz, .npy, .csv or .parquet")
-    adopt.add_argument("--device", required=True, metavar="DIR", help="a new name")
-    adopt.add_argument("--extractor", metavar="NAME", help="name or hash of what extracts the features")
-    add_plan(adopt, leave_out=("hidden_units",))
-
     history = command("history", _history, "What was advised, expected and achieved at each boundary of a device.")
     history.add_argument("--device", metavar="DIR")
     history.add_argument("--export", metavar="FILE", help="write a file for base (hyperforecast merge): plan, descriptors, "
                          "settings and outcomes, nothing else")
     history.add_argument("--class-names", action="store_true", help="let class names leave the device with the export")
     history.add_argument("--schema", action="store_true", help="print the JSON Schema of an export, and stop")
-
-
-def add_plan(parser, *, leave_out=()):
-    """Add the options of a plan, but for some."""
-    plan = parser.add_argument_group("plan, fixed at the first update")
-    limits = parser.add_argument_group("limits of an update, as they were until named anew")
-    for name, default in asdict(Plan()).items():
-        if name not in leave_out:
-            kind = int if isinstance(default, int) and name != "memory_limit" else str
-            (limits if name in UPDATE_LIMITS else plan).add_argument(
-                f"--{name.replace('_', '-')}", type=kind, choices=METHODS if name == "method" else None,
-                help=PLAN_HELP[name] + ("" if default is None else f" ({default})"))
-
-
-def _given_plan(options):
-    given = {name: getattr(options, name, None) for name in PLAN_HELP}
-    return _plan_arguments({name: value for name, value in given.items() if value is not None})
-
-
-def _adopt(options):
-    from hyperforecast.device import DeviceFolder, adopt_head, class_table, read_weights
-    from hyperforecast.increments import read_increment
-
-    folder, weights = DeviceFolder(options.device), read_weights(options.weights)
-    increment = read_increment(options.exemplars, n_features=weights.n_features)
-    plan = Plan(hidden_units=weights.hidden_units, **_given_plan(options))
-    adopt_head(folder, weights, increment, plan=plan, extractor=options.extractor)
-    generation = folder.read()
-    classes, rows = class_table(generation), generation.carryover.check_rows
-    lines = [f"{options.device} carries a head of {weights.n_features} features, {weights.hidden_units} hidden units and "
-             f"{len(classes)} classes, {len(generation.carryover.exemplars)} exemplars and {len(rows)} check rows.",
-             table(("class", "exemplars", "check rows", "accuracy now"),
-                   [(one.label, one.exemplars, one.check_rows, number(one.accuracy)) for one in classes])]
-    say(options, {"device": options.device, "generation": generation.number,
-                  "plan": generation.carryover.plan.as_dict(), "classes": [one.as_dict() for one in classes]}, lines)
 
 
 def _advise(options):
@@ -203,7 +151,7 @@ def _update(options):
         raise InputError(" and ".join(missing), "must be given with --settings, --by and --because, all three or none",
                          "nothing", "say who overrules the advice, why, and with what settings")
     folder = DeviceFolder(options.device)
-    given = _given_plan(options)
+    given = given_plan(options)
     plan, forecaster, n_features, history = None, None, None, []
     if folder.numbers():
         generation = folder.read()
@@ -239,19 +187,6 @@ def overruled_lines(entry):
 def _rules(options):
     given = {name: getattr(options, name) for name in ("retries", "most_lost", "most_lost_by_class")}
     return {name: value for name, value in given.items() if value is not None}
-
-
-def _plan_arguments(given):
-    if "memory_limit" in given and given["memory_limit"].isdecimal():
-        given["memory_limit"] = int(given["memory_limit"])
-    given.update({name: None for name in UPDATE_LIMITS if given.get(name) == "none"})
-    if given.get("time_limit") is not None:
-        text = given["time_limit"]
-        try:
-            given["time_limit"] = float(text)
-        except ValueError:
-            raise InputError("--time-limit", "must be a number of seconds, or none", repr(text)) from None
-    return given
 
 
 def limits_lines(entry):

@@ -1,9 +1,18 @@
 """Options that several commands share."""
 
 import os
-from dataclasses import replace
+from dataclasses import asdict, replace
 
 from hyperforecast.checks import InputError, check_keys, check_number, check_whole
+from hyperforecast.settings import METHODS, UPDATE_LIMITS, Plan
+
+PLAN_HELP = {
+    "method": "what holds on to old classes", "hidden_units": "width of the hidden layer, 0 for none",
+    "passes": "passes over the rows", "batch_size": "rows of a minibatch",
+    "memory_limit": 'most exemplars held, or bytes as "2 MB"',
+    "time_limit": "seconds that an update may take, reading the increment aside; none lifts it",
+    "working_memory": 'bytes that an update may hold at once, as "200 MB"; none lifts it',
+}
 
 
 def add_device(parser, *, required=True):
@@ -24,6 +33,34 @@ def add_extractor(parser):
                         "another one is refused")
     parser.add_argument("--another-extractor", action="store_true",
                         help="features of another extractor are meant: neither its name nor its features are refused")
+
+
+def add_plan(parser, *, leave_out=()):
+    """Add the options of a plan, but for some."""
+    plan = parser.add_argument_group("plan, fixed at the first update")
+    limits = parser.add_argument_group("limits of an update, as they were until named anew")
+    for name, default in asdict(Plan()).items():
+        if name not in leave_out:
+            kind = int if isinstance(default, int) and name != "memory_limit" else str
+            (limits if name in UPDATE_LIMITS else plan).add_argument(
+                f"--{name.replace('_', '-')}", type=kind, choices=METHODS if name == "method" else None,
+                help=PLAN_HELP[name] + ("" if default is None else f" ({default})"))
+
+
+def given_plan(options):
+    """Return the parts of a plan that were named, by name."""
+    given = {name: getattr(options, name, None) for name in PLAN_HELP}
+    given = {name: value for name, value in given.items() if value is not None}
+    if "memory_limit" in given and given["memory_limit"].isdecimal():
+        given["memory_limit"] = int(given["memory_limit"])
+    given.update({name: None for name in UPDATE_LIMITS if given.get(name) == "none"})
+    if given.get("time_limit") is not None:
+        text = given["time_limit"]
+        try:
+            given["time_limit"] = float(text)
+        except ValueError:
+            raise InputError("--time-limit", "must be a number of seconds, or none", repr(text)) from None
+    return given
 
 
 def add_streams(parser):

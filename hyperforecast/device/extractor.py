@@ -71,8 +71,8 @@ def looks_foreign(sketch, summaries, Z, y):
     """Return whether standardized rows Z (n, d) of classes y look like those of another extractor.
 
     Let S be the sketch and T the same covariance of these rows, scaled to the trace of S. The Gaussian log-likelihood
-    of T under S, less that under S with its features shuffled, is what the order of the features tells; over the same for
-    S itself, less k (k + 1) / f for the noise of f freedoms, it is `told`, near 1 for the same extractor and near 0 for
+    of T under S, less that under S with its features shuffled, is what the order of the features tells; over the same
+    for S itself, less k (k + 1) / f for the noise of f freedoms, it is `told`, near 1 for the same extractor and near 0 for
     another. `shift` is the squared distance between
     the mean of these rows' class means and that of the carried ones over the variance of the carried ones, feature by
     feature. Rows look foreign if shift > 2 and told < min(0.1 + 0.02 shift, 0.4), or if the scaling is by a factor

@@ -64,7 +64,8 @@ def test_a_state_dict_is_read_as_torch_lays_it_out(tmp_path):
              "2.bias": rng.normal(size=3)}
     scores = relu(X @ state["0.weight"].T + state["0.bias"]) @ state["2.weight"].T + state["2.bias"]
     folder = adopted(tmp_path, state, check_increment(X, NAMES))
-    assert (predict(folder.read().carryover, X.astype(np.float32)).labels == np.unique(NAMES)[scores.argmax(axis=1)]).all()
+    predicted = predict(folder.read().carryover, X.astype(np.float32)).labels
+    assert (predicted == np.unique(NAMES)[scores.argmax(axis=1)]).all()
 
 
 def test_a_linear_state_dict_with_classes_in_another_order(tmp_path):
@@ -85,7 +86,8 @@ def test_an_adopted_device_learns_on_with_exemplars_summaries_and_importances(tm
     estimator.fit(X[known], y[known])
     some = np.flatnonzero(known)[:300]
     increment = check_increment(X[some], y[some])
-    folder = adopted(tmp_path, arrays_of_estimator(estimator), increment, Plan(method, 24, 5, 32, 200), extractor="pixels")
+    plan = Plan(method, 24, 5, 32, 200)
+    folder = adopted(tmp_path, arrays_of_estimator(estimator), increment, plan, extractor="pixels")
     generation = folder.read()
     carryover = generation.carryover
     assert generation.care.extractor == "pixels" and generation.care.steps[0]["step"] == "adopted"
