@@ -9,7 +9,8 @@ import pytest
 from hyperforecast.checks import InputError
 from hyperforecast.cli import main
 from hyperforecast.forecasting import load_forecaster, save_forecaster
-from hyperforecast.workshop.fitting import Fit, fit_records, load_dataset, models, read_recipe, rebuild
+from hyperforecast.settings import METHODS
+from hyperforecast.workshop.fitting import Fit, fit_records, load_dataset, models, networks, read_recipe, rebuild
 from hyperforecast.workshop.gathering import RecordsFile, gather, trajectories
 from hyperforecast.workshop.streams import load_streams
 
@@ -27,6 +28,7 @@ def small():
             patch.setattr(trajectories, name, attempts)
         patch.setattr(models, "ROUNDS", 8)
         patch.setattr(models, "SMALL_ROUNDS", 5)
+        patch.setattr(networks, "STEPS", 40)
         patch.setattr(models, "LARGE", {"num_leaves": 31, "min_data_in_leaf": 20})
         yield
 
@@ -162,9 +164,22 @@ def test_the_command_says_whether_it_is_the_one_that_ships(same, recipe_file, re
 
 def test_the_recipe_of_those_that_ship_is_whole():
     recipe = read_recipe(ROOT / "models" / "recipe.toml")
-    assert [one.steering is not None for one in recipe.rounds] == [False, True]
+    assert recipe.rounds[0].steering is None and not recipe.fit.without
     measured = {one.source for part in recipe.rounds for one in part.definitions if not one.source.startswith("synthetic_")}
-    assert set(recipe.rounds[1].steering.without) == measured and not recipe.fit.without
+    for method in METHODS:
+        steering = load_forecaster(recipe.rounds[1].steering / f"{method}.forecaster")
+        assert steering.method == method and not measured & set(steering.recipe["boundaries"])
+
+
+def test_a_forecaster_that_is_given_steers_as_one_that_is_fitted(recipe_file, rebuilt, tmp_path):
+    text = recipe_file.read_text().replace("[round.steering]", 'steered_by = "given"\n[fit]').partition("[fit]")[0]
+    for name in ("first.toml", "second.toml"):
+        text = text.replace(name, (recipe_file.parent / name).as_posix())
+    (tmp_path / "recipe.toml").write_text(f"{text}[fit]\nfolds = 2\n")
+    (tmp_path / "given").mkdir()
+    (tmp_path / "given" / "wa.forecaster").write_bytes(next(rebuilt.glob("steering.*")).read_bytes())
+    rebuild(read_recipe(tmp_path / "recipe.toml"), "wa", tmp_path / "made")
+    assert kept(tmp_path / "made")["wa.forecaster"] == kept(rebuilt)["wa.forecaster"]
 
 
 ROUND = '[[round]]\nstreams = ["first.toml"]\n'
@@ -174,7 +189,7 @@ ROUND = '[[round]]\nstreams = ["first.toml"]\n'
     ("[[round", "must be a TOML file"),
     ("seed = 1", r"must hold \[\[round\]\] tables; received none"),
     ("round = 3", r"must hold \[\[round\]\] tables; received 3"),
-    (ROUND + "speed = 1", "round 1: knows the keys streams, steering; received 'speed'"),
+    (ROUND + "speed = 1", "round 1: knows the keys streams, steering, steered_by; received 'speed'"),
     ("pace = 1\n" + ROUND, "knows the keys seed, round, fit; received 'pace'"),
     ("seed = -1\n" + ROUND, "seed: must be a whole number of at least 0; received -1"),
     ("[[round]]\nstreams = []", "round 1 streams: must be a list of texts"),
@@ -183,6 +198,8 @@ ROUND = '[[round]]\nstreams = ["first.toml"]\n'
     (ROUND + "[round.steering]\nfolds = 2", "round 1: cannot be steered"),
     (ROUND + ROUND + "steering = 3", "round 2 steering: must be a table; received 3"),
     (ROUND + ROUND + "[round.steering]\nfolds = 1", "round 2 steering folds: must be a whole number of at least 2"),
+    (ROUND + ROUND + "steered_by = 3", "steered_by: must be a folder, relative to the recipe; received 3"),
+    (ROUND + ROUND + "steered_by = 'x'\n[round.steering]\nfolds = 2", "must be steered by one thing"),
     (ROUND + "[fit]\nwithout = 3", "fit without: must be a list of texts"),
     (ROUND + "[fit]\ndepth = 3", "fit: knows the keys without, folds; received 'depth'"),
 ])

@@ -10,6 +10,9 @@ A recipe is a TOML file; streams are relative to it:
     [round.steering]            # by a forecaster fitted on the rounds before
     without = ["languages"]     # sources left out of that fit
     folds = 2
+    [[round]]
+    streams = ["still_more.toml"]
+    steered_by = "steering"     # or by METHOD.forecaster in a folder, relative to the recipe
     [fit]                       # of the forecaster itself; keys as for steering
 
 The same recipe gives the same forecaster to the bit on the same machine with the same versions, however often it was
@@ -42,10 +45,10 @@ class Fit:
 
 @dataclass(frozen=True)
 class Round:
-    """A round of gathering: its streams, and the `Fit` of the forecaster that steers it, None in a first round."""
+    """A round of gathering: its streams, and what steers it: a `Fit`, a folder of forecasters, or None."""
 
     definitions: tuple
-    steering: Fit | None
+    steering: Fit | Path | None
 
 
 @dataclass(frozen=True)
@@ -73,13 +76,14 @@ def read_recipe(path):
     rounds = []
     for number, table in enumerate(tables, 1):
         where = f"{path} round {number}"
-        check_keys(where, table, ("streams", "steering"))
+        check_keys(where, table, ("streams", "steering", "steered_by"))
         if number == 1 and "steering" in table:
             raise InputError(where, "cannot be steered", "steering", "no round comes before it")
+        if "steering" in table and "steered_by" in table:
+            raise InputError(where, "must be steered by one thing", "steering and steered_by", "remove one of them")
         definitions = [one for file in _texts(f"{where} streams", table.get("streams"))
                        for one in load_streams(path.parent / file)]
-        rounds.append(Round(tuple(definitions), _fit(f"{where} steering", table["steering"]) if "steering" in table
-                            else None))
+        rounds.append(Round(tuple(definitions), _steering(where, table, path.parent)))
     return Recipe(check_whole(f"{path} seed", document.get("seed", 0)), tuple(rounds),
                   _fit(f"{path} fit", document.get("fit", {})))
 
@@ -118,7 +122,9 @@ def rebuild(recipe, method, folder, *, workers=1, progress=None):
 
     for number, one in enumerate(recipe.rounds, 1):
         steering = None
-        if one.steering:
+        if isinstance(one.steering, Path):
+            steering = load_forecaster(one.steering / f"{method}.forecaster")
+        elif one.steering:
             # Kept under the name of all that it is made of: another recipe's is not taken for it.
             made_of = checksum(dump_json([sorted(keys), one.steering.__dict__, recipe.seed]))[:12]
             kept = folder / f"steering.{method}.{made_of}.forecaster"
@@ -134,6 +140,14 @@ def rebuild(recipe, method, folder, *, workers=1, progress=None):
     made = folder / f"{method}.forecaster"
     save_forecaster(made, fitted(recipe.fit))
     return made
+
+
+def _steering(where, table, folder):
+    if "steered_by" in table:
+        if not isinstance(table["steered_by"], str):
+            raise InputError(f"{where} steered_by", "must be a folder, relative to the recipe", repr(table["steered_by"]))
+        return folder / table["steered_by"]
+    return _fit(f"{where} steering", table["steering"]) if "steering" in table else None
 
 
 def _fit(where, table):
