@@ -83,7 +83,7 @@ def _with_timing(options):
     signs = retraining_signs(report.advice)
     doubts = report.entry["doubts"]
     return (report.advice, {"doubts": doubts, "waiting": timing.as_dict(), "retrain": signs},
-            [*doubt_lines(doubts), *when_lines(timing, signs)])
+            [*limits_lines(report.entry), *doubt_lines(doubts), *when_lines(timing, signs)])
 
 
 def _print_schema(name):
