@@ -8,10 +8,12 @@ import numpy as np
 
 from hyperforecast.checks import InputError, check_whole
 from hyperforecast.describing import describe
-from hyperforecast.forecasting import Forecaster, Preferences, advise_settings, load_forecaster, opening_settings
+from hyperforecast.forecasting import (
+    UNFAMILIAR, Forecaster, Preferences, advise_settings, load_forecaster, opening_settings,
+)
 from hyperforecast.increments import Increment, check_features, check_labels
 from hyperforecast.learning import (
-    HeadTrainer, boundary_seed, class_probabilities, close_boundary, open_boundary, predict_codes, try_settings,
+    HeadTrainer, boundary_seed, check_accuracies, class_probabilities, close_boundary, open_boundary, predict_codes, try_settings,
 )
 from hyperforecast.settings import Plan, Settings, SettingsBox
 
@@ -40,6 +42,9 @@ class GrowingClassifier:
         Weight of the outcome at the boundary itself; the rest is that of the two boundaries that follow.
     tolerance : float in [0, 1]
         Accuracy that may be given away for fewer exemplars per class.
+    unfamiliar : "constant", "warn", or "try 4" with another number from 2 to 16
+        What to do at a boundary unlike the records: learn with the best constant; go on, with a `UserWarning`; or try so
+        many of the ranked settings and keep what does best on rows held back from training.
     random_state : int, numpy RandomState or None
         Fixes every draw; None draws a new seed at the first increment.
 
@@ -69,7 +74,8 @@ class GrowingClassifier:
     """
 
     def __init__(self, method="wa", *, hidden_units=64, passes=10, batch_size=32, memory_limit=2000, settings=ADVISED,
-                 forecaster=None, old_weight=None, now_weight=1 / 3, tolerance=0.005, random_state=0):
+                 forecaster=None, old_weight=None, now_weight=1 / 3, tolerance=0.005, unfamiliar=UNFAMILIAR,
+                 random_state=0):
         self.method = method
         self.hidden_units = hidden_units
         self.passes = passes
@@ -80,6 +86,7 @@ class GrowingClassifier:
         self.old_weight = old_weight
         self.now_weight = now_weight
         self.tolerance = tolerance
+        self.unfamiliar = unfamiliar
         self.random_state = random_state
 
     def fit(self, X, y):
@@ -111,9 +118,13 @@ class GrowingClassifier:
         boundary, given, advice = self._boundary(increment, seed), self._given_settings(), None
         if given is None and boundary.carryover is not None:
             advice = self._advice_at(boundary, seed)
-        settings = given or (opening_settings(boundary.plan) if advice is None else advice.settings)
+        if advice is not None and advice.unfamiliar == "warn":
+            warnings.warn(f"A boundary unlike the records: {'; '.join(advice.familiarity.why)}.", stacklevel=2)
+        candidates = [given or opening_settings(boundary.plan)] if advice is None else advice.to_try
         trainer = HeadTrainer()
-        attempt = try_settings(trainer, boundary, [settings], seed=boundary_seed(seed, boundary.carryover))[0]
+        attempts = try_settings(trainer, boundary, candidates, seed=boundary_seed(seed, boundary.carryover))
+        scores = check_accuracies(trainer, boundary, attempts, old_weight=self.old_weight)
+        attempt = attempts[int(np.argmax(scores))]
         carryover = close_boundary(trainer, boundary, attempt, seed=boundary_seed(seed, boundary.carryover))
         if boundary.carryover is None:
             self.seed_, self.history_, self.n_features_in_ = seed, [], increment.n_features
@@ -123,8 +134,8 @@ class GrowingClassifier:
         self.carryover_, self.advice_ = carryover, advice
         self.history_ = [*self.history_, {
             "boundary": boundary.number, "rows": len(increment), "classes": len(carryover.classes),
-            "new_classes": boundary.n_classes - boundary.n_old, "settings": settings.as_dict(),
-            "advised": advice is not None, "diverged": attempt.diverged, "operations": attempt.operations,
+            "new_classes": boundary.n_classes - boundary.n_old, "settings": attempt.settings.as_dict(),
+            "advised": advice is not None, "unfamiliar": advice and advice.unfamiliar, "diverged": attempt.diverged, "operations": attempt.operations,
         }]
         return self
 
@@ -230,7 +241,7 @@ class GrowingClassifier:
                                **self._preferences().as_dict())
 
     def _preferences(self):
-        return Preferences(self.old_weight, self.now_weight, self.tolerance).checked()
+        return Preferences(self.old_weight, self.now_weight, self.tolerance, self.unfamiliar).checked()
 
     def _given_settings(self):
         """Return the user's own `Settings`, checked; None where they are to be advised."""

@@ -339,13 +339,40 @@ def test_advice_keeps_to_the_memory_at_hand(forecasters):
 
 
 def test_advice_cares_for_what_the_classifier_was_told(forecasters):
-    told = {"old_weight": 0.9, "now_weight": 0.5, "tolerance": 0.01}
+    told = {"old_weight": 0.9, "now_weight": 0.5, "tolerance": 0.01, "unfamiliar": "constant"}
     clf = classifier("wa", settings="advised", forecaster=forecasters["wa"], **told)
     clf.partial_fit(*parts([0, 1])).partial_fit(*parts([2], seed=1))
     assert clf.advice_.preferences.as_dict() == told
     clf.set_params(now_weight=2)
     with pytest.raises(InputError, match="^now_weight: must be a number from 0 to 1; received 2"):
         clf.partial_fit(*parts([3], seed=2))
+
+
+@pytest.mark.parametrize("policy", ["constant", "warn", "try 3"])
+def test_what_is_done_at_a_boundary_unlike_the_records_is_the_users_choice(policy, forecasters):
+    clf = classifier("wa", settings="advised", forecaster=forecasters["wa"], unfamiliar=policy).partial_fit(*parts([0, 1]))
+    X, y = parts([2], seed=1)
+    if policy == "warn":
+        with pytest.warns(UserWarning, match="^A boundary unlike the records: .*another unit"):
+            clf.partial_fit(X * 1000, y)
+    else:
+        clf.partial_fit(X * 1000, y)
+    found = clf.advice_
+    assert not found.familiarity.familiar and found.unfamiliar == clf.history_[-1]["unfamiliar"] == policy
+    learned = Settings(**clf.history_[-1]["settings"])
+    if policy == "try 3":
+        assert found.to_try == found.ranked[:3] and learned in found.to_try
+    else:
+        assert learned == found.settings == found.to_try[0] and len(found.to_try) == 1
+    assert (found.settings == found.constant) == (policy == "constant")
+    assert found.ranked.count(found.constant) == (policy == "constant")
+    clf.partial_fit(*parts([3], seed=2))
+
+
+@pytest.mark.parametrize("policy", ["try", "try 1", "try 17", "try 04 ", "constantly", 4, None])
+def test_a_policy_that_there_is_not_is_refused(policy):
+    with pytest.raises(InputError, match='^unfamiliar: must be "constant", "warn", or "try N" with N from 2 to 16; '):
+        classifier("wa", unfamiliar=policy).partial_fit(*parts([0, 1]))
 
 
 def test_there_is_no_advice_before_the_first_increment(advised):
@@ -380,7 +407,8 @@ def test_the_front_door_has_these_names_and_no_others():
         hyperforecast.Forecast
     assert clone(GrowingClassifier()).get_params() == {
         "method": "wa", "hidden_units": 64, "passes": 10, "batch_size": 32, "memory_limit": 2000, "settings": "advised",
-        "forecaster": None, "old_weight": None, "now_weight": 1 / 3, "tolerance": 0.005, "random_state": 0}
+        "forecaster": None, "old_weight": None, "now_weight": 1 / 3, "tolerance": 0.005,
+        "unfamiliar": "try 4", "random_state": 0}
 
 
 def test_the_examples_in_the_docstrings_run():

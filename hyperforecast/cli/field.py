@@ -124,7 +124,7 @@ def _advice_lines(advice):
     lines += [f"Probability of divergence  {advice.divergence:.3f}",
               f"Familiarity  {verdict.score:.2f}: " + (
                   "the records know boundaries like this one" if verdict.familiar
-                  else "NOT FAMILIAR, few records lie this far out; check the result with care")]
+                  else f"NOT FAMILIAR; {_done_about_it(advice)}"), *(f"  {one}" for one in verdict.why)]
     lines += [f"  out of range: {one.name} {one.value:.4g}, records from {one.low:.4g} to {one.high:.4g}"
               for one in verdict.out_of_range[:5]]
     lines += ["What moved the advice most", *(f"  {reason}" for reason in advice.reasons or ["nothing unusual"])]
@@ -133,10 +133,18 @@ def _advice_lines(advice):
     return [*lines, CAUTION]
 
 
+def _done_about_it(advice):
+    if advice.unfamiliar == "constant":
+        return "the best constant is advised instead"
+    if advice.unfamiliar == "warn":
+        return "check the result with care"
+    return f"an update tries {len(advice.to_try)} of the ranked settings and keeps the best"
+
+
 def _preference_lines(preferences):
     """A line that says what advice was told to care for, if that is not the usual."""
     usual = type(preferences)().as_dict()
-    told = [f"{name.replace('_', ' ')} {'by class count' if value is None else format(value, '.3g')}"
+    told = [f"{name.replace('_', ' ')} {format(value, '.3g') if isinstance(value, float) else value or 'by class count'}"
             for name, value in preferences.as_dict().items() if value != usual[name]]
     return [f"Asked for  {', '.join(told)}"] if told else []
 
@@ -212,6 +220,9 @@ def _update_lines(report):
     lines += limits_lines(entry)
     if report.status is None:
         return [*lines, "Dry run: nothing was trained or stored."]
+    if entry["unfamiliar"] and entry["unfamiliar"]["tried"]:
+        lines += ["Tried side by side, accuracy on rows held back from training",
+                  *(f"  {one['check_accuracy']:.3f}  {listed(one['settings'])}" for one in entry["unfamiliar"]["tried"])]
     lines += ["Trained with", *(f"  {name:<18} {value:.4g}" for name, value in entry["settings"].items())]
     achieved = entry["achieved"]
     lines.append(f"Achieved on {achieved['rows']} rows held back from training")
@@ -248,6 +259,8 @@ def _history(options):
     lines = [table(names, rows), *adviser_lines(advisers(generation.history))]
     lines += [f"update {one['number']}: {reason}" for one in generation.history for reason in one["reasons"]]
     lines += [f"update {one['number']}: {line}" for one in generation.history for line in overruled_lines(one)[:1]]
+    lines += [f"update {one['number']}: unlike the records ({one['unfamiliar']['policy']}): {why}"
+              for one in generation.history if one.get("unfamiliar") for why in one["advice"]["familiarity"]["why"]]
     lines += [f"update {one['number']}: {words}" for one in generation.history for words in
               (one.get("limits") or {"given_up": ()})["given_up"]]
     lines += [f"update {one['number']}: later {number(outcome['all'])} on {outcome['rows']} rows"

@@ -122,6 +122,8 @@ def add_preferences(parser):
                        '"count", by their number (count)')
     group.add_argument("--now-weight", type=float, metavar="SHARE", help="weight of this boundary, the two that follow "
                        "have the rest (1/3)")
+    group.add_argument("--unfamiliar", metavar="WHAT", help='at a boundary unlike the records: "constant", "warn", or '
+                       '"try N", train with N of the ranked settings and keep the best (try 4)')
     group.add_argument("--tolerance", type=float, metavar="SHARE", help="accuracy that may be given away for fewer "
                        "exemplars (0.005)")
 

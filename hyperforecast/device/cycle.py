@@ -15,6 +15,9 @@ An entry of the history, a JSON-able dict, tells of one update:
     forecaster_version      version of the program that fitted it, or null
     preferences             what advice was to care for, see `hyperforecast.forecasting.Preferences`: the next update keeps
                             them unless it is told otherwise
+    unfamiliar              null, or what was done because the boundary is unlike the records: {"policy", "tried"}, the
+                            preference, and with "try N" the settings that were tried side by side, each with its
+                            accuracy on check rows (below 0: it diverged), the best first
     overruled               null, or {"by", "because"} where settings were given, whatever was advised: who decided so
                             and why, in their words; what was advised instead stands in `advice`
     settings, expected, diverged, stopped, achieved, acceptance, by_class, operations, operations_planned,
@@ -55,7 +58,8 @@ from hyperforecast.device.pin import forecaster_for
 from hyperforecast.device.status import UpdateStatus
 from hyperforecast.forecasting import Advice, Preferences, advise_settings, opening_settings
 from hyperforecast.learning import (
-    Carryover, HeadTrainer, Job, accuracies, boundary_seed, close_boundary, open_boundary, standardize, try_settings,
+    Carryover, HeadTrainer, Job, accuracies, boundary_seed, check_accuracies, close_boundary, open_boundary,
+    standardize, try_settings,
 )
 from hyperforecast.settings import SettingsBox, completed
 
@@ -213,16 +217,22 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
                 advice = advised(boundary)
         candidates = _candidates(plan, advice, settings, retries)
         check = _Check(trainer, boundary, increment, advice, most_lost, most_lost_by_class, care)
-        tries = []
+        tries, ready, tried = [], {}, []
+        if not dry_run and settings is None and advice is not None and len(advice.to_try) > 1:
+            side_by_side = advice.to_try if allowed is None else \
+                advice.to_try[:max(int(watch.left / allowed.seconds_planned), 1)]
+            ready, tried = _side_by_side(trainer, boundary, side_by_side, preferences, watch, seed)
+            candidates = list(ready)[:1 + retries]
         for candidate in () if dry_run else candidates:
-            if tries and allowed is not None and watch.left < allowed.seconds_planned:
+            if tries and candidate not in ready and allowed is not None and watch.left < allowed.seconds_planned:
                 if not watch.is_over():
                     tries[-1]["reasons"].append(f"{watch.left:.2g} s are left, too little for another try, which takes "
                                                 f"{allowed.seconds_planned:.2g} s")
                 break
-            spent = watch.spent
-            attempt = try_settings(trainer, boundary, [candidate], seed=seed, stop=watch.stop)[0]
-            told = check.judged(attempt, watch.spent - spent)
+            if candidate not in ready:
+                ready |= _side_by_side(trainer, boundary, [candidate], preferences, watch, seed)[0]
+            attempt, seconds = ready[candidate]
+            told = check.judged(attempt, seconds)
             tries.append(told)
             closed = None if told["reasons"] else close_boundary(trainer, boundary, attempt, seed=seed)
             if watch.is_over():
@@ -237,7 +247,8 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
             "number": history[-1]["number"] + 1 if history else 1,
             "time": datetime.now(UTC).isoformat(timespec="seconds"), "device": _identity(history),
             **_arrived(boundary, increment), "doubts": quick_doubts(increment, boundary.carryover, seed=seed),
-            **_advised(advice), "preferences": preferences.as_dict(), "overruled": overruled,
+            **_advised(advice), "preferences": preferences.as_dict(),
+            "unfamiliar": _unfamiliar(advice, settings, tried), "overruled": overruled,
             **(tries[-1] if tries else {"settings": candidates[0].as_dict()}), "earlier_tries": tries[:-1],
             "kept": bool(tries) and not tries[-1]["reasons"],
             "limits": _limits(allowed, fits), "seconds": round(watch.spent, 4),
@@ -249,6 +260,24 @@ def update(folder, increment, *, plan=None, forecaster=None, trainer=None, setti
             generation = folder.store(carryover, [*history, entry], care, in_place=not entry["kept"])
     status = None if dry_run else UpdateStatus.KEPT if entry["kept"] else UpdateStatus.ROLLED_BACK
     return UpdateReport(status, generation, entry, advice, carryover)
+
+
+def _side_by_side(trainer, boundary, settings, preferences, watch, seed):
+    """Train with several settings; return {settings: (attempt, seconds)} and what the history tells, the best first."""
+    spent = watch.spent
+    attempts = try_settings(trainer, boundary, settings, seed=seed, stop=watch.stop)
+    seconds = (watch.spent - spent) / len(attempts)
+    accuracy = check_accuracies(trainer, boundary, attempts, old_weight=preferences.old_weight)
+    order = np.argsort(-accuracy, kind="stable")
+    return ({settings[k]: (attempts[k], seconds) for k in order},
+            [{"settings": settings[k].as_dict(), "check_accuracy": round(float(accuracy[k]), 4)} for k in order])
+
+
+def _unfamiliar(advice, settings, tried):
+    """What the history tells of a boundary unlike the records, if nobody overruled the advice."""
+    if advice is None or advice.unfamiliar is None or settings is not None:
+        return None
+    return {"policy": advice.unfamiliar, "tried": tried}
 
 
 def kept_preferences(history):

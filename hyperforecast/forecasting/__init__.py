@@ -11,7 +11,7 @@ from hyperforecast.forecasting.forecaster import (
 from hyperforecast.forecasting.intervals import grouped_conformal_threshold
 from hyperforecast.forecasting.networks import NETWORK_LAYERS, NetworkEnsemble, bend
 from hyperforecast.forecasting.opening import opening_settings
-from hyperforecast.forecasting.preferences import Preferences
+from hyperforecast.forecasting.preferences import UNFAMILIAR, Preferences
 from hyperforecast.forecasting.trees import TreeEnsemble
 from hyperforecast.forecasting.waiting import (
     LEAST_GAIN, NothingNew, Waiting, await_rows, nothing_new, retraining_signs,
@@ -19,7 +19,8 @@ from hyperforecast.forecasting.waiting import (
 from hyperforecast.forecasting.weighing import RIDGE, RISKY, Outlook, Ridge, along, outlook, ridge
 
 __all__ = ["Advice", "Constant", "DIVERGENCE_PRICE", "Expected", "Familiarity", "FamiliarityVerdict", "Forecaster",
-           "LEAST_GAIN", "NETWORK", "NETWORK_LAYERS", "NetworkEnsemble", "NothingNew", "Outlook", "Preferences", "RANGES", "RIDGE", "RISKY", "Reason", "Ridge",
-           "TreeEnsemble", "Waiting", "advise_settings", "along", "await_rows", "bend", "combined", "explain", "forecaster_bytes",
-           "grouped_conformal_threshold", "load_forecaster", "nothing_new", "opening_settings", "outlook",
-           "retraining_signs", "ridge", "save_forecaster", "with_checksum"]
+           "LEAST_GAIN", "NETWORK", "NETWORK_LAYERS", "NetworkEnsemble", "NothingNew", "Outlook", "Preferences", "RANGES",
+           "RIDGE", "RISKY", "Reason", "Ridge", "TreeEnsemble", "UNFAMILIAR", "Waiting", "advise_settings", "along",
+           "await_rows", "bend", "combined", "explain", "forecaster_bytes", "grouped_conformal_threshold",
+           "load_forecaster", "nothing_new", "opening_settings", "outlook", "retraining_signs", "ridge",
+           "save_forecaster", "with_checksum"]

@@ -61,6 +61,7 @@ class Advice:
     Attributes
     ----------
     settings : Settings
+        At a boundary unlike the records the best constant, if that is what the user prefers there.
     alternatives : list of Settings
         Ranked, best first, without the advised ones; they differ from each other.
     expected_old, expected_new, expected_all : Expected
@@ -100,19 +101,25 @@ class Advice:
         """The advised settings and the alternatives, best first."""
         return [self.settings, *self.alternatives]
 
+    @property
+    def unfamiliar(self):
+        """What is done because the boundary is unlike the records: `Preferences.unfamiliar`, None where it is not."""
+        return None if self.familiarity.familiar else self.preferences.unfamiliar
+
+    @property
+    def to_try(self):
+        """The settings to try side by side, the best of which is to be kept: the advised ones alone, or more of them."""
+        return self.ranked[:self.preferences.tried if self.unfamiliar else 1]
+
     def as_dict(self):
         """Return a JSON-able dict."""
-        verdict = self.familiarity
         return {
             "method": self.forecaster.method, "settings": self.settings.as_dict(),
             "alternatives": [one.as_dict() for one in self.alternatives],
             "expected": {"old": self.expected_old.as_dict(), "new": self.expected_new.as_dict(),
                          "all": self.expected_all.as_dict()},
             "divergence": self.divergence,
-            "familiarity": {
-                "score": verdict.score, "familiar": verdict.familiar, "distance": verdict.distance,
-                "out_of_range": [{"descriptor": one.name, "value": one.value, "low": one.low, "high": one.high}
-                                 for one in verdict.out_of_range]},
+            "familiarity": self.familiarity.as_dict(), "unfamiliar": self.unfamiliar,
             "constant": self.constant.as_dict(), "preferences": self.preferences.as_dict(),
             "reasons": [{**one.__dict__, "text": str(one)} for one in self.reasons],
             "descriptors": {name: None if np.isnan(value) else value for name, value in self.descriptors.items()},
@@ -130,22 +137,25 @@ def advise_settings(forecaster, descriptors, box, **preferences):
         NaN, or no entry, is missing.
     box : SettingsBox
         The settings that are open at the boundary.
-    preferences : old_weight, now_weight, tolerance
+    preferences : old_weight, now_weight, tolerance, unfamiliar
         See `Preferences`.
     """
     preferences = Preferences(**preferences).checked()
     forecast = forecaster.at(descriptors)
     settings, scores = _weigh(forecast, box, preferences)
     best = _fewest_kept(forecast, settings[int(np.argmax(scores))], box, preferences)
+    familiarity, constant = forecaster.familiarity.assess(descriptors), forecaster.constant_settings(descriptors, box)
+    if not familiarity.familiar and preferences.unfamiliar == "constant":
+        # What the models would have advised comes next.
+        settings, scores, best = [best, *settings], np.concatenate([[np.inf], scores]), constant
     alternatives = _apart(box, best, settings, scores)
     expected = forecast.expected([best])
     return Advice(
         settings=best, alternatives=alternatives, expected_old=expected["old"].at(0),
         expected_new=expected["new"].at(0), expected_all=expected["all"].at(0),
         divergence=float(forecast.divergence([best])[0]),
-        familiarity=forecaster.familiarity.assess(forecaster.vector(descriptors)),
-        constant=forecaster.constant_settings(descriptors, box), descriptors=descriptors, forecaster=forecaster,
-        box=box, preferences=preferences,
+        familiarity=familiarity, constant=constant, descriptors=descriptors, forecaster=forecaster, box=box,
+        preferences=preferences,
     )
 
 

@@ -1,7 +1,7 @@
 """The learner. Read exemplars, boundary, head, objectives, side_by_side, trainer, attempts, class_care in turn."""
 
 from hyperforecast.learning.attempts import (
-    CHUNK_ROWS, accuracies, class_probabilities, close_boundary, predict_codes, try_settings,
+    CHUNK_ROWS, accuracies, check_accuracies, class_probabilities, close_boundary, predict_codes, try_settings,
 )
 from hyperforecast.learning.boundary import (
     Boundary, Carryover, ClassSummaries, boundary_seed, class_limits, open_boundary, present_codes, standardize,
@@ -13,7 +13,7 @@ from hyperforecast.learning.trainer import Attempt, HeadTrainer, Job, Trainer, a
 
 __all__ = [
     "Attempt", "Boundary", "CHUNK_ROWS", "Carryover", "ClassSummaries", "Exemplars", "HeadTrainer", "Job", "Trainer",
-    "accuracies", "align_weights", "boundary_seed", "choose_exemplars", "class_limits", "class_probabilities",
-    "close_boundary", "distillation", "herd", "merge_classes", "open_boundary", "predict_codes", "present_codes",
-    "rename_class", "standardize", "try_settings", "unit_rows", "without_class",
+    "accuracies", "align_weights", "boundary_seed", "check_accuracies", "choose_exemplars", "class_limits",
+    "class_probabilities", "close_boundary", "distillation", "herd", "merge_classes", "open_boundary", "predict_codes",
+    "present_codes", "rename_class", "standardize", "try_settings", "unit_rows", "without_class",
 ]

@@ -45,6 +45,32 @@ def accuracies(trainer, head, Z, y, n_classes):
     return by_class
 
 
+def check_accuracies(trainer, boundary, attempts, *, old_weight=None):
+    """Return the accuracy of each attempt on the rows held back from training, shape (n,); below 0 where one diverged.
+
+    Parameters
+    ----------
+    trainer : Trainer
+    boundary : Boundary
+    attempts : list of Attempt
+    old_weight : float in [0, 1], optional
+        Weight of the old classes, new ones have the rest; by default every class counts alike. Classes without such
+        rows do not count; without any row all attempts are alike, 0.
+    """
+    rows, n_old = boundary.check_set(), boundary.n_old
+    held = np.bincount(rows.y, minlength=boundary.n_classes) > 0
+    weight = held / max(held.sum(), 1)
+    if old_weight is not None and held[:n_old].any() and held[n_old:].any():
+        weight = np.concatenate([old_weight * held[:n_old] / held[:n_old].sum(),
+                                 (1 - old_weight) * held[n_old:] / held[n_old:].sum()])
+
+    def accuracy(attempt):
+        by_class = accuracies(trainer, attempt.head, rows.Z, rows.y, boundary.n_classes)
+        return float(weight @ np.nan_to_num(by_class))
+
+    return np.array([-1.0 if attempt.diverged else accuracy(attempt) for attempt in attempts])
+
+
 def close_boundary(trainer, boundary, attempt, *, seed):
     """Return the `Carryover` after keeping `attempt`: its head, exemplars cut and chosen, summaries brought up to date.
 

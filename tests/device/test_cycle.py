@@ -57,9 +57,9 @@ FIRST, SECOND, THIRD = ["nut", "bolt", "rod"], ["hook", "ring"], ["nut", "plate"
 @pytest.fixture
 def started(tmp_path, forecasters):
     """A function that makes the device folder of a method with its first update."""
-    def start(method="ewc"):
-        update(tmp_path / "arm", clouds(FIRST), plan=PLANS[method])
-        return tmp_path / "arm"
+    def start(method="ewc", name="arm"):
+        update(tmp_path / name, clouds(FIRST), plan=PLANS[method])
+        return tmp_path / name
     return start
 
 
@@ -172,7 +172,7 @@ def test_a_dry_run_stops_after_the_advice_and_changes_nothing(started, forecaste
 # --- the rules ------------------------------------------------------------------------------------------------------
 
 def test_a_device_keeps_what_advice_is_to_care_for(tmp_path, forecasters):
-    told = Preferences(old_weight=0.9, now_weight=0.5, tolerance=0.02)
+    told = Preferences(old_weight=0.9, now_weight=0.5, tolerance=0.02, unfamiliar="warn")
     update(tmp_path / "cell", clouds(FIRST), plan=PLANS["wa"], preferences=told)
     folder, forecaster = DeviceFolder(tmp_path / "cell"), forecasters["wa"]
     kept = update(folder, clouds(SECOND, seed=1), forecaster=forecaster, dry_run=True)
@@ -186,6 +186,31 @@ def test_a_device_keeps_what_advice_is_to_care_for(tmp_path, forecasters):
     assert cycle.kept_preferences(folder.read().history) == Preferences(now_weight=1)
     with pytest.raises(InputError, match="^old_weight: must be a number from 0 to 1; received 2"):
         update(folder, clouds(THIRD, seed=3), forecaster=forecaster, preferences=Preferences(old_weight=2))
+
+
+def test_a_boundary_unlike_the_records_is_tried_or_left_to_the_constant(started, forecasters):
+    folder, odd = started("wa"), clouds(SECOND, seed=1)
+    odd = check_increment(odd.X * 1000, odd.y)
+    report = update(folder, odd, forecaster=forecasters["wa"], preferences=Preferences(unfamiliar="try 3"))
+    tried, entry = report.entry["unfamiliar"]["tried"], report.entry
+    assert entry["unfamiliar"]["policy"] == "try 3" and entry["advice"]["familiarity"]["why"]
+    assert sorted(map(str, (one["settings"] for one in tried))) == sorted(
+        str(one.as_dict()) for one in report.advice.ranked[:3])
+    accuracies = [one["check_accuracy"] for one in tried]
+    assert accuracies == sorted(accuracies, reverse=True)
+    first = (entry["earlier_tries"] or [entry])[0]
+    assert first["settings"] == tried[0]["settings"]
+    if not first["diverged"]:
+        assert accuracies[0] == pytest.approx(first["achieved"]["all"], abs=1e-4)
+    # The same settings alone come out the same.
+    if entry["kept"]:
+        alone = update(started("wa", name="alone"), odd, forecaster=forecasters["wa"], settings=Settings(**entry["settings"]),
+                       preferences=Preferences(unfamiliar="constant"))
+        assert alone.entry["achieved"] == entry["achieved"] and alone.entry["unfamiliar"] is None
+    constant = update(started("wa", name="other"), odd, forecaster=forecasters["wa"], retries=0,
+                      preferences=Preferences(unfamiliar="constant"))
+    assert constant.entry["unfamiliar"] == {"policy": "constant", "tried": []}
+    assert constant.entry["settings"] == constant.advice.constant.as_dict()
 
 
 @pytest.mark.parametrize("damaged", [{"old_weight": "much"}, {"weight": 1}, [], "old"])

@@ -113,7 +113,7 @@ def test_advice_tells_what_the_forecaster_says_of_its_settings(forecasters, here
     assert (found.expected_old, found.expected_new, found.expected_all) == tuple(
         expected[name].at(0) for name in ("old", "new", "all"))
     assert found.divergence == at.divergence([found.settings])[0]
-    assert found.familiarity == forecaster.familiarity.assess(forecaster.vector(here))
+    assert found.familiarity == forecaster.familiarity.assess(here)
     assert found.constant == forecaster.constant_settings(here, box)
 
 
@@ -162,6 +162,28 @@ def test_later_boundaries_weigh_as_much_as_is_told(made, here):
     assert advise_settings(again, here, box, now_weight=0.9).settings.learning_rate < 10**-2.5
 
 
+@pytest.mark.parametrize("sign", [{"closest_classes": 1.0}, {"cut_feature": 0.9}, {"rows_per_class": 1.0}])
+def test_at_a_boundary_unlike_the_records_the_user_decides(sign, made, here):
+    """The models say a low learning rate; the constant is another one."""
+    forecaster = made(shortfall=ensemble(band("log_learning_rate", LOW, LOW + 1)))
+    box, strange = SettingsBox("wa", 40), {**here, **sign}
+    tried, warned, constant = (advise_settings(forecaster, strange, box, unfamiliar=policy)
+                               for policy in ("try 5", "warn", "constant"))
+    for one, policy in ((tried, "try 5"), (warned, "warn"), (constant, "constant")):
+        assert one.unfamiliar == policy and len(one.familiarity.why) >= 1
+    assert tried.ranked == warned.ranked and tried.to_try == tried.ranked[:5] and warned.to_try == [warned.settings]
+    assert constant.settings == constant.constant == tried.constant != tried.settings
+    assert constant.ranked[1] == tried.settings and constant.to_try == [constant.constant]
+    assert constant.expected_all.value == forecaster.at(strange).expected([constant.constant])["all"].value[0]
+    # Where nothing is strange there is nothing to decide.
+    usual = replace(forecaster, familiarity=replace(forecaster.familiarity, distances=np.full(9, 1e9, np.float32),
+                                                    low=forecaster.familiarity.low - 1e99,
+                                                    high=forecaster.familiarity.high + 1e99))
+    plain = {**here, "closest_classes": 5.0, "cut_feature": 0.0, "rows_per_class": 9.0}
+    found = [advise_settings(usual, plain, box, unfamiliar=policy) for policy in ("try 5", "warn", "constant")]
+    assert [one.unfamiliar for one in found] == [None] * 3 and [one.to_try for one in found] == [[found[0].settings]] * 3
+
+
 @pytest.mark.parametrize("method", ["wa", "ewc"])
 def test_the_weight_of_old_classes_moves_what_is_expected_of_them(method, forecasters, datasets):
     """With w old + (1 - w) new to be maximized, old - new can only rise with w, but for the steps of the search."""
@@ -198,7 +220,8 @@ def test_the_tolerance_is_the_users(gain, tolerance, expected, made, here):
     forecaster = made(shortfall=ensemble(split("log_kept_per_class", 1.0, leaf(-gain), leaf(0.0))))
     found = advise_settings(forecaster, here, SettingsBox("wa", 40), now_weight=1, tolerance=tolerance)
     assert found.settings.kept_per_class == expected
-    assert found.as_dict()["preferences"] == {"old_weight": None, "now_weight": 1, "tolerance": tolerance}
+    assert found.as_dict()["preferences"] == {
+        "old_weight": None, "now_weight": 1, "tolerance": tolerance, "unfamiliar": "try 4"}
 
 
 @pytest.mark.parametrize("gain, expected", [(0.004, 1), (0.006, 11)])

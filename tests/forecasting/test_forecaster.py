@@ -54,8 +54,7 @@ def test_a_forecaster_comes_back_from_its_file(forecaster, here, tmp_path):
                  "constant_kind", "influential", "recipe"):
         assert getattr(back, name) == getattr(forecaster, name), name
     np.testing.assert_array_equal(back.typical, forecaster.typical)
-    vector = forecaster.vector(here)
-    assert back.familiarity.assess(vector) == forecaster.familiarity.assess(vector)
+    assert back.familiarity.assess(here) == forecaster.familiarity.assess(here)
     save_forecaster(tmp_path / "b.forecaster", back)
     assert (tmp_path / "b.forecaster").read_bytes() == (tmp_path / "a.forecaster").read_bytes()
     assert load_forecaster(str(tmp_path / "b.forecaster")).checksum == sha
