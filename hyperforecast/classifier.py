@@ -237,8 +237,9 @@ class GrowingClassifier:
         if forecaster.method != self.method:
             raise InputError("forecaster", f"must be fitted for the method {self.method}", forecaster.method)
         descriptors = describe(HeadTrainer(), boundary, seed=boundary_seed(seed, boundary.carryover))
+        last = getattr(self, "advice_", None)
         return advise_settings(forecaster, descriptors, SettingsBox(self.method, boundary.most_kept),
-                               **self._preferences().as_dict())
+                               before=last and last.descriptors, **self._preferences().as_dict())
 
     def _preferences(self):
         return Preferences(self.old_weight, self.now_weight, self.tolerance, self.unfamiliar).checked()

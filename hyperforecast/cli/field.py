@@ -116,7 +116,7 @@ def _dry_run(options):
 
 def _advice_lines(advice):
     verdict = advice.familiarity
-    lines = ["Advised settings", *settings_lines(advice.settings), *_preference_lines(advice.preferences),
+    lines = ["Advised settings", *_spread_lines(advice), *_preference_lines(advice.preferences),
              "Accuracy to expect, with 90% interval"]
     for name, one in (("old classes", advice.expected_old), ("new classes", advice.expected_new),
                       ("all classes", advice.expected_all)):
@@ -131,6 +131,12 @@ def _advice_lines(advice):
     lines.append("Alternatives, best first")
     lines += [f"  {place}. {short(one)}" for place, one in enumerate(advice.alternatives, 2)]
     return [*lines, CAUTION]
+
+
+def _spread_lines(advice):
+    """Lines of the advised settings with the factor by which each may differ at the cost of a point."""
+    return [f"{line:<32}  as good, to a point, within a factor of {spread:.2g}"
+            for line, spread in zip(settings_lines(advice.settings), advice.spreads.values())]
 
 
 def _done_about_it(advice):

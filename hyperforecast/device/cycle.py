@@ -356,7 +356,13 @@ def _advise(folder, before, trainer, boundary, forecaster, preferences, seed):
         raise InputError("forecaster", f"must be one for {method}, the method of the plan", forecaster.method)
     descriptors = describe(trainer, boundary, seed=seed)
     return advise_settings(forecaster, descriptors, SettingsBox(method, boundary.most_kept),
-                           **preferences.as_dict())
+                           before=_last_descriptors(before.history), **preferences.as_dict())
+
+
+def _last_descriptors(history):
+    """Descriptors at the last boundary, None where there are none."""
+    told = [entry["descriptors"] for entry in history if entry.get("descriptors")]
+    return {name: np.nan if value is None else value for name, value in told[-1].items()} if told else None
 
 
 def _overruled(settings, by, because):

@@ -3,7 +3,7 @@
 Read trees, networks, intervals, familiarity, forecaster, preferences, advice, weighing, waiting, in this order.
 """
 
-from hyperforecast.forecasting.advice import DIVERGENCE_PRICE, Advice, Reason, advise_settings, explain
+from hyperforecast.forecasting.advice import DIVERGENCE_PRICE, Advice, advise_settings
 from hyperforecast.forecasting.familiarity import Familiarity, FamiliarityVerdict
 from hyperforecast.forecasting.forecaster import (
     NETWORK, RANGES, Constant, Expected, Forecaster, combined, forecaster_bytes, load_forecaster, save_forecaster, with_checksum,
@@ -20,7 +20,6 @@ from hyperforecast.forecasting.weighing import RIDGE, RISKY, Outlook, Ridge, alo
 
 __all__ = ["Advice", "Constant", "DIVERGENCE_PRICE", "Expected", "Familiarity", "FamiliarityVerdict", "Forecaster",
            "LEAST_GAIN", "NETWORK", "NETWORK_LAYERS", "NetworkEnsemble", "NothingNew", "Outlook", "Preferences", "RANGES",
-           "RIDGE", "RISKY", "Reason", "Ridge", "TreeEnsemble", "UNFAMILIAR", "Waiting", "advise_settings", "along",
-           "await_rows", "bend", "combined", "explain", "forecaster_bytes", "grouped_conformal_threshold",
-           "load_forecaster", "nothing_new", "opening_settings", "outlook", "retraining_signs", "ridge",
-           "save_forecaster", "with_checksum"]
+           "RIDGE", "RISKY", "Ridge", "TreeEnsemble", "UNFAMILIAR", "Waiting", "advise_settings", "along", "await_rows",
+           "bend", "combined", "forecaster_bytes", "grouped_conformal_threshold", "load_forecaster", "nothing_new",
+           "opening_settings", "outlook", "retraining_signs", "ridge", "save_forecaster", "with_checksum"]

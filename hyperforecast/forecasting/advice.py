@@ -6,7 +6,7 @@ from functools import cached_property
 import numpy as np
 
 from hyperforecast.forecasting.familiarity import FamiliarityVerdict
-from hyperforecast.forecasting.forecaster import Forecaster, old_share
+from hyperforecast.forecasting.forecaster import BoundaryForecast, Forecaster, old_share
 from hyperforecast.forecasting.preferences import Preferences
 from hyperforecast.settings import KEPT_PER_CLASS, Settings, SettingsBox
 
@@ -21,37 +21,9 @@ DIVERGENCE_PRICE = 0.3
 ALTERNATIVES = 8
 # Alternatives differ from better ranked ones by at least this much, in unit-cube distance.
 FEWEST_APART = 0.08
-# Descriptors, by their influence on the models, whose part in the advice is looked into.
-MOST_EXPLAINED = 10
-
-
-@dataclass(frozen=True)
-class Reason:
-    """What one descriptor did to the advice: with its typical value instead, `setting` would be `factor` times less.
-
-    Attributes
-    ----------
-    descriptor, setting : str
-    value, typical : float
-        The descriptor here, and its median over the records.
-    factor : float
-        Advised value over the value that would be advised with the typical descriptor.
-    moved : float
-        How far the advice moves in the unit cube of settings.
-    """
-
-    descriptor: str
-    setting: str
-    value: float
-    typical: float
-    factor: float
-    moved: float
-
-    def __str__(self):
-        how = "higher" if self.factor > 1 else "lower"
-        times = max(self.factor, 1 / self.factor)
-        return (f"{self.setting} {times:.2g} times {how} than with a typical {self.descriptor}: "
-                f"{self.value:.3g} here, {self.typical:.3g} in the records")
+# A setting is good as far as the expected outcome stays within this of that at the point; looked for in so many steps
+# along each axis, up to half of it in both directions.
+GOOD, STEPS = 0.01, 33
 
 
 @dataclass(frozen=True)
@@ -74,8 +46,12 @@ class Advice:
         What the best constant would have been here.
     descriptors : dict of str to float
     forecaster : Forecaster
+    forecast : BoundaryForecast
+        Of the forecaster, here.
     box : SettingsBox
     preferences : Preferences
+    before : dict of str to float
+        Descriptors at the last boundary, that reasons are given against; empty where there is none.
     """
 
     settings: Settings
@@ -88,13 +64,44 @@ class Advice:
     constant: Settings
     descriptors: dict
     forecaster: Forecaster = field(repr=False)
+    forecast: BoundaryForecast = field(repr=False, compare=False)
     box: SettingsBox = field(repr=False)
     preferences: Preferences = Preferences()
+    before: dict = field(default_factory=dict, repr=False)
 
     @cached_property
     def reasons(self):
-        """The descriptors that moved the advice most, as `Reason`, greatest first; computed when first asked for."""
-        return explain(self.forecaster, self.descriptors, self.box, preferences=self.preferences)
+        """What moved each setting, as a list of `Reason`, the greatest first; computed when first asked for."""
+        # Reasons take advice.
+        from hyperforecast.forecasting.reasons import explain
+
+        return explain(self)
+
+    @cached_property
+    def spreads(self):
+        """How wide the good region around the advised settings is, see `spreads_at`; computed when first asked for."""
+        return self.spreads_at(self.settings)
+
+    def spreads_at(self, settings):
+        """Return {setting: factor >= 1}: from value / factor to value * factor the expected outcome stays good.
+
+        Good is within a point of the outcome at `settings` itself, the other settings staying as they are. Where the
+        value is not in the middle of what is good, the factor still spans as much: it is the square root of the highest
+        good value over the lowest.
+        """
+        center, middle = self.box.to_unit([settings])[0], STEPS // 2
+        offsets = np.linspace(-0.5, 0.5, STEPS)
+        lines = np.clip(center + offsets[:, None] * np.eye(len(center))[:, None], 0, 1)
+        lines = self.box.from_unit(lines.reshape(-1, len(center)))
+        values = objective(self.forecast, lines, self.preferences).reshape(-1, STEPS)
+        factors = {}
+        for name, line, good in zip(self.box.names, np.reshape(lines, (-1, STEPS)),
+                                    values >= values[:, middle:middle + 1] - GOOD):
+            below, above = good[middle::-1], good[middle:]
+            low = line[middle + 1 - (len(below) if below.all() else below.argmin())]
+            high = line[middle - 1 + (len(above) if above.all() else above.argmin())]
+            factors[name] = float(f"{np.sqrt(getattr(high, name) / getattr(low, name)):.4g}")
+        return factors
 
     @property
     def ranked(self):
@@ -114,20 +121,20 @@ class Advice:
     def as_dict(self):
         """Return a JSON-able dict."""
         return {
-            "method": self.forecaster.method, "settings": self.settings.as_dict(),
+            "method": self.forecaster.method, "settings": self.settings.as_dict(), "spreads": self.spreads,
             "alternatives": [one.as_dict() for one in self.alternatives],
             "expected": {"old": self.expected_old.as_dict(), "new": self.expected_new.as_dict(),
                          "all": self.expected_all.as_dict()},
             "divergence": self.divergence,
             "familiarity": self.familiarity.as_dict(), "unfamiliar": self.unfamiliar,
             "constant": self.constant.as_dict(), "preferences": self.preferences.as_dict(),
-            "reasons": [{**one.__dict__, "text": str(one)} for one in self.reasons],
+            "reasons": [one.as_dict() for one in self.reasons],
             "descriptors": {name: None if np.isnan(value) else value for name, value in self.descriptors.items()},
             "forecaster": self.forecaster.checksum,
         }
 
 
-def advise_settings(forecaster, descriptors, box, **preferences):
+def advise_settings(forecaster, descriptors, box, *, before=None, **preferences):
     """Return the `Advice` of a forecaster for a boundary.
 
     Parameters
@@ -137,6 +144,8 @@ def advise_settings(forecaster, descriptors, box, **preferences):
         NaN, or no entry, is missing.
     box : SettingsBox
         The settings that are open at the boundary.
+    before : dict of str to float, optional
+        Descriptors at the device's last boundary: reasons are given against them.
     preferences : old_weight, now_weight, tolerance, unfamiliar
         See `Preferences`.
     """
@@ -154,41 +163,15 @@ def advise_settings(forecaster, descriptors, box, **preferences):
         settings=best, alternatives=alternatives, expected_old=expected["old"].at(0),
         expected_new=expected["new"].at(0), expected_all=expected["all"].at(0),
         divergence=float(forecast.divergence([best])[0]),
-        familiarity=familiarity, constant=constant, descriptors=descriptors, forecaster=forecaster, box=box,
-        preferences=preferences,
+        familiarity=familiarity, constant=constant, descriptors=descriptors, forecaster=forecaster,
+        forecast=forecast, box=box, preferences=preferences, before=before or {},
     )
 
 
-def explain(forecaster, descriptors, box, *, preferences=Preferences(), count=3):
-    """Return the `count` most telling `Reason`: each descriptor in turn is set to its typical value, and advice taken.
-
-    Only the most influential descriptors are looked into, over the candidates that cover the whole box.
-    """
-    points = lattice(SPREAD_OUT, box.n_dimensions)
-    settings = box.from_unit(points)
-    near = forecaster.narrowed(descriptors, forecaster.influential[:MOST_EXPLAINED])
-
-    def choice(described):
-        return points[int(np.argmax(_smooth(points, _scores(near.at(described), settings, box, preferences))))]
-
-    here = choice(descriptors)
-    typical = dict(zip(forecaster.descriptor_names, forecaster.typical))
-    reasons = []
-    for name in forecaster.influential[:MOST_EXPLAINED]:
-        value = descriptors.get(name, np.nan)
-        if np.isnan(value) or np.isnan(typical[name]):
-            continue
-        advised, instead = box.from_unit(np.stack([here, choice({**descriptors, name: typical[name]})]))
-        # Of settings, not of points: several points stand for one number of exemplars.
-        change = np.subtract(*box.to_unit([advised, instead]))
-        if not change.any():
-            continue
-        most = int(np.argmax(np.abs(change)))
-        setting = box.names[most]
-        factor = getattr(advised, setting) / getattr(instead, setting)
-        reasons.append(Reason(name, setting, float(value), float(typical[name]), float(factor),
-                              float(np.linalg.norm(change))))
-    return sorted(reasons, key=lambda one: -one.moved)[:count]
+def choose(forecast, box, preferences):
+    """Return the `Settings` with the best expected outcome, in the sense of `Preferences`."""
+    settings, scores = _weigh(forecast, box, preferences)
+    return _fewest_kept(forecast, settings[int(np.argmax(scores))], box, preferences)
 
 
 def lattice(n, n_dimensions):
@@ -220,10 +203,10 @@ def _scores(forecast, settings, box, preferences):
     # Direct forecasts know nothing of weights.
     if forecast.forecaster.ranking == "direct" and preferences.old_weight is None:
         return -np.linalg.norm(box.to_unit(settings) - forecast.direct(box), axis=1)
-    return _objective(forecast, settings, preferences)
+    return objective(forecast, settings, preferences)
 
 
-def _objective(forecast, settings, preferences):
+def objective(forecast, settings, preferences):
     """Return the expected outcome (n,), now and later, from the best, less the price of perhaps diverging."""
     now = preferences.now_weight
     value = now * forecast.shortfall(settings)
@@ -252,7 +235,7 @@ def _fewest_kept(forecast, best, box, preferences):
         return best
     kept = np.flatnonzero(np.bincount(np.round(np.geomspace(KEPT_PER_CLASS[0], box.most_kept, 24)).astype(int)))
     candidates = [replace(best, kept_per_class=int(k)) for k in kept]
-    values = _objective(forecast, candidates, preferences)
+    values = objective(forecast, candidates, preferences)
     return candidates[int(np.argmax(values >= values.max() - preferences.tolerance))]
 
 

@@ -51,6 +51,11 @@ def clouds(labels, *, seed=0, rows=40, features=6, apart=4.0):
     return check_increment(X, np.repeat(labels, rows))
 
 
+def update(folder, increment, *, preferences=Preferences(unfamiliar="warn"), **options):
+    """An update that follows the advice though these tiny forecasters know no such boundary."""
+    return cycle.update(folder, increment, preferences=preferences, **options)
+
+
 FIRST, SECOND, THIRD = ["nut", "bolt", "rod"], ["hook", "ring"], ["nut", "plate"]
 
 
@@ -129,7 +134,7 @@ def test_a_growing_classifier_learns_the_same_bit_for_bit(tmp_path, forecasters,
         increment = clouds(labels, seed=number)
         classifier.partial_fit(increment.X, increment.y)
         update(tmp_path / "arm", increment, plan=plan if number == 0 else None, forecaster=forecasters[method], seed=5,
-               **lenient)
+               preferences=Preferences(), **lenient)
     assert content(tmp_path / "arm") == bundle_checksum(carryover_bundle(classifier.carryover_, []))
 
 
@@ -175,13 +180,13 @@ def test_a_device_keeps_what_advice_is_to_care_for(tmp_path, forecasters):
     told = Preferences(old_weight=0.9, now_weight=0.5, tolerance=0.02, unfamiliar="warn")
     update(tmp_path / "cell", clouds(FIRST), plan=PLANS["wa"], preferences=told)
     folder, forecaster = DeviceFolder(tmp_path / "cell"), forecasters["wa"]
-    kept = update(folder, clouds(SECOND, seed=1), forecaster=forecaster, dry_run=True)
+    kept = cycle.update(folder, clouds(SECOND, seed=1), forecaster=forecaster, dry_run=True)
     assert kept.entry["preferences"] == told.as_dict() and kept.advice.preferences == told
     usual = update(folder, clouds(SECOND, seed=1), forecaster=forecaster, preferences=Preferences(), dry_run=True)
     assert usual.advice.preferences == Preferences()
     assert kept.advice.expected_old.value >= usual.advice.expected_old.value
     # A dry run leaves it as it was; an update does not.
-    assert update(folder, clouds(SECOND, seed=1), forecaster=forecaster).advice.preferences == told
+    assert cycle.update(folder, clouds(SECOND, seed=1), forecaster=forecaster).advice.preferences == told
     update(folder, clouds(THIRD, seed=2), forecaster=forecaster, preferences=Preferences(now_weight=1))
     assert cycle.kept_preferences(folder.read().history) == Preferences(now_weight=1)
     with pytest.raises(InputError, match="^old_weight: must be a number from 0 to 1; received 2"):

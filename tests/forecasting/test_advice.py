@@ -8,10 +8,8 @@ import pytest
 
 from hyperforecast.checks import InputError
 from hyperforecast.describing import DESCRIPTORS
+from hyperforecast.forecasting import TreeEnsemble, advice, advise_settings, load_forecaster, save_forecaster
 from hyperforecast.forecasting.forecaster import MODELS
-from hyperforecast.forecasting import (
-    Reason, TreeEnsemble, advice, advise_settings, explain, load_forecaster, save_forecaster,
-)
 from hyperforecast.settings import COORDINATES, Settings, SettingsBox
 
 INPUTS = [*DESCRIPTORS, *COORDINATES]
@@ -263,98 +261,21 @@ def test_direct_forecasts_are_followed_to_the_next_candidate(direct, here):
     assert distances[0] < 0.15 and np.mean(np.diff(distances) > 0) > 0.6
 
 
-# Reasons.
-
-
-@pytest.fixture
-def torn(made):
-    """Few rows call for low learning rates, many for high ones; a typical increment has many."""
-    trees = split("rows", 50.0, split("log_learning_rate", LOW, leaf(0.0), leaf(-1.0)),
-                  split("log_learning_rate", HIGH, leaf(-1.0), leaf(0.0)))
-    forecaster = made(shortfall=ensemble(trees))
-    typical = np.where(np.array(forecaster.descriptor_names) == "rows", 200.0, forecaster.typical)
-    return replace(forecaster, typical=typical, influential=("features", "rows", "classes_new"))
-
-
-def test_a_reason_names_the_descriptor_that_moved_the_advice(torn, here):
-    found = advise_settings(torn, {**here, "rows": 10.0}, SettingsBox("wa", 40))
-    assert found.settings.learning_rate <= 10**LOW
-    reason, = found.reasons
-    assert (reason.descriptor, reason.setting, reason.value, reason.typical) == ("rows", "learning_rate", 10.0, 200.0)
-    assert reason.factor <= 10 ** (LOW - HIGH) and 0.4 < reason.moved < 1.8
-    assert str(reason) == (f"learning_rate {1 / reason.factor:.2g} times lower than with a typical rows: "
-                           "10 here, 200 in the records")
-    # Put to its typical value, that descriptor indeed changes the advice, and nothing is left to say.
-    other = advise_settings(torn, {**here, "rows": 200.0}, SettingsBox("wa", 40))
-    assert other.settings.learning_rate > 10**HIGH and other.reasons == []
-
-
-def test_what_is_unknown_or_without_influence_is_no_reason(torn, here):
-    few, box = {**here, "rows": 10.0}, SettingsBox("wa", 40)
-    assert explain(torn, {**few, "rows": np.nan}, box) == []
-    assert explain(replace(torn, influential=("features", "classes_new")), few, box) == []
-    unknown = replace(torn, typical=np.full(len(torn.typical), np.nan))
-    assert explain(unknown, few, box) == []
-
-
-def test_a_number_of_exemplars_that_stays_the_same_is_no_reason(made, here):
-    """With room for one exemplar a class, points far apart along that axis all keep one."""
-    box, points = SettingsBox("wa", 1), advice.lattice(256, 3)
-    offsets = np.abs(points[:, None] - points)
-    along = offsets[..., 2] - 4 * offsets[..., :2].max(axis=2)
-    few, many = points[list(np.unravel_index(along.argmax(), along.shape))]
-
-    def only(point):
-        rate, strength = (np.log10([getattr(one, name) for one in box.from_unit(point + [[-1e-3], [1e-3]])])
-                          for name in ("learning_rate", "regularization"))
-        return split("log_learning_rate", rate[0], leaf(-1.0), split("log_learning_rate", rate[1], band(
-            "log_regularization", *strength), leaf(-1.0)))
-
-    forecaster = made(shortfall=ensemble(split("rows", 50.0, only(few), only(many))))
-    typical = np.where(np.array(forecaster.descriptor_names) == "rows", 200.0, forecaster.typical)
-    reason, = explain(replace(forecaster, typical=typical, influential=("rows",)), {**here, "rows": 10.0}, box)
-    assert reason.setting != "kept_per_class" and reason.factor != 1
-
-
-def test_reasons_agree_with_advice_taken_anew(forecasters, datasets):
-    """By the definition: the best of 256 candidates, scores averaged over neighbours, with and without."""
-    forecaster, dataset = replace(forecasters["wa"], ranking="outcome"), datasets["wa"]
-    box = SettingsBox("wa", 20)
-    points = advice.lattice(256, 3)
-    candidates = box.from_unit(points)
-    apart = np.linalg.norm(points[:, None] - points, axis=2)
-    weights = np.exp(-0.5 * (apart / 0.05) ** 2)
-
-    def best(descriptors):
-        at = forecaster.at(descriptors)
-        scores = at.shortfall(candidates) / 3 + 2 / 3 * at.later(candidates) - 0.3 * at.divergence(candidates)
-        return candidates[int(np.argmax(np.round((weights * scores).sum(axis=1) / weights.sum(axis=1), 9)))]
-
-    typical, told = dict(zip(DESCRIPTORS, forecaster.typical)), 0
-    for row in dataset.descriptors[::5]:
-        here = dict(zip(DESCRIPTORS, row))
-        reasons = {one.descriptor: one for one in explain(forecaster, here, box, count=99)}
-        told += len(reasons)
-        for name in forecaster.influential[:10]:
-            if np.isnan(here[name]) or np.isnan(typical[name]):
-                assert name not in reasons
-                continue
-            advised, instead = best(here), best({**here, name: typical[name]})
-            assert (name in reasons) == (advised != instead)
-            if name in reasons:
-                one = reasons[name]
-                assert one.factor == pytest.approx(getattr(advised, one.setting) / getattr(instead, one.setting))
-                assert one.moved == pytest.approx(np.linalg.norm(np.subtract(*box.to_unit([advised, instead]))))
-        first = explain(forecaster, here, box)
-        assert [one.moved for one in first] == sorted((one.moved for one in reasons.values()), reverse=True)[:3]
-    assert told > 0
-
-
-def test_reasons_read_as_sentences():
-    assert str(Reason("curvature_new", "learning_rate", 2.0, 1.0, 0.25, 0.3)) == (
-        "learning_rate 4 times lower than with a typical curvature_new: 2 here, 1 in the records")
-    assert str(Reason("rows", "kept_per_class", 12345.678, 0.001, 3.0, 0.3)) == (
-        "kept_per_class 3 times higher than with a typical rows: 1.23e+04 here, 0.001 in the records")
+def test_spreads_say_how_far_a_setting_is_good(made, here):
+    """A learning rate of one decade is good; of the exemplars more than 10 of a class cost two points."""
+    forecaster = made(shortfall=ensemble(band("log_learning_rate", LOW, LOW + 1),
+                                         split("log_kept_per_class", 1.0, leaf(0.0), leaf(-0.02))))
+    found = advise_settings(forecaster, here, SettingsBox("wa", 40), now_weight=1)
+    # Half a decade up or down, to a step of the scan (5/32 of a decade); regularization has no part in it.
+    assert abs(np.log10(found.spreads["learning_rate"]) - 0.5) < 5 / 32
+    assert found.spreads["regularization"] >= 1e2
+    # From the advised one exemplar to 10, on a whole number's grid.
+    assert found.settings.kept_per_class == 1 and 9 <= found.spreads["kept_per_class"] ** 2 <= 10
+    steep = advise_settings(made(shortfall=ensemble(*(
+        split("log_learning_rate", t, leaf(-0.02 * (t < -2)), leaf(-0.02 * (t >= -2))) for t in np.arange(-5, 0, 0.1)))),
+        here, SettingsBox("wa", 40), now_weight=1)
+    assert 1 <= steep.spreads["learning_rate"] < found.spreads["learning_rate"]
+    assert steep.as_dict()["spreads"] == steep.spreads
 
 
 @pytest.mark.parametrize("n_dimensions", [2, 3])

@@ -4,6 +4,8 @@ import numpy as np
 import pytest
 
 from hyperforecast.checks import InputError
+from hyperforecast.describing import DESCRIPTORS
+from hyperforecast.forecasting import advise_settings
 from hyperforecast.settings import Settings, SettingsBox
 from hyperforecast.workshop.searching import (
     STRATEGIES,
@@ -13,13 +15,14 @@ from hyperforecast.workshop.searching import (
     run_search,
     space_filling,
     uniform_draws,
-    warm_starts_around,
+    warm_starts_of,
     write_warm_starts,
 )
 from hyperforecast.workshop.searching.tpe import ParzenDensity, propose
 
 EWC, WA = SettingsBox("ewc"), SettingsBox("wa", 40)
 SOME = [Settings(0.01, 1.0, 20), Settings(0.02, 3.0, 60)]
+STARTS = [WarmStart(one, {"learning_rate": 2.0, "regularization": 3.0, "kept_per_class": 3.0}) for one in SOME]
 
 
 def ridge(box, width, crest):
@@ -225,19 +228,21 @@ def test_the_density_samples_what_it_says():
 
 def test_warm_starts_survive_a_file(tmp_path):
     path = tmp_path / "starts.json"
-    starts = warm_starts_around(SOME)
-    write_warm_starts(path, starts, "wa")
-    assert read_warm_starts(path, "wa") == starts
+    write_warm_starts(path, STARTS, "wa")
+    assert read_warm_starts(path, "wa") == STARTS
     document = json.loads(path.read_text())
     assert document["ranges"]["kept_per_class"] == [1, 80] and document["scale"] == "logarithmic"
     assert document["points"][0]["settings"] == {"learning_rate": 0.01, "regularization": 1.0, "kept_per_class": 20}
     assert document["points"][0]["spread"] == {"learning_rate": 2.0, "regularization": 3.0, "kept_per_class": 3.0}
 
 
-def test_spreads_of_one_or_no_point():
-    assert warm_starts_around([]) == []
-    one = Settings(0.1, 1.0)
-    assert warm_starts_around([one]) == [WarmStart(one, {"learning_rate": 1.0, "regularization": 1.0})]
+def test_warm_starts_are_the_ranked_settings_with_the_spreads_of_the_advice(forecasters, datasets):
+    here = dict(zip(DESCRIPTORS, datasets["wa"].descriptors[2]))
+    advice = advise_settings(forecasters["wa"], here, SettingsBox("wa", 20))
+    starts = warm_starts_of(advice)
+    assert [one.settings for one in starts] == advice.ranked and starts[0].spread == advice.spreads
+    assert all(set(one.spread) == {"learning_rate", "regularization", "kept_per_class"} for one in starts)
+    assert all(factor >= 1 for one in starts for factor in one.spread.values())
 
 
 @pytest.mark.parametrize("damage, match", [
@@ -256,7 +261,7 @@ def test_spreads_of_one_or_no_point():
 ])
 def test_damaged_warm_starts_are_refused(tmp_path, damage, match):
     path = tmp_path / "starts.json"
-    write_warm_starts(path, warm_starts_around(SOME), "wa")
+    write_warm_starts(path, STARTS, "wa")
     document = json.loads(path.read_text())
     damage(document)
     path.write_text(json.dumps(document))
@@ -266,5 +271,5 @@ def test_damaged_warm_starts_are_refused(tmp_path, damage, match):
 
 def test_warm_starts_that_do_not_fit_are_not_written(tmp_path):
     with pytest.raises(InputError, match="kept_per_class"):
-        write_warm_starts(tmp_path / "starts.json", warm_starts_around(SOME), "ewc")
+        write_warm_starts(tmp_path / "starts.json", STARTS, "ewc")
     assert list(tmp_path.iterdir()) == []

@@ -7,7 +7,7 @@ from hyperforecast.workshop.searching.search import STARTUP, STRATEGIES, SearchR
 from hyperforecast.workshop.searching.warm_starts import (
     WarmStart,
     read_warm_starts,
-    warm_starts_around,
+    warm_starts_of,
     write_warm_starts,
 )
 
@@ -25,6 +25,6 @@ __all__ = [
     "run_search",
     "space_filling",
     "uniform_draws",
-    "warm_starts_around",
+    "warm_starts_of",
     "write_warm_starts",
 ]

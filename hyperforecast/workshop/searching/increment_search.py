@@ -11,7 +11,7 @@ from hyperforecast.learning import HeadTrainer, open_boundary
 from hyperforecast.settings import SettingsBox
 from hyperforecast.workshop.searching.boundary_search import BoundarySearch, class_codes
 from hyperforecast.workshop.searching.search import run_search
-from hyperforecast.workshop.searching.warm_starts import warm_starts_around
+from hyperforecast.workshop.searching.warm_starts import warm_starts_of
 
 
 @dataclass(frozen=True)
@@ -31,7 +31,7 @@ class IncrementSearch:
 
     def warm_starts(self):
         """Return the forecaster's ranked settings with spreads, a list of `WarmStart`."""
-        return warm_starts_around(self.advice.ranked)
+        return warm_starts_of(self.advice)
 
     def run(self, *, strategy, attempts, warm, seed, on_progress=None):
         """Return the `SearchResult` of `run_search`; with `warm` it begins with the forecaster's ranked settings."""

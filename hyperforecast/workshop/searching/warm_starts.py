@@ -2,12 +2,10 @@
 
 The document names the method, the scale and range of each setting, and the points, best first, each
 with a spread per setting: a factor of at least 1. The good region is expected from value / spread to
-value * spread; 1 means that nothing is known about its width.
+value * spread (`hyperforecast.forecasting.Advice.spreads_at`); 1 means that nothing is known about its width.
 """
 
 from dataclasses import dataclass
-
-import numpy as np
 
 from hyperforecast.checks import InputError, check_choice, check_keys, check_number
 from hyperforecast.settings import METHODS, Settings, SettingsBox
@@ -32,19 +30,9 @@ class WarmStart:
     spread: dict
 
 
-def warm_starts_around(ranked):
-    """Return a `WarmStart` for each of a list of `Settings`.
-
-    The spread is how far the others lie from the point: exp of the root mean square difference of logarithms.
-    """
-    names = list(ranked[0].as_dict()) if ranked else []
-    logs = np.log([[getattr(one, name) for name in names] for one in ranked])
-    starts = []
-    for one, center in zip(ranked, logs):
-        variance = np.sum((logs - center) ** 2, axis=0) / max(len(ranked) - 1, 1)
-        factors = np.exp(np.sqrt(variance))
-        starts.append(WarmStart(one, {name: float(f"{factor:.6g}") for name, factor in zip(names, factors)}))
-    return starts
+def warm_starts_of(advice):
+    """Return a `WarmStart` for each of the ranked settings of an `Advice`, with its spreads there."""
+    return [WarmStart(one, advice.spreads_at(one)) for one in advice.ranked]
 
 
 def write_warm_starts(path, warm_starts, method):
