@@ -17,7 +17,7 @@ FAR = 1.0  # so many widths of its range (or spreads) beyond it, one descriptor 
 # Signs that an increment is not what it is taken for, whatever the records know. Held-out open streams show one of them
 # in 1 boundary of 12, streams with such faults in 4 of 5 (bench_streams/bench_familiarity.py).
 LIKE_CHANCE = 1.2  # squared distance of two class means over what chance would make it; 1 where they are the same
-TOLD_APART = 0.85  # share of new rows that a probe gets right where classes differ in more than their means
+TOLD_APART = 0.8  # share of new rows that a probe gets right where classes differ in more than their means
 MOST_CUT = 0.75  # share of a feature's values beyond 10 standard deviations of the first increment
 FEWEST_ROWS = 2
 ROUNDING = 1e-9  # a descriptor that varies by a smaller share of its size is constant
