@@ -13,7 +13,7 @@ from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.describing.words import GROUP_WORDS, in_words
 from hyperforecast.forecasting.advice import choose, objective
 from hyperforecast.forecasting.forecaster import BoundaryForecast
-from hyperforecast.settings import COORDINATES, SCALES, scale_free
+from hyperforecast.settings import SCALES, scale_free
 
 # Descriptors, by their influence on the models, that are looked into; how often advice is taken again.
 MOST_LOOKED_INTO, MOST_RETAKEN = 10, 2
@@ -87,8 +87,11 @@ class _OpenForecast(BoundaryForecast):
 
     def __init__(self, forecaster, descriptors, names):
         super().__init__(forecaster, descriptors)
+        self.narrowed = forecaster.narrowed(descriptors, names)
         self._open = [name for name in forecaster.descriptor_names if name in names]
-        self._fixed &= ~np.isin([*forecaster.descriptor_names, *COORDINATES], self._open)
+
+    def _raw(self, model, rows):
+        return self.narrowed[model].predict(rows)
 
     def coordinates(self, pairs):
         return np.concatenate([np.hstack([
@@ -116,13 +119,14 @@ def explain(advice):
     if not trials:
         return []
     put_back = [{**here, **{name: reference[name] for name in trial}} for trial in trials]
-    pulls = _pulls(advice, names, put_back)
+    forecast = _OpenForecast(forecaster, here, names)
+    pulls = _pulls(advice, forecast, put_back)
     factors = {}
 
     def retake(places):
         place = places[0]
         if place not in factors and len(factors) < MOST_RETAKEN:
-            instead = choose(forecaster.at(put_back[place]), box, advice.preferences)
+            instead = choose(forecast.narrowed.at(put_back[place]), box, advice.preferences)
             factors[place] = {name: getattr(advice.settings, name) / getattr(instead, name) for name in box.names}
 
     strongest = np.argsort(-pulls, axis=0, kind="stable")
@@ -164,13 +168,12 @@ def _most_changed(forecaster, changes):
     return sorted(changes, key=lambda one: -abs(one.value - one.reference) / scale.get(one.descriptor, np.inf))
 
 
-def _pulls(advice, names, put_back):
+def _pulls(advice, forecast, put_back):
     """Return how much the descriptors here pull at each setting, against each way of putting some back: (n, D)."""
     box = advice.box
     center = box.to_unit([advice.settings])[0]
     steps = np.concatenate([step * np.eye(len(center)) for step in SLOPE_STEPS])
     probes = box.from_unit(np.clip(np.concatenate([center + steps, center - steps]), 0, 1))
-    forecast = _OpenForecast(advice.forecaster, advice.descriptors, names)
     values = objective(forecast, [(described, probes) for described in (advice.descriptors, *put_back)],
                        advice.preferences).reshape(-1, 2, len(SLOPE_STEPS), len(center))
     slopes = (values[:, 0] - values[:, 1]).sum(axis=1)

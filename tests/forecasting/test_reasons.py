@@ -8,6 +8,7 @@ import pytest
 from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.describing.words import GROUP_WORDS, WORDS
 from hyperforecast.forecasting import TreeEnsemble, advise_settings
+from hyperforecast.forecasting.forecaster import MODELS
 from hyperforecast.forecasting.reasons import LAST, TYPICAL, Change, Reason, explain
 from hyperforecast.settings import COORDINATES, SettingsBox
 
@@ -45,7 +46,7 @@ def slope(name, up):
 def made(forecasters):
     """Function that returns a forecaster with one model made by hand, whose typical descriptors are all 100."""
     def make(tree, influential):
-        flat = {name: ensemble(leaf(-5.0 if name == "diverged" else 0.0)) for name in forecasters["wa"].models}
+        flat = {name: ensemble(leaf(-5.0 if name == "diverged" else 0.0)) for name in MODELS}
         shifted = [(one, value if value is None else value - 1) for one, value in tree]
         return replace(forecasters["wa"], ranking="outcome", models={**flat, "shortfall": ensemble(shifted)},
                        typical=np.full(len(DESCRIPTORS), 100.0), influential=influential)
