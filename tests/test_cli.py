@@ -91,9 +91,10 @@ def test_a_dry_run_stores_nothing(capsys, device, deliveries):
 
 def test_what_advice_is_to_care_for_is_told_and_kept(capsys, device, deliveries):
     given = ["--increment", deliveries[2], "--device", device]
-    usual, old = (run(capsys, "advise", *given, *told) for told in ([], ["--old-weight", "1", "--tolerance", "0.02"]))
-    assert usual["preferences"] == {"old_weight": None, "now_weight": 1 / 3, "tolerance": 0.005}
-    assert old["preferences"] == {"old_weight": 1.0, "now_weight": 1 / 3, "tolerance": 0.02}
+    usual, old = (run(capsys, "advise", *given, *told) for told in (
+        [], ["--old-weight", "1", "--tolerance", "0.02", "--unfamiliar", "warn"]))
+    assert usual["preferences"] == {"old_weight": None, "now_weight": 1 / 3, "tolerance": 0.005, "unfamiliar": "try 4"}
+    assert old["preferences"] == {"old_weight": 1.0, "now_weight": 1 / 3, "tolerance": 0.02, "unfamiliar": "warn"}
     assert old["expected"]["old"]["value"] >= usual["expected"]["old"]["value"]
     main(["update", *given, "--old-weight", "0.8"])
     assert "Asked for  old weight 0.8\n" in capsys.readouterr().out
