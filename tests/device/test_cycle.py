@@ -196,7 +196,8 @@ def test_a_device_keeps_what_advice_is_to_care_for(tmp_path, forecasters):
 def test_a_boundary_unlike_the_records_is_tried_or_left_to_the_constant(started, forecasters):
     folder, odd = started("wa"), clouds(SECOND, seed=1)
     odd = check_increment(odd.X * 1000, odd.y)
-    report = update(folder, odd, forecaster=forecasters["wa"], preferences=Preferences(unfamiliar="try 3"))
+    report = update(folder, odd, forecaster=forecasters["wa"], preferences=Preferences(unfamiliar="try 3"),
+                    another_extractor=True)
     tried, entry = report.entry["unfamiliar"]["tried"], report.entry
     assert entry["unfamiliar"]["policy"] == "try 3" and entry["advice"]["familiarity"]["why"]
     assert sorted(map(str, (one["settings"] for one in tried))) == sorted(
@@ -210,10 +211,10 @@ def test_a_boundary_unlike_the_records_is_tried_or_left_to_the_constant(started,
     # The same settings alone come out the same.
     if entry["kept"]:
         alone = update(started("wa", name="alone"), odd, forecaster=forecasters["wa"], settings=Settings(**entry["settings"]),
-                       preferences=Preferences(unfamiliar="constant"))
+                       preferences=Preferences(unfamiliar="constant"), another_extractor=True)
         assert alone.entry["achieved"] == entry["achieved"] and alone.entry["unfamiliar"] is None
     constant = update(started("wa", name="other"), odd, forecaster=forecasters["wa"], retries=0,
-                      preferences=Preferences(unfamiliar="constant"))
+                      preferences=Preferences(unfamiliar="constant"), another_extractor=True)
     assert constant.entry["unfamiliar"] == {"policy": "constant", "tried": []}
     assert constant.entry["settings"] == constant.advice.constant.as_dict()
 
