@@ -92,11 +92,12 @@ def suspicious_labels(increment, carryover=None, *, most_rows=None, seed=0):
     chosen = rng.permutation(len(increment))[:most_rows]
     X = increment.X[chosen]
     Z, trusted = (standardize(X, *fit_scaling(X)), None) if carryover is None else _beside(carryover, X)
-    labels, y = np.unique(increment.y[chosen], return_inverse=True)
-    old = labels[:0] if carryover is None else carryover.classes
-    classes = np.concatenate([old, np.setdiff1d(labels, old)])
+    # By hand, as is the median: numpy's own import numpy.ma, a good part of the time that advice may take.
+    given = increment.y[chosen].tolist()
+    known = [] if carryover is None else carryover.classes.tolist()
+    classes = np.array([*known, *sorted(set(given).difference(known))], increment.y.dtype.kind)
     place = {label: code for code, label in enumerate(classes.tolist())}
-    y = np.array([place[label] for label in labels.tolist()], np.int64)[y]
+    y = np.array([place[label] for label in given], np.int64)
     values = np.full((len(LENGTHS), len(y), len(classes)), np.nan)
     groups = -(-len(y) // MOST_TOGETHER)
     for k in range(groups if len(classes) > 1 else 0):
@@ -129,7 +130,8 @@ def _left_out(Z, y, trusted, n_classes):
         Z, y = np.concatenate([Z, trusted.Z]), np.concatenate([y, trusted.y])
     values = np.full((len(LENGTHS), n_rows, n_classes), np.nan)
     distances = squared_distances(Z, Z)
-    median = np.median(distances)
+    middle = distances.size // 2
+    median = np.partition(distances, middle, axis=None)[middle]
     if not median > 0:
         return values
     wanted = (y[:, None] == np.arange(n_classes)) * np.float32(2) - np.float32(1)

@@ -3,7 +3,7 @@
 from hyperforecast.describing import similar_names, suspicious_labels
 
 # Rows that are looked at before each advice and update; `hyperforecast check` looks at all.
-QUICK_ROWS = 150
+QUICK_ROWS = 100
 # One row may be doubted by chance.
 FEWEST_DOUBTED = 2
 MOST_NAMES = 5
@@ -12,7 +12,7 @@ MOST_NAMES = 5
 def quick_doubts(increment, carryover, *, seed=0):
     """Return lines about an `Increment` that meets a `Carryover` (None: it is the first): doubts, no refusals.
 
-    New names that look like others, and labels that look wrong among at most 150 rows drawn with `seed`.
+    New names that look like others, and labels that look wrong among at most 100 rows drawn with `seed`.
     """
     known = [] if carryover is None else carryover.classes.tolist()
     lines = [f"class {new} is new and its name looks like that of class {other}"
