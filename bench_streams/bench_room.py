@@ -41,7 +41,8 @@ def accuracies(stream, plan, forecaster):
         rows = stream.scoring(t)
         Z, y = standardize(rows.X, boundary.center, boundary.scale), class_codes(boundary, rows.y)
         if t:
-            reached[boundary.n_classes] = float(BoundarySearch(TRAINER, boundary, Z, y, seed=0).outcome(attempt, Z, y).all)
+            search = BoundarySearch(TRAINER, boundary, Z, y, seed=0)
+            reached[boundary.n_classes] = float(search.outcome(attempt, Z, y).all)
     return reached
 
 
@@ -68,7 +69,8 @@ def main():
     for low, high in zip(EDGES, EDGES[1:]):
         own = (low <= crowding) & (crowding < high)
         if own.any():
-            print(f"{f'{low} to {high}':24}{own.sum():12}{100 * behind[own].mean():15.1f} pt{(behind[own] > 0).mean():16.0%}")
+            print(f"{f'{low} to {high}':24}{own.sum():12}{100 * behind[own].mean():15.1f} pt"
+                  f"{(behind[own] > 0).mean():16.0%}")
 
 
 if __name__ == "__main__":

@@ -3,12 +3,17 @@
     OPENBLAS_NUM_THREADS=1 python bench_streams/bench_waiting.py --streams bench_streams/gather_open.toml \\
         --forecaster */*.forecaster --result bench_streams/bench_waiting.json [--seeds 100 101]
 
-At every boundary from the second on, the rows of each class of the increment are split in half. The device has the first
-half and asks (`await_rows`). It is then updated at once with that half, and with the rows that the answer asks for added
-to it (from the other half, as far as it has them), each with its own advice; both several times with other seeds. What
-follows beats updating at once if its mean accuracy on scoring rows, every class seen alike, is higher. The same where
-nothing is said tells what waiting would have brought there. Afterwards the other half arrives at the device that was
-updated at once, as an increment without new classes (`nothing_new`).
+At every boundary from the second on, the rows of each class of the increment are split in half. The device has the
+first half and asks (`await_rows`). It is then updated at once with that half, and with the rows that the answer asks
+for, said or not, added to it (from the other half, as far as it has them), each with its own advice; both several
+times with other seeds. Waiting beats updating at once if its mean accuracy on scoring rows, every class seen alike, is
+higher.
+
+The forecast is a law of simple classifiers times a factor of each method (`GAINED`). The table fits these factors anew
+for every source, on the other sources alone; the last line of it tells what all of them together give. Afterwards the
+other half arrives at the device that was updated at once, as an increment without new classes: the gain of that update
+is told beside the same forecast, which for as many rows again is that of `nothing_new`, too.
+
 The walk goes on from an update with all rows. Result files go on where they were; a table is printed at the end.
 """
 
@@ -20,7 +25,9 @@ import numpy as np
 
 from hyperforecast.checks import InputError
 from hyperforecast.describing import describe
-from hyperforecast.forecasting import advise_settings, await_rows, load_forecaster, nothing_new, opening_settings
+from hyperforecast.forecasting import (
+    GAINED, LEAST_GAIN, advise_settings, await_rows, load_forecaster, opening_settings,
+)
 from hyperforecast.increments import Increment
 from hyperforecast.learning import HeadTrainer, Job, close_boundary, open_boundary, standardize
 from hyperforecast.settings import METHODS, Plan, SettingsBox
@@ -37,19 +44,16 @@ TRAINER = HeadTrainer()
 class Asked:
     """One boundary: what was said, and what came of both ways.
 
-    `later_*` tell of the other half that arrives afterwards as an increment without new classes: the verdict, the
-    forecast gain (None without check rows) and the gain measured.
+    `law` is the forecast gain without the factor of the method, `needed` the rows that were added. `later_gain` is that
+    of the other half, which arrives afterwards as an increment without new classes.
     """
 
     boundary: int
     rows: int
     needed: int
-    said: bool
-    forecast_gain: float
+    law: float
     at_once: float
     waited: float
-    later_pays: bool | None
-    later_forecast: float | None
     later_gain: float
 
     @property
@@ -62,7 +66,8 @@ def asked_at(stream, t, carryover, forecaster, seed):
     first, second = halves(stream.training(t), derived_seed(seed, "halves"))
     boundary, advice = advised(carryover, first, forecaster, seed)
     new = {label: count for label, count in counted(first).items() if label not in carryover.classes.tolist()}
-    waiting = await_rows(advice, new)
+    # More than can be had, so that all classes are asked for.
+    waiting = await_rows(advice, new, least_gain=1.0)
     at_once, attempts = learned(boundary, advice, stream, t, seed)
     collected = rows_of(second, waiting.needed)
     waited, _ = at_once, None
@@ -71,11 +76,10 @@ def asked_at(stream, t, carryover, forecaster, seed):
         waited, _ = learned(*advised(carryover, both, forecaster, seed), stream, t, seed)
     updated = close_boundary(TRAINER, boundary, attempts[0], seed=seed)
     again, then = advised(updated, second, forecaster, seed)
-    told = nothing_new(then)
     before = judge(boundary, stream, t)(attempts[0])
     after, _ = learned(again, then, stream, t, seed)
-    asked = Asked(t, len(first), len(collected), waiting.pays, waiting.gain, at_once, waited, told.pays,
-                  None if told.now is None else told.expected.value - told.now, after - before)
+    law = waiting.gain / GAINED[forecaster.method]
+    asked = Asked(t, len(first), len(collected), law, at_once, waited, after - before)
     whole, advice = advised(carryover, stream.training(t), forecaster, seed)
     attempt = TRAINER.learn([Job(whole, advice.settings)], seed=seed)[0]
     return asked, close_boundary(TRAINER, whole, attempt, seed=seed)
@@ -141,25 +145,38 @@ def unseen(forecasters, method, source):
     return next((one for one in forecasters if one.method == method and source not in one.recipe["boundaries"]), None)
 
 
+def factors(pieces):
+    """Return the factor of each method by least squares, over boundaries at which there was something to wait for."""
+    fitted = {}
+    for method in METHODS:
+        told = [Asked(**one) for piece in pieces if piece["method"] == method for one in piece["asked"]]
+        law, gain = np.array([(one.law, one.gain) for one in told if one.needed]).T
+        fitted[method] = float(law @ gain / (law @ law))
+    return fitted
+
+
 def table(pieces):
     """Lines that sum up the pieces of a result file: by source, by method, and over all."""
-    groups = {}
-    for piece in pieces:
-        for name in (piece["source"], piece["method"], "all"):
-            groups.setdefault(name, []).extend(Asked(**one) for one in piece["asked"])
-    order = sorted({piece["source"] for piece in pieces}) + sorted({piece["method"] for piece in pieces}) + ["all"]
-    lines = [f"{'':20}{'asked':>6}{'said':>7}{'beats':>7}{'gain':>8}{'forecast':>9}   where not said: {'beats':>5}"
-             f"{'gain':>8}   no new class, 'pays': {'share':>5}{'gain':>8}{'else':>8}"]
-    for name in order:
+    groups, sources = {}, sorted({piece["source"] for piece in pieces})
+    for source in sources:
+        others = factors([piece for piece in pieces if piece["source"] != source])
+        for piece in [piece for piece in pieces if piece["source"] == source]:
+            told = [(one, one.law * others[piece["method"]]) for one in (Asked(**given) for given in piece["asked"])]
+            for name in (source, piece["method"], "all"):
+                groups.setdefault(name, []).extend(told)
+    lines = [f"{'':20}{'asked':>6}{'said':>7}{'beats':>7}{'gain':>8}{'forecast':>9}   not said: {'beats':>5}{'gain':>8}"
+             f"   no new class: {'beats':>5}{'gain':>8}   else: {'beats':>5}{'gain':>8}"]
+    for name in (*sources, *METHODS, "all"):
         told = groups[name]
-        said, not_said = ([one for one in told if one.said is wanted] for wanted in (True, False))
-        pays, not_pays = ([one.later_gain for one in told if one.later_pays is wanted] for wanted in (True, False))
+        said, not_said = ([(one, gain) for one, gain in told if (gain >= LEAST_GAIN and one.needed > 0) is wanted]
+                          for wanted in (True, False))
         lines.append(
-            f"{name:20}{len(told):6}{len(said) / len(told):7.0%}{share(one.gain > 0 for one in said):>7}"
-            f"{points(one.gain for one in said):>8}{points(one.forecast_gain for one in said):>9}"
-            f"{share(one.gain > 0 for one in not_said):>24}{points(one.gain for one in not_said):>8}"
-            f"{share([one.later_pays is True for one in told]):>30}{points(pays):>8}{points(not_pays):>8}")
-    return lines
+            f"{name:20}{len(told):6}{len(said) / len(told):7.0%}{share(one.gain > 0 for one, _ in said):>7}"
+            f"{points(one.gain for one, _ in said):>8}{points(gain for _, gain in said):>9}"
+            f"{share(one.gain > 0 for one, _ in not_said):>19}{points(one.gain for one, _ in not_said):>8}"
+            f"{share(one.later_gain > 0 for one, _ in said):>22}{points(one.later_gain for one, _ in said):>8}"
+            f"{share(one.later_gain > 0 for one, _ in not_said):>14}{points(one.later_gain for one, _ in not_said):>8}")
+    return [*lines, "Factors: " + ", ".join(f"{method} {factor:.2f}" for method, factor in factors(pieces).items())]
 
 
 def share(flags):
@@ -175,7 +192,7 @@ def points(values):
 def main():
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--streams", nargs="+", required=True)
-    parser.add_argument("--forecaster", nargs="+", required=True, help="of several methods, each fitted without some source")
+    parser.add_argument("--forecaster", nargs="+", required=True, help="of several methods, fitted without a source")
     parser.add_argument("--result", required=True)
     parser.add_argument("--seeds", nargs="+", type=int, help="of the streams (all)")
     options = parser.parse_args()

@@ -79,7 +79,7 @@ def _with_timing(options):
     from hyperforecast.forecasting import retraining_signs
 
     increment, report = _dry_run(options)
-    timing = when(report.advice, increment, report.carryover.classes, **least_gain(options))
+    timing = when(report.advice, increment, report.carryover, **least_gain(options))
     signs = retraining_signs(report.advice)
     doubts = report.entry["doubts"]
     return (report.advice, {"doubts": doubts, "waiting": timing.as_dict(), "retrain": signs},

@@ -177,16 +177,17 @@ def weigh(folder, increment, *, settings=None, forecasters=None, trainer=None, p
         curves={name: along(advice, name) for name in advice.box.names}, ridge=ridge(advice),
         methods=_methods(advice, carryover, increment, forecasters, trainer, seed),
         more=[*_more_memory(advice, carryover), *_more_time(advice, trainer, boundary, measured_speed(generation.history))],
-        waiting=when(advice, increment, carryover.classes, least_gain=least_gain), retrain=retraining_signs(advice),
+        waiting=when(advice, increment, carryover, least_gain=least_gain), retrain=retraining_signs(advice),
     )
 
 
-def when(advice, increment, classes, *, least_gain=LEAST_GAIN):
-    """Return the `Waiting` of an increment at a device that knows `classes`, or `NothingNew` if none of its is new."""
+def when(advice, increment, carryover, *, least_gain=LEAST_GAIN):
+    """Return the `Waiting` of an increment that meets a carryover, or `NothingNew` if none of its classes is new."""
     labels, counts = np.unique(increment.y, return_counts=True)
-    new = ~np.isin(labels, classes)
+    new = ~np.isin(labels, carryover.classes)
     if not new.any():
-        return nothing_new(advice, least_gain=least_gain)
+        seen = dict(zip(carryover.classes.tolist(), carryover.summaries.count.tolist()))
+        return nothing_new(advice, counts.tolist(), [seen[label] for label in labels.tolist()], least_gain=least_gain)
     return await_rows(advice, dict(zip(labels[new].tolist(), counts[new].tolist())), least_gain=least_gain)
 
 

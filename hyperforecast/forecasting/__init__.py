@@ -14,12 +14,12 @@ from hyperforecast.forecasting.opening import opening_settings
 from hyperforecast.forecasting.preferences import UNFAMILIAR, Preferences
 from hyperforecast.forecasting.trees import TreeEnsemble
 from hyperforecast.forecasting.waiting import (
-    LEAST_GAIN, NothingNew, Waiting, await_rows, nothing_new, retraining_signs,
+    GAINED, LEAST_GAIN, NothingNew, Waiting, await_rows, nothing_new, retraining_signs,
 )
 from hyperforecast.forecasting.weighing import RIDGE, RISKY, Outlook, Ridge, along, outlook, ridge
 
 __all__ = ["Advice", "Constant", "DIVERGENCE_PRICE", "Expected", "Familiarity", "FamiliarityVerdict", "Forecaster",
-           "LEAST_GAIN", "NETWORK", "NETWORK_LAYERS", "NetworkEnsemble", "NothingNew", "Outlook", "Preferences", "RANGES",
-           "RIDGE", "RISKY", "Ridge", "TreeEnsemble", "UNFAMILIAR", "Waiting", "advise_settings", "along", "await_rows",
+           "GAINED", "LEAST_GAIN", "NETWORK", "NETWORK_LAYERS", "NetworkEnsemble", "NothingNew", "Outlook", "Preferences",
+           "RANGES", "RIDGE", "RISKY", "Ridge", "TreeEnsemble", "UNFAMILIAR", "Waiting", "advise_settings", "along", "await_rows",
            "bend", "combined", "forecaster_bytes", "grouped_conformal_threshold", "load_forecaster", "nothing_new",
            "opening_settings", "outlook", "retraining_signs", "ridge", "save_forecaster", "with_checksum"]

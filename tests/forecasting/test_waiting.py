@@ -7,8 +7,13 @@ import numpy as np
 import pytest
 
 from hyperforecast.describing import DESCRIPTORS
-from hyperforecast.forecasting import Expected, advise_settings, await_rows, nothing_new, retraining_signs
+from hyperforecast.forecasting import (
+    GAINED, Expected, advise_settings, await_rows, nothing_new, retraining_signs,
+)
 from hyperforecast.settings import SettingsBox
+
+# Of the gain of simple classifiers, what WA makes its own.
+PART = GAINED["wa"]
 
 
 @pytest.fixture(scope="module")
@@ -23,11 +28,12 @@ def advice(forecasters, datasets):
 def test_twice_the_rows_leave_a_power_of_the_error(advice):
     # Two of eight classes err by 0.5 each; twice the rows leave 2^-0.25 of it.
     waiting = await_rows(advice, {"nut": 20, "rod": 20})
-    assert waiting.gain == pytest.approx(2 / 8 * 0.5 * (1 - 2**-0.25))
+    assert waiting.gain == pytest.approx(PART * 2 / 8 * 0.5 * (1 - 2**-0.25))
     assert waiting.needed == {"nut": 20, "rod": 20} and waiting.rows == [0, 10, 20, 30, 40]
-    assert waiting.expected[2] - waiting.expected[0] == pytest.approx(2 / 8 * 0.5 * (1 - 1.5**-0.25))
-    assert not waiting.pays and str(waiting).startswith("Update now")
-    assert await_rows(advice, {"nut": 20, "rod": 20}, least_gain=0.019).pays
+    assert waiting.expected[2] - waiting.expected[0] == pytest.approx(PART * 2 / 8 * 0.5 * (1 - 1.5**-0.25))
+    assert waiting.pays == (waiting.gain >= 0.02)
+    short = await_rows(advice, {"nut": 20, "rod": 20}, least_gain=waiting.gain + 1e-9)
+    assert not short.pays and str(short).startswith("Update now")
     json.dumps(waiting.as_dict())
 
 
@@ -37,7 +43,7 @@ def test_a_scarce_class_alone_is_collected_where_that_is_enough(advice):
     shares = np.array([60, 2, 60, 60]) ** -0.25
     error = 0.5 * shares[1] / shares.mean()
     assert waiting.needed == {"rod": 58}
-    assert waiting.gain == pytest.approx(error * (1 - 30**-0.25) / 10)
+    assert waiting.gain == pytest.approx(PART * error * (1 - 30**-0.25) / 10)
     assert str(waiting).startswith("Not yet: collect about 58 more rows of rod first")
 
 
@@ -53,10 +59,19 @@ def test_no_new_class_no_rows_to_wait_for(advice):
     assert not await_rows(replace(advice, descriptors=unknown), {"nut": 20}).pays
 
 
-@pytest.mark.parametrize("now, pays", [(0.5, True), (0.59, False), (np.nan, None)])
-def test_an_update_without_new_classes_pays_where_it_gains(advice, now, pays):
-    told = nothing_new(replace(advice, descriptors={**advice.descriptors, "check_accuracy_old": now}))
-    assert told.pays is pays and told.as_dict()["pays"] is pays and str(told).startswith("No new class")
+def test_new_rows_of_old_classes_bring_a_power_of_the_error_too(advice):
+    # As many rows again as were seen: 1 - 2^-0.25 of an error of a half, of two of the six classes.
+    told = nothing_new(advice, [20, 20], [20, 20])
+    assert told.gain == pytest.approx(PART * 2 / 6 * 0.5 * (1 - 2**-0.25)) and told.pays
+    # A tenth as many: the error with 200 rows is 10^-0.25 times that with 20.
+    few = nothing_new(advice, [20, 20], [200, 200])
+    assert few.gain == pytest.approx(PART * 2 / 6 * 0.5 * 10**-0.25 * (1 - 1.1**-0.25)) and not few.pays
+    assert "can wait" in str(few) and "update pays" in str(told)
+    unknown = {**advice.descriptors, "nearest_mean_accuracy_all": np.nan, "ridge_accuracy_new": np.nan,
+               "check_accuracy_old": np.nan}
+    cannot = nothing_new(replace(advice, descriptors=unknown), [20], [20])
+    assert cannot.pays is None and cannot.now is None and "cannot be told" in str(cannot)
+    json.dumps([told.as_dict(), cannot.as_dict()])
 
 
 def test_drift_beyond_the_records_is_a_sign_to_retrain(advice):
