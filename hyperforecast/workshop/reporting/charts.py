@@ -30,6 +30,7 @@ _WIDTH, _HEIGHT = 360, 225  # points; a phone's width, so that text keeps its si
 _LONGEST_LABEL = 26
 _MOST_MARKERS = 12
 _CROWD = 60
+_MOST_POINTS = 400
 # Farther behind the best than this is all one shade.
 _MOST_BEHIND = 0.2
 
@@ -166,6 +167,29 @@ def expected_and_achieved(title, groups):
         for axis in (axes.xaxis, axes.yaxis):
             axis.set_major_formatter(FuncFormatter(_percentage))
         axes.set(xlim=(-0.02, 1.02), ylim=(-0.02, 1.02), aspect="equal")
+        _legend(figure, handles, groups, lines=False)
+        return _finished(figure, title)
+
+
+def scatter_chart(title, groups, *, x_label, y_label):
+    """Return points in a plane, the first group small and light behind the others, which are hollow.
+
+    Parameters
+    ----------
+    title : str
+    groups : mapping of str to array of shape (n, 2)
+        Of each at most `_MOST_POINTS` are drawn, evenly.
+    x_label, y_label : str
+    """
+    with matplotlib.rc_context(_STYLE):
+        figure, axes = _panel(x_label, y_label, height=285)
+        handles = []
+        for number, points in enumerate(groups.values()):
+            points = np.asarray(points, dtype=np.float64).reshape(-1, 2)
+            points = points[np.linspace(0, len(points) - 1, min(_MOST_POINTS, len(points))).astype(int)]
+            look = {"marker": ".", "color": _SOFT, "markersize": 3} if number == 0 else {
+                **_look(number - 1), "markersize": 4, "fillstyle": "none", "markeredgewidth": 0.8}
+            handles += axes.plot(*points.T, **{**look, "linestyle": "none"})
         _legend(figure, handles, groups, lines=False)
         return _finished(figure, title)
 
