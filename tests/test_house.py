@@ -14,7 +14,7 @@ PACKAGE = ROOT / "hyperforecast"
 # A room imports only rooms that come before it.
 ROOMS = ("checks", "storage", "rows", "settings", "increments", "metrics", "learning", "describing", "forecasting",
          "classifier", "device", "workshop", "cli")
-WORKSHOP = ("streams", "searching", "gathering", "fitting", "contest", "demo", "reporting")
+WORKSHOP = ("handing_over", "streams", "searching", "gathering", "fitting", "contest", "demo", "reporting")
 LOWER = ROOMS[:ROOMS.index("workshop")]
 MODULES = {path.relative_to(ROOT).with_suffix("").as_posix().replace("/", ".").removesuffix(".__init__"): path
            for path in sorted(PACKAGE.rglob("*.py"))}
