@@ -6,7 +6,7 @@ import pytest
 from hyperforecast import rows
 from hyperforecast.describing import describe
 from hyperforecast.increments import Increment
-from hyperforecast.learning import HeadTrainer, boundary, close_boundary, open_boundary, try_settings
+from hyperforecast.learning import HeadTrainer, Job, boundary, close_boundary, open_boundary, try_settings
 from hyperforecast.learning.boundary import StandardizedRows, fit_scaling
 from hyperforecast.rows import FileRows
 from hyperforecast.settings import METHODS, Plan, Settings
@@ -113,3 +113,18 @@ def test_scaling_of_rows_that_are_not_held(in_file):
         center, scale = fit_scaling(one, held=False)
         np.testing.assert_allclose(center, X.astype(np.float64).mean(axis=0), rtol=1e-5)
         np.testing.assert_allclose(scale, fit_scaling(X)[1], rtol=1e-5)
+
+
+def test_a_trainer_that_is_not_ours_may_make_one_array_of_them(in_file):
+    from sgd_trainer import SgdTrainer
+
+    plan, trainer, settings = Plan("wa", 0, 3, 16, 60), SgdTrainer(), Settings(0.01, 0.001, 5)
+    increment = drawn(ARRIVALS[0], 8)
+    held, lazy = (close_boundary(trainer, one, try_settings(trainer, one, [settings], seed=0)[0], seed=0)
+                  for one in (open_boundary(plan, None, increment), open_boundary(plan, None, in_file(increment))))
+    np.testing.assert_allclose(lazy.head["coef"], held.head["coef"], rtol=0.01, atol=0.01)
+    there = open_boundary(plan, lazy, in_file(drawn(ARRIVALS[1], 9)))
+    # Until a trainer says otherwise, its operations are counted as a linear model's.
+    job = Job(there, settings)
+    assert trainer.operations_of(job) == 4 * 3 * (len(there.y) + 15) * D * 5
+    assert try_settings(trainer, there, [settings], seed=0)[0].operations == trainer.operations_of(job)
