@@ -26,8 +26,8 @@ from hyperforecast.storage import array_bytes
 from hyperforecast.workshop import gathering
 
 FULL = os.environ.get("HYPERFORECAST_FAULTS") == "full"
-# The same examples every time; others with HYPERFORECAST_FAULTS=full.
-fuzzed = settings(max_examples=2000 if FULL else 100, deadline=None, derandomize=not FULL, database=None,
+# Six tests. The same examples every time; others with HYPERFORECAST_FAULTS=full.
+fuzzed = settings(max_examples=350 if FULL else 100, deadline=None, derandomize=not FULL, database=None,
                   suppress_health_check=list(HealthCheck))
 ENDS = Counter()
 
