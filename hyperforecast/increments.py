@@ -329,7 +329,7 @@ def _read_csv(path, labelled):
             header = next(rows, [])
             if header.count(LABEL_COLUMN) not in ((1,) if labelled else (0, 1)):
                 raise InputError(path, f"must have one column named {LABEL_COLUMN} in its header line",
-                                 ", ".join(header)[:80] or "no header")
+                                 ", ".join(header)[:80].strip() or "no header")
             at = header.index(LABEL_COLUMN) if LABEL_COLUMN in header else None
             for row in rows:
                 if len(row) != len(header):

@@ -237,6 +237,7 @@ def raw_csv(tmp_path, text):
 @pytest.mark.parametrize("text, rule", [
     ("", "must have one column named label in its header line; received no header"),
     ("a,b\n1,2\n", "must have one column named label in its header line; received a, b"),
+    ("\t", "must have one column named label in its header line; received no header"),
     ("label,label,a\nx,y,1\n", "must have one column named label"),
     ("Label,a\nx,1\n", "must have one column named label"),
     ("label,a\n", "must hold at least one row; received a header alone"),

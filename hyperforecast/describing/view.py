@@ -265,7 +265,8 @@ def _mean_hits(hits, place, is_old):
 
 def median(values):
     """Return the median of values (n,), n > 0, none of them NaN: np.median, which would import numpy.ma, bit for bit."""
-    return np.sort(values)[(len(values) - 1) // 2:len(values) // 2 + 1].mean()
+    low, high = (len(values) - 1) // 2, len(values) // 2
+    return np.partition(values, (low, high))[low:high + 1].mean()
 
 
 def squared_distances(A, B):

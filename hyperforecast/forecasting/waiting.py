@@ -8,6 +8,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from hyperforecast.describing.view import median
+
 # The least gain in accuracy on all classes that counts as worth waiting for, or worth an update.
 LEAST_GAIN = 0.02
 # Error on new classes falls by n^-DECAY with n rows of a class. Learning curves of many kinds follow power laws with
@@ -102,7 +104,7 @@ def await_rows(advice, counts, *, least_gain=LEAST_GAIN):
     if not counts or error is None:
         return Waiting(least_gain, {}, [0], [start])
     held = np.array(list(counts.values()), dtype=np.float64)
-    typical = float(np.median(held))
+    typical = float(median(held))
     errors, part = _by_class(error, held), GAINED[advice.forecaster.method]
     n_classes = advice.descriptors["classes_old"] + len(counts)
 
