@@ -43,7 +43,7 @@ def forecasters(datasets):
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(models, "ROUNDS", 20)
         patch.setattr(models, "SMALL_ROUNDS", 10)
-        patch.setattr(networks, "STEPS", 40)
+        patch.setattr(networks, "MOST_EPOCHS", 8)
         # Few records: leaves of 200 attempts would leave nothing to split.
         patch.setattr(models, "LARGE", {"num_leaves": 31, "min_data_in_leaf": 20})
         return {method: fit_forecaster(dataset, recipe={"records": "eight small streams"})

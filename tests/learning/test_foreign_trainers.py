@@ -65,7 +65,7 @@ def forecaster(gathered):
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(models, "ROUNDS", 20)
         patch.setattr(models, "SMALL_ROUNDS", 10)
-        patch.setattr(networks, "STEPS", 40)
+        patch.setattr(networks, "MOST_EPOCHS", 8)
         patch.setattr(models, "LARGE", {"num_leaves": 31, "min_data_in_leaf": 20})
         return fit_forecaster(load_dataset(gathered, "wa"), recipe={"trainer": "not ours"})
 

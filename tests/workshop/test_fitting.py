@@ -19,7 +19,7 @@ from hyperforecast.workshop.fitting import (
 def few_trees(monkeypatch):
     monkeypatch.setattr(models, "ROUNDS", 8)
     monkeypatch.setattr(models, "SMALL_ROUNDS", 5)
-    monkeypatch.setattr(networks, "STEPS", 40)
+    monkeypatch.setattr(networks, "MOST_EPOCHS", 8)
 
 
 @pytest.fixture(params=["wa", "ewc"])

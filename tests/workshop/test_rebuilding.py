@@ -28,7 +28,7 @@ def small():
             patch.setattr(trajectories, name, attempts)
         patch.setattr(models, "ROUNDS", 8)
         patch.setattr(models, "SMALL_ROUNDS", 5)
-        patch.setattr(networks, "STEPS", 40)
+        patch.setattr(networks, "MOST_EPOCHS", 8)
         patch.setattr(models, "LARGE", {"num_leaves": 31, "min_data_in_leaf": 20})
         yield
 
