@@ -6,6 +6,7 @@ import numpy as np
 
 from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.forecasting import Familiarity
+from hyperforecast.forecasting.familiarity import FAMILIAR_SHARE
 from hyperforecast.workshop.streams import FAMILIES
 
 # Between these quantiles of the synthetic boundaries a descriptor is within their range.
@@ -34,8 +35,8 @@ class DescriptorSpace:
     within : ndarray of shape (F,)
         Share of the open boundaries that lie within the synthetic ones' range, of those that know the descriptor.
     unfamiliar : dict of str to (int, int)
-        Of each open source, how many boundaries are flagged by a `Familiarity` that knows the synthetic ones alone, and
-        how many there are.
+        Of each open source, how many boundaries lie too far out for a `Familiarity` that knows the synthetic ones alone
+        (other signs aside), and how many there are.
     """
 
     sources: np.ndarray
@@ -92,7 +93,7 @@ def descriptor_space(described, sources):
     ranges = np.nanquantile(described[synthetic], RANGE, axis=0).T
     values = described[~synthetic]
     inside = (values >= ranges[:, 0]) & (values <= ranges[:, 1])
-    flags = np.array([not familiarity.assess(vector).familiar for vector in values])
+    flags = np.array([familiarity.assess(dict(zip(names.tolist(), vector))).score < FAMILIAR_SHARE for vector in values])
     return DescriptorSpace(
         sources=sources, synthetic=synthetic, plane=places[:, :2] * strength[:2],
         explained=strength[:2] ** 2 / (strength**2).sum(), names=names.tolist(), described=described,

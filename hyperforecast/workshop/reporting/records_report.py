@@ -64,7 +64,7 @@ def _surrounded(page, spaces):
                [[method, int((~space.synthetic).sum()), f"{space.flagged:.1%}",
                  *("{0} of {1}".format(*space.unfamiliar[source]) if source in space.unfamiliar else "-" for source in sources)]
                 for method, space in spaces.items()],
-               caption="Open boundaries that a familiarity fitted on synthetic ones alone flags as unfamiliar.")
+               caption="Open boundaries that lie too far out for a familiarity fitted on synthetic ones alone.")
     page.table(["method", "median over descriptors", "the least"],
                [[method, f"{np.median(space.within):.1%}", ", ".join(
                    f"{space.names[place].replace('_', ' ')} {space.within[place]:.0%}"
