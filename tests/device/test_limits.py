@@ -11,6 +11,7 @@ from hyperforecast.cli import main
 from hyperforecast.device import DeviceFolder, UpdateStatus, carryover_bundle, update
 from hyperforecast.device.export import export_history, read_export
 from hyperforecast.device.limits import measured_speed
+from hyperforecast.forecasting import Preferences
 from hyperforecast.increments import check_increment
 from hyperforecast.learning import HeadTrainer, boundary_seed, open_boundary, try_settings
 from hyperforecast.settings import Plan, Settings
@@ -220,8 +221,9 @@ def test_another_try_is_made_if_it_fits(tmp_path, forecasters, tries_that_fit):
     # A try with the most exemplars; planned with some time to spare, it may take less.
     full = 20 * operations_of_a_pass(trainer, folder, SECOND, plan) / SPEED
     limit = {1: 1.45, 2: 2.1}[tries_that_fit] * full
+    # One try after another, even if the boundary is not familiar.
     report = update(folder, SECOND, plan=replace(plan, time_limit=limit), trainer=trainer, clock=clock,
-                    forecaster=forecasters["wa"], **LENIENT)
+                    forecaster=forecasters["wa"], preferences=Preferences(unfamiliar="warn"), **LENIENT)
     assert report.entry["limits"]["time"]["passes"] == 20
     assert len(report.entry["earlier_tries"]) == tries_that_fit - 1 and report.entry["kept"] == (tries_that_fit == 2)
     reasons = [*report.entry["earlier_tries"], report.entry][0]["reasons"]
