@@ -2,10 +2,11 @@
 
 Run from a checkout with the workshop extra: OPENBLAS_NUM_THREADS=1 python bench_streams/bench_forecasting.py [--json]
 
-At a boundary advice weighs a lattice of candidate settings, then others around the best of them. numpy's seconds are
-those of a `BoundaryForecast`: filling in the boundary's descriptors, then scoring the candidates; LightGBM gets the same
-rows, descriptors and all, and predicts with one thread (`num_threads=1`). Its models are rebuilt from the shipped trees,
-split for split; both must give the same scores to the bit. CPU seconds, the best of several turns, in turns.
+At a boundary advice weighs a lattice of candidate settings, then others around the best of them. numpy's seconds
+are those of a `BoundaryForecast`: filling in the boundary's descriptors, then scoring the candidates, through all
+that a forecaster holds, networks beside the trees too; LightGBM gets the same rows, descriptors and all, and predicts
+with one thread (`num_threads=1`). Its models are rebuilt from the shipped trees, split for split; trees must give the
+same scores to the bit. CPU seconds, the best of several turns, in turns.
 """
 
 import argparse

@@ -4,9 +4,9 @@ Run from a checkout with the workshop extra, on records as the README gathers th
 
     OPENBLAS_NUM_THREADS=1 python bench_streams/descriptor_space.py --records records.sqlite
 
-It writes descriptor_space.json and descriptor_space.png beside itself: for each method the share of open boundaries within
-the synthetic ones' range (1% to 99%) of each descriptor, and the share that a familiarity fitted on synthetic boundaries
-alone flags; drawn for one method, with the descriptors that matter most to its forecaster.
+It writes descriptor_space.json and descriptor_space.png beside itself: for each method the share of open boundaries
+within the synthetic ones' range (1% to 99%) of each descriptor, and the share that lies too far out for a familiarity
+fitted on synthetic boundaries alone; drawn for one method, with the descriptors that matter most to its forecaster.
 """
 
 import argparse
@@ -36,12 +36,13 @@ def draw(space, method, influential, path):
     axes.plot(*space.plane[space.synthetic].T, ".", color=SOFT, markersize=5, label="synthetic boundaries")
     for source, marker in zip(space.unfamiliar, MARKERS):
         own = np.flatnonzero(space.sources == source)
-        axes.plot(*space.plane[own[np.linspace(0, len(own) - 1, min(DRAWN, len(own))).astype(int)]].T, marker, color=INK, fillstyle="none", markersize=5.5,
-                  markeredgewidth=0.8, linestyle="none", label=source)
+        own = own[np.linspace(0, len(own) - 1, min(DRAWN, len(own))).astype(int)]
+        axes.plot(*space.plane[own].T, marker, color=INK, fillstyle="none", markersize=5.5, markeredgewidth=0.8,
+                  linestyle="none", label=source)
     axes.set(xlabel=f"first component ({space.explained[0]:.0%} of the variance)",
              ylabel=f"second component ({space.explained[1]:.0%})",
              title=f"{method.upper()}: boundaries in the plane of two principal components of {len(space.names)} "
-                   f"descriptors; {space.flagged:.1%} of open ones flagged unfamiliar")
+                   f"descriptors; {space.flagged:.1%} of open ones lie too far out")
     axes.legend(loc="best", ncols=2)
     sources = list(space.unfamiliar)
     for number, (axes, name) in enumerate(zip(below.subplots(PANELS // 3, 3).flat, influential)):
@@ -59,21 +60,23 @@ def draw(space, method, influential, path):
         axes.invert_yaxis()
         axes.set_title(f"{name.replace('_', ' ')}: {space.within[place]:.0%} within", fontsize=9)
         axes.tick_params(axis="x", labelsize=7)
-    below.suptitle("Range of synthetic boundaries (1% to 99%, grey) and of each open source (median, 1% to 99%)", fontsize=10)
+    below.suptitle("Range of synthetic boundaries (1% to 99%, grey) and of each open source (median, 1% to 99%)",
+                   fontsize=10)
     figure.savefig(path)
 
 
 def main():
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--records", required=True, metavar="FILE")
-    parser.add_argument("--method", nargs="+", default=["wa", "ewc", "lwf", "icarl"], help="the first is drawn (all four)")
+    parser.add_argument("--method", nargs="+", default=["wa", "ewc", "lwf", "icarl"],
+                        help="the first is drawn (all four)")
     options = parser.parse_args()
     document = {}
     for method in options.method:
         dataset = load_dataset(RecordsFile(options.records), method)
         space = descriptor_space(dataset.descriptors, dataset.sources)
         document[method] = space.as_dict()
-        print(f"{method}: {document[method]['boundaries']['open']} open boundaries, {space.flagged:.1%} flagged unfamiliar; "
+        print(f"{method}: {document[method]['boundaries']['open']} open boundaries, {space.flagged:.1%} too far out; "
               f"within the synthetic range of a descriptor: median {np.median(space.within):.1%}, least "
               + ", ".join(f"{space.names[place]} {space.within[place]:.0%}" for place in np.argsort(space.within)[:5]))
         if method == options.method[0]:

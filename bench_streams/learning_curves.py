@@ -5,17 +5,17 @@ time, prints what it is at, and goes on where it was:
 
     OPENBLAS_NUM_THREADS=1 python bench_streams/learning_curves.py --records records.sqlite
 
-It writes learning_curves.json (accuracies by source), learning_curves.md (tables) and learning_curves.png beside itself.
+It writes learning_curves.json (accuracies by source), .md (tables) and .png beside itself.
 
-The measured sources are left out in three groups; everything is fitted on what remains. At each of their boundaries a way
-of choosing takes one of the recorded attempts, seeing none of their outcomes. Gap closed = sum(chosen - constant) /
+The measured sources are left out in three groups; everything is fitted on what remains. At each of their boundaries a
+way of choosing takes one of the recorded attempts, seeing none of their outcomes. Gap closed = sum(chosen - constant) /
 sum(best - constant), where best is the best attempt, the constant is the estimated outcome of the best constant of all
 records but the group's, and sums are over sources, each counting alike. Best is chosen on the rows it is scored on, so
-the gap looks wider than a contest's. Attempts are ordered by the trees' forecast of the shortfall
-alone, but for the row that prices divergence; a forecaster has networks beside the trees.
+the gap looks wider than a contest's. Attempts are ordered by the trees' forecast of the shortfall alone, but for the
+row that prices divergence; a forecaster has networks beside the trees.
 
-To rivals of the forecaster's models everything is granted: the number of neighbours and the ridge penalty are the best of
-three, in hindsight.
+To rivals of the forecaster's models everything is granted: the number of neighbours and the ridge penalty are the best
+of three, in hindsight.
 """
 
 import argparse
@@ -113,7 +113,7 @@ def by_neighbours(dataset, fold, rows):
 
 
 def by_linear_model(dataset, fold, rows):
-    """Ridge regression of the shortfall on descriptors, coordinates, their squares and all products with coordinates."""
+    """Ridge regression of the shortfall on descriptors, coordinates, and products of both with coordinates."""
     described, _ = standardized(dataset, fold.training)
     fitted = np.flatnonzero((fold.training & dataset.compared)[dataset.boundary])[::2]  # plenty for a linear model
     center, spread = np.nanmean(dataset.coordinates[fitted], axis=0), np.nanstd(dataset.coordinates[fitted], axis=0)
@@ -217,11 +217,11 @@ def experiments(method):
         made += [Experiment(f"{kind}/{count}/{turn}", narrow=lambda d, t, rng, count=count, kind=kind:
                             some_sources(d, t, count, rng, kind == "families"))
                  for count in counts for turn in range(REPEATS)]
-    made += [Experiment(f"without/{name}", narrow=lambda d, t, rng, keep=keep: ablated(d, t) & keep(d)) for name, keep in (
-        ("synthetic sources", lambda d: ~np.isin(d.sources, list(FAMILIES))),
-        ("measured sources", lambda d: np.isin(d.sources, list(FAMILIES))),
-        ("the steered round", lambda d: np.char.endswith(d.trajectories, f"|{method}|{SEED}")))]
-    return made
+    kept = {"synthetic sources": lambda d: ~np.isin(d.sources, list(FAMILIES)),
+            "measured sources": lambda d: np.isin(d.sources, list(FAMILIES)),
+            "the steered round": lambda d: np.char.endswith(d.trajectories, f"|{method}|{SEED}")}
+    return made + [Experiment(f"without/{name}", narrow=lambda d, t, rng, keep=keep: ablated(d, t) & keep(d))
+                   for name, keep in kept.items()]
 
 
 def ablated(dataset, training):
@@ -238,7 +238,8 @@ def folds(dataset):
 
 def run(experiment, dataset, workers):
     """{variant: {"chosen": {source: mean accuracy}, "boundaries": mean number fitted on, "sources": of sources}}."""
-    told = joblib.Parallel(n_jobs=workers)(joblib.delayed(run_fold)(experiment, dataset, fold) for fold in folds(dataset))
+    told = joblib.Parallel(n_jobs=workers)(
+        joblib.delayed(run_fold)(experiment, dataset, fold) for fold in folds(dataset))
     return {variant: {
         "chosen": {source: value for chosen, _ in told for source, value in chosen[variant].items()},
         **{name: round(float(np.mean([sizes[name] for _, sizes in told])), 1) for name in ("boundaries", "sources")},
@@ -252,7 +253,8 @@ def run_fold(experiment, dataset, fold):
     rows = np.flatnonzero(fold.own[dataset.boundary])
     scores = experiment.way(experiment.blind(dataset), narrowed, rows)
     return ({variant: by_source(dataset, rows, values) for variant, values in scores.items()},
-            {"boundaries": int(narrowed.training.sum()), "sources": len(np.unique(dataset.sources[narrowed.training]))})
+            {"boundaries": int(narrowed.training.sum()),
+             "sources": len(np.unique(dataset.sources[narrowed.training]))})
 
 
 def by_source(dataset, rows, scores):
@@ -261,7 +263,8 @@ def by_source(dataset, rows, scores):
     order = np.lexsort((-scores, b))
     first = rows[order[np.searchsorted(b[order], np.unique(b))]]
     sources = dataset.sources[dataset.boundary[first]]
-    return {str(source): round(float(dataset.all[first[sources == source]].mean()), 5) for source in np.unique(sources)}
+    return {str(source): round(float(dataset.all[first[sources == source]].mean()), 5)
+            for source in np.unique(sources)}
 
 
 def bars(dataset):
@@ -319,7 +322,10 @@ def compared(told, kind):
 
 
 def shipped(method, told):
-    """The gap that the forecaster that ships closed on the same sources, held out with others; None if of other records."""
+    """The gap that the forecaster that ships closed on the same sources, held out in other groups.
+
+    None if it was fitted on other records.
+    """
     recipe = load_forecaster(method).recipe
     chosen = {one["source"]: one["outcome"] for one in recipe["held_out"]}
     return gap_closed(told["bars"], chosen) if recipe["attempts"] == told["attempts"] else None
@@ -327,8 +333,8 @@ def shipped(method, told):
 
 def as_markdown(document):
     lines = ["# Learning curves and ablations", "",
-             "Written by `bench_streams/learning_curves.py`, whose first lines say what is measured and how. Gap closed, one step,",
-             f"on recorded attempts of measured sources held out in {FOLDS} groups.", ""]
+             "Written by `bench_streams/learning_curves.py`, whose first lines say what is measured and how. Gap closed, one",
+             f"step, on recorded attempts of measured sources held out in {FOLDS} groups.", ""]
     for method, told in document["methods"].items():
         n = len(told["bars"])
         lines += [f"## {method.upper()}: {told['boundaries']} boundaries of {told['sources']} sources, "
@@ -336,15 +342,17 @@ def as_markdown(document):
         lines += [f"| {name} | {gap:.3f} | {below} of {n} sources |" for name, gap, below in compared(told, "way")]
         gap = shipped(method, told)
         if gap is not None:
-            lines.append(f"| the forecaster that ships: networks beside the trees, divergence priced, other groups | {gap:.3f} | |")
-        lines += ["", f"| outcome models on {ABLATED:.0%} of the boundaries, without | gap closed | worse than the first on |",
-                  "|---|---|---|"]
+            lines.append("| the forecaster that ships: networks beside the trees, divergence priced, other groups | "
+                         f"{gap:.3f} | |")
+        lines += ["", f"| outcome models on {ABLATED:.0%} of the boundaries, without | gap closed | "
+                  "worse than the first on |", "|---|---|---|"]
         lines += [f"| {name} | {gap:.3f} | {below} of {n} sources |" for name, gap, below in compared(told, "without")]
         for kind in ("boundaries", "sources", "families"):
             lines += ["", f"| {kind} | gap closed | least and greatest of repeats | boundaries |", "|---|---|---|---|"]
             lines += [f"| {x:.0f} | {mean:.3f} | {low:.3f} to {high:.3f} | {size:.0f} |"
                       for x, mean, low, high, size in curve(told, kind)]
-        lines += ["", "| source | boundaries | constant | outcome models | best attempt | gap closed |", "|---|---|---|---|---|---|"]
+        lines += ["", "| source | boundaries | constant | outcome models | best attempt | gap closed |",
+                  "|---|---|---|---|---|---|"]
         chosen = told["experiments"][f"way/{ALL}"][""]["chosen"]
         lines += [f"| {source} | {one['boundaries']} | {one['constant']:.3f} | {chosen[source]:.3f} | {one['best']:.3f} | "
                   f"{gap_closed({source: one}, chosen):.2f} |" for source, one in told["bars"].items()]
@@ -353,7 +361,8 @@ def as_markdown(document):
 
 
 def draw(document, path):
-    looks = [{"color": "#1c1b19", "linestyle": "-", "marker": "o"}, {"color": "#8c6d4a", "linestyle": "--", "marker": "s"}]
+    looks = [{"color": "#1c1b19", "linestyle": "-", "marker": "o"},
+             {"color": "#8c6d4a", "linestyle": "--", "marker": "s"}]
     figure = Figure(figsize=(13, 9.5), layout="constrained", dpi=90)
     above, below = figure.subfigures(2, 1, height_ratios=[0.8, 1])
     labels = {"boundaries": "boundaries fitted on", "sources": f"sources, {DIVERSITY_BOUNDARIES} boundaries in all",
@@ -377,7 +386,8 @@ def draw(document, path):
             axes.barh(at, gaps, 0.36, color=look["color"] if place == 0 else "white", edgecolor=look["color"],
                       hatch="" if place == 0 else "///", label=method.upper())
             for y, gap in zip(at, gaps):
-                axes.annotate(f"{gap:.2f}", (max(gap, 0), y), (3, 0), textcoords="offset points", va="center", fontsize=8)
+                axes.annotate(f"{gap:.2f}", (max(gap, 0), y), (3, 0), textcoords="offset points", va="center",
+                              fontsize=8)
             # The best number of neighbours and penalty differ between methods: the table tells them.
             names = [name if PRICED in name else name.split(",")[0] for name, _, _ in rows]
             axes.set_yticks(np.arange(len(names)), [name.replace(", ", ",\n") for name in names])

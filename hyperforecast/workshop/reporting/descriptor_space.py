@@ -76,8 +76,8 @@ def descriptor_space(described, sources):
 
     Notes
     -----
-    Components are those of descriptors standardized as for familiarity: spreads from the synthetic median, through arcsinh,
-    which is a logarithm far out, and cut at `FARTHEST` spreads; a missing one counts as the median.
+    Components are those of descriptors standardized as for familiarity: spreads from the synthetic median, through
+    arcsinh, which is a logarithm far out, and cut at `FARTHEST` spreads; a missing one counts as the median.
     """
     described, sources, names = np.asarray(described, np.float64), np.asarray(sources), np.array(list(DESCRIPTORS))
     synthetic = np.isin(sources, list(FAMILIES))
@@ -93,7 +93,8 @@ def descriptor_space(described, sources):
     ranges = np.nanquantile(described[synthetic], RANGE, axis=0).T
     values = described[~synthetic]
     inside = (values >= ranges[:, 0]) & (values <= ranges[:, 1])
-    flags = np.array([familiarity.assess(dict(zip(names.tolist(), vector))).score < FAMILIAR_SHARE for vector in values])
+    scores = np.array([familiarity.assess(dict(zip(names.tolist(), vector))).score for vector in values])
+    flags = scores < FAMILIAR_SHARE
     return DescriptorSpace(
         sources=sources, synthetic=synthetic, plane=places[:, :2] * strength[:2],
         explained=strength[:2] ** 2 / (strength**2).sum(), names=names.tolist(), described=described,

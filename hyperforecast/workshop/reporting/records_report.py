@@ -25,7 +25,8 @@ def records_page(records):
             middle[trajectory.method, trajectory.source].append(np.median(outcome))
             diverged[trajectory.method, trajectory.source].append(np.mean([a.diverged for a in one.attempts]))
             described[trajectory.source].append([one.descriptors.get(name, np.nan) for name in DESCRIBED])
-            whole[trajectory.method].append((trajectory.source, [one.descriptors.get(name, np.nan) for name in DESCRIPTORS]))
+            whole[trajectory.method].append(
+                (trajectory.source, [one.descriptors.get(name, np.nan) for name in DESCRIPTORS]))
     counts = records.counts()
     page = Page("Gathered records", (
         f"{sum(row[4] for row in counts):,} attempts at {sum(row[3] for row in counts):,} boundaries of "
@@ -60,13 +61,14 @@ def _surrounded(page, spaces):
                                 y_label=f"second, {space.explained[1]:.0%}") for method, space in spaces.items()),
                 caption="Components of all descriptors, each in spreads from its median, tamed far out.")
     sources = sorted({source for space in spaces.values() for source in space.unfamiliar})
-    page.table(["method", "open boundaries", "flagged", *sources],
+    page.table(["method", "open boundaries", "too far out", *sources],
                [[method, int((~space.synthetic).sum()), f"{space.flagged:.1%}",
-                 *("{0} of {1}".format(*space.unfamiliar[source]) if source in space.unfamiliar else "-" for source in sources)]
-                for method, space in spaces.items()],
+                 *("{0} of {1}".format(*space.unfamiliar[source]) if source in space.unfamiliar else "-"
+                   for source in sources)] for method, space in spaces.items()],
                caption="Open boundaries that lie too far out for a familiarity fitted on synthetic ones alone.")
     page.table(["method", "median over descriptors", "the least"],
                [[method, f"{np.median(space.within):.1%}", ", ".join(
                    f"{space.names[place].replace('_', ' ')} {space.within[place]:.0%}"
-                   for place in np.argsort(space.within, kind="stable")[:LEAST_SHARED])] for method, space in spaces.items()],
+                   for place in np.argsort(space.within, kind="stable")[:LEAST_SHARED])]
+                for method, space in spaces.items()],
                caption="Share of open boundaries within the range, 1% to 99%, of the synthetic ones, by descriptor.")
