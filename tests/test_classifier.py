@@ -320,7 +320,8 @@ def test_the_advice_is_what_partial_fit_then_follows_and_trains_nothing(advised,
     assert found.as_dict() == again.as_dict()
     advised.partial_fit(X, y)
     assert advised.advice_.as_dict() == found.as_dict()
-    assert advised.history_[-1]["settings"] == found.settings.as_dict() and advised.history_[-1]["advised"]
+    # The advised settings, or one of those to try where the boundary is unlike the few records of these tests.
+    assert Settings(**advised.history_[-1]["settings"]) in found.to_try and advised.history_[-1]["advised"]
     assert found.settings.checked(advised.method)
 
 
@@ -366,7 +367,9 @@ def test_what_is_done_at_a_boundary_unlike_the_records_is_the_users_choice(polic
         assert learned == found.settings == found.to_try[0] and len(found.to_try) == 1
     assert (found.settings == found.constant) == (policy == "constant")
     assert found.ranked.count(found.constant) == (policy == "constant")
-    clf.partial_fit(*parts([3], seed=2))
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        clf.partial_fit(*parts([3], seed=2))
 
 
 @pytest.mark.parametrize("policy", ["try", "try 1", "try 17", "try 04 ", "constantly", 4, None])

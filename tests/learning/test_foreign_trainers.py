@@ -174,7 +174,7 @@ def test_what_the_trainer_does_not_supply_is_missing_from_the_records(name, gath
 
 
 def test_without_rehearsal_too(foreign, definitions):
-    trajectory = run_trajectory(definitions[0], "ewc", seed=0, space_filled=4, proposed=2, trainer=foreign)
+    trajectory = run_trajectory(definitions[0], "ewc", seed=0, attempts=(4, 0, 2), trainer=foreign)
     attempts = [attempt for boundary in trajectory.boundaries for attempt in boundary.attempts]
     assert len(attempts) == 12 and all(attempt.settings.kept_per_class is None for attempt in attempts)
 
