@@ -101,6 +101,20 @@ def test_an_update_prints_on_one_sheet_of_a4(browser, pages, tmp_path, number):
     assert (right - left, top - bottom) == pytest.approx((210 / 25.4 * 72, 297 / 25.4 * 72), abs=1)
 
 
+def test_an_update_with_much_to_tell_prints_on_one_sheet_too(browser, device, tmp_path):
+    document, long = update_document(device.read(), 2, name="arm"), "word " * 60
+    entry = document["update"]
+    advice = {**entry["advice"], "reasons": [long] * 3,
+              "familiarity": {**entry["advice"]["familiarity"], "familiar": False, "why": [long] * 5}}
+    tried = {**entry, "reasons": [long] * 5}
+    update_page({**document, "verdict": "rolled back", "update": {
+        **tried, "advice": advice, "kept": False, "earlier_tries": [tried], "doubts": [long] * 6,
+        "limits": {"given_up": [long] * 2},
+        "unfamiliar": {"policy": "try 4", "tried": [{"check_accuracy": 0.5}] * 4}}}).write(tmp_path / "report.html")
+    browser.open(tmp_path / "report.html", width=DESK)
+    assert len(re.findall(rb"/Type\s*/Page\b", browser.pdf())) == 1
+
+
 def test_the_check_finds_what_is_wrong(browser, tmp_path):
     page = Page("t", "l")
     page.paragraph("p")

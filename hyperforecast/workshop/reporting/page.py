@@ -61,17 +61,18 @@ ul { max-width: 44rem; margin: .6rem 0; padding-left: 1.2rem; }
   .sheet main { display: grid; grid-template-columns: minmax(0, 1fr) minmax(0, 1fr); column-gap: 2rem; }
   .sheet section:nth-of-type(n+3), .sheet main > p { grid-column: 1 / -1; } }
 footer { margin-top: 3rem; border-top: 1px solid var(--rule); color: var(--soft); font-size: .85rem; }
-@page { size: A4; margin: 12mm 10mm; }
+@page { size: A4; margin: 10mm; }
 @media print { :root { font-size: 10pt; } body { max-width: none; padding: 0; } nav { display: none; }
   h2 { break-after: avoid; } .scroll { overflow: visible; } tr { break-inside: avoid; } a { color: inherit; }
   caption, thead, tbody tr:first-child { break-after: avoid; } tbody tr:last-child { break-before: avoid; }
   table { font-size: .8rem; } th, td { padding: .2rem .35rem; } .panels { grid-template-columns: 1fr 1fr; }
   footer { margin-top: 1rem; }
-  .sheet { font-size: .92rem; line-height: 1.35; } .sheet header { margin-bottom: .5rem; }
-  .sheet h1 { font-size: 1.4rem; margin: 0; } .sheet h2 { font-size: 1.05rem; margin: .7rem 0 .2rem; }
+  .sheet { font-size: .84rem; line-height: 1.25; } .sheet header { margin-bottom: .5rem; }
+  .sheet h1 { font-size: 1.4rem; margin: 0; } .sheet h2 { font-size: 1rem; margin: .6rem 0 .2rem; }
   .sheet p, .sheet ul, .sheet dl, .sheet figure, .sheet .lead { margin: .3rem 0; max-width: none; font-size: inherit; }
-  .sheet dl { gap: .05rem 1rem; } .sheet footer { margin-top: .4rem; } .sheet .panels { gap: .3rem 1.5rem; }
-  .sheet td, .sheet th { padding: .08rem .4rem; } }
+  .sheet dl { gap: .05rem 1rem; } .sheet footer { display: none; } .sheet .panels { gap: .3rem 1.5rem; }
+  .sheet td, .sheet th { padding: .08rem .4rem; }
+  .sheet figcaption, .sheet caption { max-width: none; font-size: inherit; } }
 """
 
 # What a page may do in a browser: show its own styles and pictures, nothing else.

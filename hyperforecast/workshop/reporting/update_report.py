@@ -11,8 +11,8 @@ from hyperforecast.workshop.reporting.page import Page, plain, shown
 CAUTION = ("Accuracies here come from a few rows held back on the device. They must never be the only safeguard of a "
            "safety function; local codes and licensed practice come first.")
 # What has room on the page; the document (JSON) has all: classes, reasons for one try, letters of a name and of a text.
-MOST_CLASSES, MOST_REASONS = 20, 4
-LONGEST_NAME, LONGEST_TEXT = 40, 300
+MOST_CLASSES, MOST_REASONS = 14, 2
+LONGEST_NAME, LONGEST_TEXT = 40, 110
 KINDS = ("old", "new", "all")
 
 
@@ -143,18 +143,17 @@ def _advised(page, entry):
             "the records know boundaries like this one." if familiarity["familiar"]
             else "not familiar, few records lie this far out; the advice is a guess.")
             + f" Probability of divergence {advice['divergence']:.3f}.")
-        points += [f"Unlike the records: {_cut(one, LONGEST_TEXT)}." for one in familiarity.get("why", ())]
+        points += [f"Unlike the records: {_cut(one, LONGEST_TEXT)}." for one in familiarity.get("why", ())[:MOST_REASONS]]
         cared = ", ".join(f"{name.replace('_', ' ')} {shown(value)}" for name, value in
                           entry.get("preferences", {}).items() if value != getattr(Preferences(), name, None))
         points += [f"Preferences: {cared}."] if cared else []
-        points += [f"{reason}." for reason in advice["reasons"] or ["No descriptor moved the advice from the usual"]]
+        reasons = advice["reasons"] or ["No descriptor moved the advice from the usual"]
+        points += [f"{_cut(reason, LONGEST_TEXT)}." for reason in reasons]
     unfamiliar = entry.get("unfamiliar")
     if unfamiliar:
         tried = [f"{one['check_accuracy']:.0%}" for one in unfamiliar["tried"] or () if one["check_accuracy"] >= 0]
         points.append(f"Told what to do where a boundary is unlike the records: {unfamiliar['policy']}"
                       + (f"; tried side by side, {', '.join(tried)} on held-back rows." if tried else "."))
-    if entry.get("limits"):
-        points += [f"Given up: {_cut(one, LONGEST_TEXT)}." for one in entry["limits"]["given_up"]]
     page.items(points)
 
 
@@ -202,9 +201,10 @@ def _decision(document):
     points = []
     for place, one in enumerate([*entry["earlier_tries"], entry], 1):
         who = f"Try {place}" if entry["earlier_tries"] else "It"
-        points += [f"{who} was not kept: {_cut(reason, LONGEST_TEXT)}." for reason in one["reasons"][:MOST_REASONS]]
-        if len(one["reasons"]) > MOST_REASONS:
-            points.append(f"{who} was not kept for {len(one['reasons']) - MOST_REASONS} more reasons of this kind.")
+        told = one["reasons"][:MOST_REASONS if one is entry else 1]
+        points += [f"{who} was not kept: {_cut(reason, LONGEST_TEXT)}." for reason in told]
+        if len(told) < len(one["reasons"]):
+            points[-1] += f" And {len(one['reasons']) - len(told)} more reasons of this kind."
     if entry["kept"]:
         achieved = entry["achieved"]
         points.append("Training did not diverge, " + (
@@ -212,6 +212,8 @@ def _decision(document):
             + (f": on old classes {achieved['old_before']:.0%} before and {achieved['old']:.0%} after"
                if None not in (achieved["old"], achieved["old_before"]) else "") if entry["classes_old"]
             else "the only rule at a first update") + ".")
+    if entry.get("limits"):
+        points += [f"Given up: {_cut(one, LONGEST_TEXT)}." for one in entry["limits"]["given_up"]]
     accepted = entry.get("acceptance")
     if accepted and accepted["all"] is not None:
         points.append(f"On the acceptance set: {accepted['all']:.0%} over {accepted['rows']} rows.")
