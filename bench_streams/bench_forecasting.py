@@ -21,7 +21,7 @@ from bench_learning import in_turns, second_boundary
 
 from hyperforecast.describing import describe
 from hyperforecast.forecasting import load_forecaster
-from hyperforecast.forecasting.advice import AROUND_EACH, CENTERS, SPREAD_OUT, lattice
+from hyperforecast.forecasting.choice import AROUND_EACH, CENTERS, SPREAD_OUT, lattice
 from hyperforecast.learning import HeadTrainer
 from hyperforecast.settings import METHODS, SettingsBox
 

@@ -1,9 +1,10 @@
 """Forecasts and advice with numpy alone.
 
-Read trees, networks, intervals, familiarity, forecaster, preferences, advice, weighing, waiting, in this order.
+Read trees, networks, intervals, familiarity, forecaster, preferences, choice, advice, weighing, waiting, in this order.
 """
 
-from hyperforecast.forecasting.advice import DIVERGENCE_PRICE, Advice, advise_settings
+from hyperforecast.forecasting.advice import Advice, advise_settings
+from hyperforecast.forecasting.choice import DIVERGENCE_PRICE
 from hyperforecast.forecasting.familiarity import Familiarity, FamiliarityVerdict
 from hyperforecast.forecasting.forecaster import (
     NETWORK, RANGES, Constant, Expected, Forecaster, combined, forecaster_bytes, load_forecaster, save_forecaster, with_checksum,

@@ -11,7 +11,7 @@ import numpy as np
 
 from hyperforecast.describing import DESCRIPTORS
 from hyperforecast.describing.words import GROUP_WORDS, in_words
-from hyperforecast.forecasting.advice import choose, objective
+from hyperforecast.forecasting.choice import choose, objective
 from hyperforecast.forecasting.forecaster import BoundaryForecast
 from hyperforecast.settings import SCALES, scale_free
 

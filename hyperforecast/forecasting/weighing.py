@@ -4,7 +4,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from hyperforecast.forecasting.advice import DIVERGENCE_PRICE
+from hyperforecast.forecasting.choice import DIVERGENCE_PRICE
 from hyperforecast.forecasting.forecaster import RANGES, Expected
 from hyperforecast.settings import KEPT_PER_CLASS
 

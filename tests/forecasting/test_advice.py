@@ -8,7 +8,7 @@ import pytest
 
 from hyperforecast.checks import InputError
 from hyperforecast.describing import DESCRIPTORS
-from hyperforecast.forecasting import TreeEnsemble, advice, advise_settings, load_forecaster, save_forecaster
+from hyperforecast.forecasting import TreeEnsemble, advise_settings, choice, load_forecaster, save_forecaster
 from hyperforecast.forecasting.forecaster import MODELS
 from hyperforecast.settings import COORDINATES, Settings, SettingsBox
 
@@ -246,7 +246,7 @@ def test_alternatives_are_ranked_by_the_models(made, here, monkeypatch):
     assert len(set(values)) > 3
     assert (np.diff(values) <= 1e-9).all()
     box = SettingsBox("wa", 40)
-    every = found.forecaster.at(here).shortfall(box.from_unit(advice.lattice(256, 3)))
+    every = found.forecaster.at(here).shortfall(box.from_unit(choice.lattice(256, 3)))
     assert values[0] >= every.max() - 1e-12
 
 
@@ -284,7 +284,7 @@ def test_candidates_fill_the_cube_evenly(n_dimensions):
 
     Roberts 2018, "The Unreasonable Effectiveness of Quasirandom Sequences", from memory.
     """
-    points = advice.lattice(256, n_dimensions)
+    points = choice.lattice(256, n_dimensions)
     g = {2: 1.32471795724474602596, 3: 1.22074408460575947536}[n_dimensions]
     steps = g ** -np.arange(1, n_dimensions + 1)
     np.testing.assert_allclose(np.diff(points, axis=0) % 1, np.tile(steps, (255, 1)), atol=1e-9)
