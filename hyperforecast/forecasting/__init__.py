@@ -7,7 +7,8 @@ from hyperforecast.forecasting.advice import Advice, advise_settings
 from hyperforecast.forecasting.choice import DIVERGENCE_PRICE
 from hyperforecast.forecasting.familiarity import Familiarity, FamiliarityVerdict
 from hyperforecast.forecasting.forecaster import (
-    NETWORK, RANGES, Constant, Expected, Forecaster, combined, forecaster_bytes, load_forecaster, save_forecaster, with_checksum,
+    NETWORK, RANGES, Constant, Expected, Forecaster, combined, forecaster_bytes, load_forecaster, save_forecaster,
+    with_checksum,
 )
 from hyperforecast.forecasting.intervals import grouped_conformal_threshold
 from hyperforecast.forecasting.networks import NETWORK_LAYERS, NetworkEnsemble, bend

@@ -235,7 +235,7 @@ def test_exemplars_are_spent_only_where_they_bring_more_than_half_a_point(gain, 
 
 def test_alternatives_are_ranked_by_the_models(made, here, monkeypatch):
     """Without smoothing the score of a candidate is its own, and can be looked up."""
-    monkeypatch.setattr(advice, "NEIGHBOURHOOD", 1e-3)
+    monkeypatch.setattr(choice, "NEIGHBOURHOOD", 1e-3)
     rng = np.random.default_rng(0)
     rough = ensemble(*(split(name, t, leaf(-rng.random() / 50), leaf(-rng.random() / 50))
                        for name, low, high in (("log_learning_rate", -5, 0), ("log_regularization", -3, 3),
