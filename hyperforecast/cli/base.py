@@ -81,9 +81,11 @@ def add_commands(command):
 def _demo(options):
     progress("drawing parts ...")
     if options.deliveries:
+        from hyperforecast.workshop.demo import write_trained_head
         from hyperforecast.workshop.streams.salvage_yard import write_deliveries
 
-        paths = [str(path) for path in write_deliveries(options.deliveries, seed=checked_seed(options))]
+        written = write_deliveries(options.deliveries, seed=checked_seed(options))
+        paths = [str(path) for path in (*written, write_trained_head(options.deliveries, seed=options.seed))]
         say(options, {"files": paths}, paths)
         return
     from hyperforecast.workshop.demo import run_demo

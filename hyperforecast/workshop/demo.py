@@ -1,12 +1,19 @@
 """The demo: six deliveries to the sorting cell of a salvage yard, learned with advice and with the best constant."""
 
+import io
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
+from sklearn.linear_model import LogisticRegression
+from sklearn.pipeline import make_pipeline
+from sklearn.preprocessing import StandardScaler
 
 from hyperforecast.classifier import GrowingClassifier, advise
 from hyperforecast.forecasting import load_forecaster
 from hyperforecast.metrics import class_accuracies
+from hyperforecast.storage import write_atomically
+from hyperforecast.workshop.handing_over import arrays_of_estimator
 from hyperforecast.workshop.streams.salvage_yard import DELIVERIES, FAMILIES, salvage_yard_stream
 
 METHOD = "wa"
@@ -76,3 +83,16 @@ def _by_family(classifier, unseen):
     by_family = np.full(len(FAMILIES), np.nan)
     by_family[[FAMILIES.index(family) for family in seen]] = class_accuracies(unseen.y, classifier.predict(unseen.X))
     return by_family
+
+
+def write_trained_head(folder, *, seed):
+    """Write head.npz, a linear head that scikit-learn trained on the first delivery at base; return its path.
+
+    With the deliveries of the same seed beside it (`write_deliveries`) a device can start from it.
+    """
+    first = salvage_yard_stream(seed).training(0)
+    trained = make_pipeline(StandardScaler(), LogisticRegression(max_iter=1000)).fit(first.X, first.y)
+    written, path = io.BytesIO(), Path(folder) / "head.npz"
+    np.savez(written, **arrays_of_estimator(trained))
+    write_atomically(path, written.getvalue())
+    return path
