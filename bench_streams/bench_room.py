@@ -3,8 +3,8 @@
     OPENBLAS_NUM_THREADS=1 python bench_streams/bench_room.py --result bench_streams/bench_room.json
 
 Streams of many classes are learned with advised settings (forecasters that ship) by heads of 8, 16, 32 and 64 hidden
-units, each going its own way. What counts is how far a head stays behind that of 64 units on the same scoring rows. The
-rule in `hyperforecast.forecasting.waiting` (CROWDED) was read off this table.
+units, each going its own way. What counts is how far a head stays behind that of 64 units on the same scoring rows. This
+is what the rule in `hyperforecast.forecasting.waiting` (CROWDED) has to be held against.
 """
 
 import argparse

@@ -22,7 +22,8 @@ GAINED = {"ewc": 0.6, "lwf": 0.3, "icarl": 0.6, "wa": 1.4}
 FARTHEST = 2.0
 # Shares of the rows to collect at which the curve is told.
 STAGES = (0.0, 0.25, 0.5, 0.75, 1.0)
-# Classes for each hidden unit from which on a wider head does clearly better, see `bench_streams/bench_room.py`.
+# Classes for each hidden unit from which on a wider head is taken to do better: a plain rule that no committed result
+# backs yet; `bench_streams/bench_room.py` measures it.
 CROWDED = 2.0
 # Descriptors of the features themselves, and what it means that they lie above all that the records hold.
 DRIFT = {
@@ -207,8 +208,8 @@ def retraining_signs(advice):
     """Return why it is time to retrain at base, a list of lines; empty where nothing speaks for it.
 
     Features drift: a descriptor in `DRIFT` lies above the range of the records. Room: there are `CROWDED` times as many
-    classes as hidden units. That is a rule from measurements; forecasts for other widths of a head that exists are of
-    no use here, they tell a tenth of the difference.
+    classes as hidden units. That is a plain rule; forecasts for other widths of a head that exists tell too little of
+    the difference to be of use here.
     """
     ranges = advice.forecaster.familiarity
     highest = dict(zip(ranges.names.tolist(), ranges.high.tolist()))
